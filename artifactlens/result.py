@@ -1,0 +1,257 @@
+"""The one serialisable result: everything before builds it, everything after reads it."""
+
+from __future__ import annotations
+
+import dataclasses
+import json
+import math
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+from artifactlens.errors import ResultError
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+RESULT_VERSION = 1
+
+CAUTION = (
+    "artifactlens is a research and technical aid, not a medical device. A flag does not "
+    "exclude cerebral activity, and no flag does not mean clean. The interpreting "
+    "physician and the technologist decide, and local procedure rules."
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Contribution:
+    """What one feature adds to a flag's score.
+
+    ``value`` and ``usual`` are in ``unit``; ``usual`` is the median over the quiet epochs
+    of this recording. Both are None where the feature could not be measured.
+    """
+
+    feature: str
+    label: str
+    unit: str
+    value: float | None
+    usual: float | None
+    log_odds: float
+
+
+@dataclass(frozen=True, slots=True)
+class Flag:
+    """A segment that deserves a look.
+
+    ``onset``, ``duration`` and ``moment`` (where the driving trace is strongest) are in
+    seconds from the start of the recording. ``contributions`` are those of the strongest
+    epoch and site, largest absolute log-odds first; with ``base`` they add up to
+    ``score``, and ``probability`` is its logistic.
+    """
+
+    number: int
+    onset: float
+    duration: float
+    kind: str
+    sites: tuple[str, ...]
+    probability: float
+    score: float
+    base: float
+    strongest_site: str
+    moment: float
+    contributions: tuple[Contribution, ...]
+    look_alike: str
+    sentence: str
+
+    @property
+    def end(self) -> float:
+        """End of the segment, seconds."""
+        return self.onset + self.duration
+
+    @property
+    def driver(self) -> Contribution:
+        """The feature that speaks for the kind most strongly."""
+        return max(self.contributions, key=lambda part: part.log_odds)
+
+
+@dataclass(frozen=True, slots=True)
+class Assessment:
+    """Whether a kind can be judged in this recording: "yes", "limited" or "no"."""
+
+    kind: str
+    verdict: str
+    reason: str
+
+
+@dataclass(frozen=True, slots=True)
+class SiteEvidence:
+    """What was measured at one site over the recording.
+
+    ``site`` is the file's own spelling of the electrode; ``channel`` the full label of the
+    channel that carries it, None for sites solved from derivations and for the reference.
+    ``position`` is in metres, x to the right, y to the nose, z up, origin at the centre
+    of the head. ``share`` maps a kind to the share of judged epochs flagged (0 to 1), None
+    where the kind cannot be judged.
+    """
+
+    site: str
+    channel: str | None
+    canonical: str | None
+    role: str
+    position: tuple[float, float, float] | None
+    seconds_judged: float
+    share: dict[str, float | None]
+    pops_per_minute: float | None
+    mains_uv: float | None
+    mains_db: float | None
+    isolation_db: float | None
+    fault: str
+
+
+@dataclass(frozen=True, slots=True)
+class RecordingFacts:
+    """What is known of the recording, without anything that identifies a person.
+
+    Frequencies in hertz, times in seconds. ``gaps`` holds (onset, duration);
+    ``set_aside`` (channel label, reason); ``annotation_onsets`` the recording's own marks.
+    """
+
+    name: str
+    format: str
+    duration: float
+    sampling_rate: float
+    montage: str
+    high_pass: float | None
+    low_pass: float | None
+    notch: float | None
+    line_frequency: float | None
+    gaps: tuple[tuple[float, float], ...]
+    set_aside: tuple[tuple[str, str], ...]
+    annotation_onsets: tuple[float, ...]
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Scores:
+    """Calibrated probabilities, NaN where not assessable.
+
+    ``onset`` (n_epochs,) in seconds, ``probability`` float32
+    (n_kinds, n_epochs, n_sites).
+    """
+
+    kinds: tuple[str, ...]
+    onset: NDArray[np.float64]
+    sites: tuple[str, ...]
+    probability: NDArray[np.float32]
+
+
+@dataclass(frozen=True, slots=True)
+class Result:
+    """All that artifactlens says of one recording.
+
+    ``touched`` maps each kind, and "any", to the seconds under at least one flag.
+    ``scores`` is kept beside the JSON (in ``scores.npz``) and takes no part in equality.
+    """
+
+    tool_version: str
+    model_name: str
+    model_sha256: str
+    parameters: dict[str, str]
+    recording: RecordingFacts
+    assessable: tuple[Assessment, ...]
+    touched: dict[str, float]
+    flags: tuple[Flag, ...]
+    sites: tuple[SiteEvidence, ...]
+    scores: Scores | None = field(default=None, compare=False, repr=False)
+
+    def assessment(self, kind: str) -> Assessment:
+        """The assessment of one kind.
+
+        Raises
+        ------
+        KeyError
+            If ``kind`` is none of the four kinds.
+        """
+        return {entry.kind: entry for entry in self.assessable}[kind]
+
+    def to_json(self) -> str:
+        """Everything but the scores, as strict JSON (no NaN)."""
+        body = dataclasses.asdict(dataclasses.replace(self, scores=None))
+        del body["scores"]
+        return json.dumps(
+            {"result_version": RESULT_VERSION, "caution": CAUTION, **body},
+            indent=1,
+            ensure_ascii=False,
+            allow_nan=False,
+        )
+
+    @classmethod
+    def from_json(cls, text: str) -> Result:
+        """Read back what :meth:`to_json` wrote.
+
+        Raises
+        ------
+        ResultError
+            If the text is no result, or one of another version.
+        """
+        try:
+            body = json.loads(text)
+            version = body["result_version"]
+        except (json.JSONDecodeError, KeyError, TypeError) as error:
+            raise ResultError(
+                "A result needs JSON with a result_version; this text has none.",
+                "Give the result.json that artifactlens wrote.",
+            ) from error
+        if version != RESULT_VERSION:
+            raise ResultError(
+                f"This artifactlens reads results of version {RESULT_VERSION}; "
+                f"the file has version {version!r}.",
+                "Triage the recording again with this version.",
+            )
+        try:
+            return _result_from(body)
+        except (KeyError, TypeError) as error:
+            raise ResultError(
+                f"The result is damaged: {error!r} does not fit.",
+                "Triage the recording again.",
+            ) from error
+
+
+def _result_from(body: dict[str, Any]) -> Result:
+    facts = dict(body["recording"])
+    for name in ("gaps", "set_aside"):
+        facts[name] = tuple(tuple(pair) for pair in facts[name])
+    for name in ("annotation_onsets", "notes"):
+        facts[name] = tuple(facts[name])
+    flags = tuple(
+        Flag(
+            **{
+                **flag,
+                "sites": tuple(flag["sites"]),
+                "contributions": tuple(Contribution(**part) for part in flag["contributions"]),
+            }
+        )
+        for flag in body["flags"]
+    )
+    sites = tuple(
+        SiteEvidence(
+            **{**site, "position": None if site["position"] is None else tuple(site["position"])}
+        )
+        for site in body["sites"]
+    )
+    return Result(
+        tool_version=body["tool_version"],
+        model_name=body["model_name"],
+        model_sha256=body["model_sha256"],
+        parameters=body["parameters"],
+        recording=RecordingFacts(**facts),
+        assessable=tuple(Assessment(**entry) for entry in body["assessable"]),
+        touched=body["touched"],
+        flags=flags,
+        sites=sites,
+    )
+
+
+def finite_or_none(value: float) -> float | None:
+    """A float for JSON: None where it is NaN or infinite."""
+    return float(value) if math.isfinite(value) else None
