@@ -174,6 +174,19 @@ class Result:
         """
         return {entry.kind: entry for entry in self.assessable}[kind]
 
+    def flag_counts(self) -> dict[str, int]:
+        """Number of flags per kind."""
+        counts = {entry.kind: 0 for entry in self.assessable}
+        for flag in self.flags:
+            counts[flag.kind] += 1
+        return counts
+
+    def sites_flagged_most(self, kind: str, most: int) -> list[str]:
+        """At most ``most`` sites with a flagged share of the kind, highest share first."""
+        shares = [(site.share[kind] or 0.0, site.site) for site in self.sites]
+        shares.sort(key=lambda entry: -entry[0])
+        return [name for share, name in shares[:most] if share > 0]
+
     def to_json(self) -> str:
         """Everything but the scores, as strict JSON (no NaN)."""
         body = dataclasses.asdict(dataclasses.replace(self, scores=None))

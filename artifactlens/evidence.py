@@ -1,0 +1,210 @@
+"""Why a score is what it is: exact contributions, and a sentence a person can read."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.features import BY_NAME, FEATURE_NAMES
+from artifactlens.result import Contribution, finite_or_none
+
+if TYPE_CHECKING:
+    from artifactlens.curves import Model
+    from artifactlens.features import FeatureTable
+
+Cells = NDArray[np.intp]
+
+
+def explain(
+    model: Model,
+    kind: str,
+    table: FeatureTable,
+    usual: dict[str, NDArray[np.float32]],
+    epochs: Cells,
+    sites: Cells,
+) -> list[tuple[Contribution, ...]]:
+    """Contributions of all features at single cells, largest absolute log-odds first.
+
+    Parameters
+    ----------
+    model, kind
+        Whose score is explained.
+    table : FeatureTable
+    usual : dict of array, shape (n_sites,)
+        Each feature's value on the quiet epochs of this recording.
+    epochs, sites : array of int, shape (n_cells,)
+        The cells to explain.
+    """
+    measured = {
+        name: table.column(name)[epochs, sites].astype(np.float64) for name in FEATURE_NAMES
+    }
+    parts = model.contributions(kind, measured)
+    order = np.argsort(-np.abs(parts), axis=0, kind="stable")
+    explained = []
+    for cell in range(len(epochs)):
+        explained.append(
+            tuple(
+                Contribution(
+                    feature=FEATURE_NAMES[row],
+                    label=BY_NAME[FEATURE_NAMES[row]].label,
+                    unit=BY_NAME[FEATURE_NAMES[row]].unit,
+                    value=finite_or_none(measured[FEATURE_NAMES[row]][cell]),
+                    usual=finite_or_none(usual[FEATURE_NAMES[row]][sites[cell]]),
+                    log_odds=float(parts[row, cell]),
+                )
+                for row in order[:, cell]
+            )
+        )
+    return explained
+
+
+def quiet_values(
+    table: FeatureTable, quiet: NDArray[np.bool_]
+) -> dict[str, NDArray[np.float32]]:
+    """Median of every feature over the quiet cells of each site, (n_sites,) per feature.
+
+    ``quiet`` (n_epochs, n_sites) is true where no kind reaches its lower operating point; a
+    site without a quiet epoch falls back on all its epochs.
+    """
+    from artifactlens.features import USUAL_EPOCHS, median_over_epochs
+
+    stride = max(1, -(-len(quiet) // USUAL_EPOCHS))
+    chosen = quiet[::stride]
+    chosen = chosen | ~chosen.any(axis=0)
+    return {
+        name: median_over_epochs(np.where(chosen, table.column(name)[::stride], np.float32("nan")))
+        for name in FEATURE_NAMES
+    }
+
+
+def amount(value: float | None, unit: str, *, signed: bool = False) -> str:
+    """A measured value in words: three significant digits with its unit."""
+    if value is None:
+        return "not measurable"
+    text = f"{value:+.3g}" if signed else f"{value:.3g}"
+    if "e" in text:
+        text = f"{value:+.0f}" if signed else f"{value:.0f}"
+    return f"{text} {unit}".strip()
+
+
+def sentence(
+    kind: str,
+    sites: tuple[str, ...],
+    site: str,
+    values: dict[str, float | None],
+    parts: tuple[Contribution, ...],
+    *,
+    at_reference: bool,
+    line_frequency: float,
+    field_count: int,
+) -> str:
+    """One or two sentences: where, consistent with what, the measures, and the driver.
+
+    Parameters
+    ----------
+    kind : str
+    sites : tuple of str
+        All sites of the flag.
+    site : str
+        The strongest site; ``values`` and ``parts`` belong to it.
+    values : dict
+        Measured value of each feature at the strongest epoch and site.
+    parts : tuple of Contribution
+        Largest first.
+    at_reference : bool
+        Whether the strongest site is the recording's reference electrode.
+    line_frequency : float, hertz
+    field_count : int
+        Sites in the field, this one included.
+    """
+    where = _site_words(sites)
+    if at_reference:
+        what = {
+            "pop": "a pop of the reference electrode",
+            "mains": "mains picked up at the reference electrode",
+            "muscle": "muscle at the reference electrode",
+            "eye": "an eye movement reaching the reference electrode",
+        }[kind]
+        where = "Reference (the same shape in every referential channel)"
+        body = _measures(kind, site, values, line_frequency, field_count)
+    elif kind == "eye":
+        what, body = _eye_words(values, field_count)
+    else:
+        what = {
+            "muscle": "muscle activity",
+            "pop": "an electrode pop",
+            "mains": f"mains interference at {line_frequency:.3g} Hz",
+        }[kind]
+        body = _measures(kind, site, values, line_frequency, field_count)
+    driver = max(parts, key=lambda part: part.log_odds)
+    speaks_for = sum(part.log_odds for part in parts if part.log_odds > 0)
+    reason = (
+        f"{_capital(driver.label)} drove this mark ({driver.log_odds:+.1f} of {speaks_for:+.1f})"
+    )
+    signed = driver.feature.startswith("front_") and driver.unit == "uV"
+    if driver.value is not None:
+        reason += f": {amount(driver.value, driver.unit, signed=signed)}"
+        if driver.usual is not None and not BY_NAME[driver.feature].usual_of:
+            reason += f", usually {amount(driver.usual, driver.unit, signed=signed)} here"
+    return f"{where} - consistent with {what}: {body}. {reason}."
+
+
+def _site_words(sites: tuple[str, ...]) -> str:
+    if len(sites) <= 6:
+        return ", ".join(sites)
+    return f"{', '.join(sites[:5])} and {len(sites) - 5} more sites"
+
+
+def _capital(text: str) -> str:
+    return text[:1].upper() + text[1:]
+
+
+def _eye_words(values: dict[str, float | None], field_count: int) -> tuple[str, str]:
+    vertical, lateral = values["front_vertical"], values["front_lateral"]
+    field = f"field over {field_count} sites"
+    if lateral is not None and abs(lateral) > 1.2 * abs(vertical or 0.0):
+        side = "right" if lateral > 0 else "left"
+        return (
+            f"a gaze to the {side} (or the return from the other side)",
+            f"{lateral:+.0f} uV at the right temple against the left, {field}",
+        )
+    size = vertical or 0.0
+    what = "a blink or upward gaze" if size > 0 else "a downward gaze or the end of a blink"
+    return what, f"{size:+.0f} uV at the front against the sites behind, {field}"
+
+
+def _measures(
+    kind: str,
+    site: str,
+    values: dict[str, float | None],
+    line_frequency: float,
+    field_count: int,
+) -> str:
+    if kind == "muscle":
+        rise = values["fast_rise"]
+        words = f"spectral slope {amount(values['slope'], '')} at {site}"
+        if values["slope"] is None:
+            words = f"power at 18-30 Hz {amount(values['beta_power'], 'dB')} at {site}"
+        if rise is not None and rise > 1:
+            words += f", power at 30-45 Hz {rise:.0f} dB above its usual"
+        return words
+    if kind == "pop":
+        words = f"a step of {amount(values['step'], 'uV')} within 16 ms at {site}"
+        alone = values["step_alone"]
+        if alone is not None and alone > 3:
+            words += f", {10 ** (alone / 20):.0f} times that of its neighbours"
+        stays = values["step_stays"]
+        if stays is not None and stays > 0.2:
+            words += f", {100 * min(stays, 1.0):.0f} % of it still there 0.1 s later"
+        return words
+    if kind == "mains":
+        return (
+            f"{amount(values['mains_size'], 'uV')} at {line_frequency:.4g} Hz at {site}, "
+            f"{amount(values['mains_ratio'], 'dB')} over its flanks"
+        )
+    return (
+        f"{amount(values['front_vertical'], 'uV', signed=True)} at the front, "
+        f"field over {field_count} sites"
+    )

@@ -1,0 +1,252 @@
+"""Features of the field over the head: spread, isolation and frontal polarity."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+if TYPE_CHECKING:
+    from artifactlens.epochs import EpochBatch
+    from artifactlens.frames import Frame
+
+Array = NDArray[np.float32]
+
+SLOW_RATE = 50
+"""Samples a second of the smoothed traces on which fields are compared."""
+
+SPREAD_SHARE = 0.3
+"""A site takes part in a field if it follows with at least this share of its size."""
+
+EYE_POSITION_M = np.array([[-0.032, 0.078, -0.035], [0.032, 0.078, -0.035]])
+"""Centres of the eyes, origin at the centre of the head sphere (anatomical, rounded)."""
+
+HEAD_RADIUS_M = 0.095
+
+
+@dataclass(frozen=True, slots=True)
+class EyeLeads:
+    """Which sites see the eyes, from real positions.
+
+    ``front``, ``behind``, ``left`` and ``right`` are boolean masks (n_sites,);
+    ``maps`` (2, n_sites) is the field of a vertical and of a lateral turn of the eyes,
+    NaN without position. ``front_row`` says in words which frontal sites serve.
+    """
+
+    front: NDArray[np.bool_]
+    behind: NDArray[np.bool_]
+    left: NDArray[np.bool_]
+    right: NDArray[np.bool_]
+    maps: NDArray[np.float64]
+    front_row: str
+
+
+def eye_leads(frame: Frame) -> EyeLeads:
+    """Choose the sites that stand for the eyes, by direction from the head's centre.
+
+    Frontal poles lie within about 40 degrees of straight ahead; where there are none, the
+    row behind serves. The maps are those of current dipoles at both eyes in an unbounded
+    medium, V = p.r/r^3: up and a little forward, and to the right.
+    """
+    distance = np.linalg.norm(frame.positions, axis=1)
+    with np.errstate(invalid="ignore"):
+        x, y, _ = (frame.positions / distance[:, None]).T
+        scalp = np.isfinite(distance) & (np.array(frame.roles) != "reference")
+        poles = scalp & (y >= 0.75)
+        row = "frontal poles"
+        if not poles.any():
+            poles, row = scalp & (y >= 0.5), "frontal sites"
+        behind = scalp & (y <= -0.3)
+        if not behind.any():
+            behind = scalp & (y <= 0.05) & (np.abs(x) < 0.9)
+        left, right = scalp & (x <= -0.6) & (y >= 0.3), scalp & (x >= 0.6) & (y >= 0.3)
+    where = frame.positions / distance[:, None] * HEAD_RADIUS_M
+    away = where[None] - EYE_POSITION_M[:, None]
+    cube = np.linalg.norm(away, axis=2) ** 3
+    moments = np.array([[0.0, 0.5, 0.87], [1.0, 0.0, 0.0]])
+    maps = np.einsum("mk,esk->ms", moments, away / cube[:, :, None])
+    return EyeLeads(poles, behind, left, right, maps / 1000, row)
+
+
+def slow_traces(batch: EpochBatch) -> Array:
+    """Site potentials smoothed to about 50 samples a second by block means.
+
+    Returns
+    -------
+    array, shape (n_sites, n_epochs + 2, n_slow), microvolt, context epochs included
+    """
+    n = batch.n_samples
+    width = max(1, n // SLOW_RATE)
+    count = n // width
+    average = np.zeros((n, count), dtype=np.float32)
+    average[np.arange(count * width), np.repeat(np.arange(count), width)] = 1 / width
+    return batch.windows(batch.starts, n) @ average
+
+
+def field_covariance(slow: Array) -> Array:
+    """Covariance between sites within each epoch, shape (n_epochs, n_sites, n_sites), uV^2."""
+    own = slow[:, 1:-1].transpose(1, 0, 2)
+    own = own - own.mean(axis=2, keepdims=True)
+    return own @ own.transpose(0, 2, 1) / np.float32(own.shape[2])
+
+
+def field_spread(covariance: Array) -> Array:
+    """Share of the other sites that follow with at least 0.3 of the site's size.
+
+    Regression of each other site on this one: cov / var. One electrode alone gives 0.
+
+    Returns
+    -------
+    array, shape (n_sites, n_epochs), 0..1; NaN where the site has no variance
+    """
+    variance = np.einsum("ess->es", covariance)
+    n_sites = variance.shape[1]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        follow = np.abs(covariance) / variance[:, :, None] >= SPREAD_SHARE
+        share = (follow.sum(axis=2) - 1) / np.float32(max(1, n_sites - 1))
+    return np.where(variance > 0, share, np.float32(np.nan)).T.astype(np.float32)
+
+
+def isolation(covariance: Array, neighbours: Array) -> Array:
+    r"""What a site shows that its neighbours do not.
+
+    :math:`10 \log_{10} (1 - \max(0, r)^2)` with *r* the correlation between the site and
+    the weighted mean of its neighbours: 0 dB when they share nothing, -10 dB when nine
+    tenths of the power is shared. Activity at one electrode alone is artifact until proven
+    otherwise: a presumption, not proof.
+
+    Returns
+    -------
+    array, shape (n_sites, n_epochs), decibel, -30..0
+    """
+    toward = covariance @ neighbours.T
+    shared = np.einsum("ess->es", toward)
+    mean_power = np.einsum("st,ets->es", neighbours, toward)
+    variance = np.einsum("ess->es", covariance)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        r = shared / np.sqrt(variance * mean_power)
+    alone = 1 - np.clip(np.where(np.isfinite(r), r, 0), 0, 1) ** 2
+    decibel = 10 * np.log10(np.maximum(alone, np.float32(1e-3)))
+    return np.where(variance > 0, decibel, np.float32(np.nan)).T.astype(np.float32)
+
+
+@dataclass(frozen=True, slots=True)
+class FrontalPolarity:
+    """What the sites near the eyes do, epoch by epoch.
+
+    ``vertical`` and ``lateral`` (n_epochs,) signed microvolt: the largest departure, within
+    the epoch, of the frontal poles from the sites behind, and of the right from the left
+    temple, from their median over three seconds. ``at`` (n_epochs,) its place within the
+    epoch, 0..1. ``rhythm`` (n_epochs,) the highest autocorrelation between 0.3 and 0.6 s.
+    ``reach`` (n_sites, n_epochs) microvolt: how far the site moves at that moment against
+    the sites behind. ``match`` (n_epochs,) 0..1: share of the field at that moment that the
+    two eye maps explain.
+    """
+
+    vertical: Array
+    lateral: Array
+    at: Array
+    rhythm: Array
+    reach: Array
+    match: Array
+
+
+def frontal_polarity(slow: Array, ok: NDArray[np.bool_], leads: EyeLeads) -> FrontalPolarity:
+    """Measure the eye deflections of each epoch; see :class:`FrontalPolarity`.
+
+    Parameters
+    ----------
+    slow : array, shape (n_sites, n_epochs + 2, n_slow), microvolt
+    ok : array, shape (n_sites, n_epochs + 2), bool
+    leads : EyeLeads
+
+    Notes
+    -----
+    Cornea positive: a blink or upward gaze makes the frontal poles positive, gaze to the
+    right makes F8 positive and F7 negative (Picton et al. 2000).
+    """
+    behind = _group_mean(slow, ok, leads.behind)
+    vertical = _group_mean(slow, ok, leads.front) - behind
+    lateral = _group_mean(slow, ok, leads.right) - _group_mean(slow, ok, leads.left)
+    v_size, v_at = _departure(vertical)
+    h_size, h_at = _departure(lateral)
+    sideways = np.nan_to_num(np.abs(h_size)) > np.nan_to_num(np.abs(v_size))
+    at = np.where(sideways, h_at, v_at)
+
+    against = slow - np.where(np.isfinite(behind), behind, 0)
+    three = _three_seconds(against)
+    usual = np.median(three, axis=2)
+    epochs = np.arange(slow.shape[1] - 2)
+    departure = against[:, epochs + 1, at] - usual
+    departure = np.where(ok[:, 1:-1], departure, np.float32(np.nan))
+    return FrontalPolarity(
+        vertical=v_size,
+        lateral=h_size,
+        at=(at / np.float32(slow.shape[2])).astype(np.float32),
+        rhythm=_rhythm(_three_seconds(vertical[None])[0]),
+        reach=np.abs(departure),
+        match=_map_match(departure, leads.maps),
+    )
+
+
+def _group_mean(slow: Array, ok: NDArray[np.bool_], group: NDArray[np.bool_]) -> Array:
+    weight = (ok & group[:, None]).astype(np.float32)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        mean = np.einsum("se,sem->em", weight, slow) / weight.sum(axis=0)[:, None]
+    return mean.astype(np.float32)
+
+
+def _three_seconds(signal: Array) -> Array:
+    """(rows, n_epochs + 2, m) to (rows, n_epochs, 3 m): each epoch with its neighbours."""
+    return np.concatenate([signal[:, :-2], signal[:, 1:-1], signal[:, 2:]], axis=2)
+
+
+def _departure(trace: Array) -> tuple[Array, NDArray[np.intp]]:
+    usual = np.median(_three_seconds(trace[None])[0], axis=1)
+    away = trace[1:-1] - usual[:, None]
+    at = np.nan_to_num(np.abs(away)).argmax(axis=1)
+    return away[np.arange(len(away)), at], at
+
+
+def _rhythm(three: Array) -> Array:
+    """Highest normalised autocorrelation between lags of 0.3 and 0.6 s."""
+    centred = three - three.mean(axis=1, keepdims=True)
+    length = centred.shape[1]
+    per_second = length / 3
+    lags = np.unique(np.rint(np.linspace(0.3, 0.6, 16) * per_second).astype(int))
+    power = np.einsum("et,et->e", centred, centred)
+    values = np.stack(
+        [np.einsum("et,et->e", centred[:, lag:], centred[:, : length - lag]) for lag in lags]
+    )
+    with np.errstate(divide="ignore", invalid="ignore"):
+        best = np.asarray(values.max(axis=0) / power)
+    return np.where(power > 0, best, np.float32(np.nan)).astype(np.float32)
+
+
+def _map_match(departure: Array, maps: NDArray[np.float64]) -> Array:
+    """Share of the field's variance over the sites that two eye maps explain."""
+    known = np.isfinite(maps).all(axis=0)
+    n_epochs = departure.shape[1]
+    if known.sum() < 4:
+        return np.full(n_epochs, np.nan, dtype=np.float32)
+    field = departure[known].T.astype(np.float64)
+    there = np.isfinite(field)
+    field = np.where(there, field, 0)
+    count = np.maximum(there.sum(axis=1, keepdims=True), 1)
+    field = np.where(there, field - field.sum(axis=1, keepdims=True) / count, 0)
+    templates = maps[:, known][None] * there[:, None]
+    templates = np.where(
+        there[:, None], templates - templates.sum(axis=2, keepdims=True) / count[:, :, None], 0
+    )
+    gram = templates @ templates.transpose(0, 2, 1)
+    ridge = 1e-9 * np.trace(gram, axis1=1, axis2=2) + 1e-30
+    gram += ridge[:, None, None] * np.eye(2)
+    moment = np.einsum("ems,es->em", templates, field)
+    fitted = np.linalg.solve(gram, moment[:, :, None])[:, :, 0]
+    power = np.einsum("es,es->e", field, field)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        share = np.einsum("em,em->e", fitted, moment) / power
+    enough = (there.sum(axis=1) >= 4) & (power > 0)
+    return np.where(enough, np.clip(share, 0, 1), np.nan).astype(np.float32)

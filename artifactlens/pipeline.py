@@ -1,0 +1,274 @@
+"""The main job: one recording in, one result out, and its folder of outputs."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from artifactlens import __version__
+from artifactlens.assessable import assess
+from artifactlens.curves import Model, load_model
+from artifactlens.epochs import BATCH_EPOCHS, EpochGrid, batches, epoch_grid
+from artifactlens.errors import RecordingError
+from artifactlens.features import FeatureTable, feature_table, mains_is_carried, measure
+from artifactlens.features.spatial import EyeLeads, eye_leads
+from artifactlens.frames import Frame, build_frame
+from artifactlens.kinds import KIND_NAMES
+from artifactlens.recording import Recording, from_raw, open_recording
+from artifactlens.result import RecordingFacts, Result, Scores
+from artifactlens.sitecare import site_evidence
+from artifactlens.survey import PLAUSIBLE_UV, Conditions, survey
+from artifactlens.triage import judge, make_flags, touched_seconds
+
+if TYPE_CHECKING:
+    import mne
+    from numpy.typing import NDArray
+
+Progress = Callable[[int, int], None]
+"""Called with seconds done and seconds in all."""
+
+CLOSEUPS = 60
+
+
+@dataclass(frozen=True, slots=True)
+class Measured:
+    """Everything measured on a recording before any model is asked."""
+
+    recording: Recording
+    frame: Frame
+    leads: EyeLeads
+    conditions: Conditions
+    grid: EpochGrid
+    table: FeatureTable
+    faults: dict[str, NDArray[np.float64]]
+
+
+def measure_recording(
+    recording: Recording,
+    *,
+    line_frequency: float | None = None,
+    batch_epochs: int = BATCH_EPOCHS,
+    progress: Progress | None = None,
+) -> Measured:
+    """Resolve the sites, survey the recording and measure all features in one pass.
+
+    Parameters
+    ----------
+    recording : Recording
+    line_frequency : float, optional
+        50 or 60 hertz if known; found by itself otherwise.
+    batch_epochs : int
+        Epochs held in memory at a time; no result depends on it.
+    progress : callable, optional
+
+    Raises
+    ------
+    RecordingError, SitesError
+        If there is no whole second to judge, no signal, or no electrode site.
+    """
+    frame = build_frame(recording.labels, recording.types, recording.positions)
+    grid = epoch_grid(recording)
+    if not len(grid):
+        raise RecordingError(
+            f"At least one whole second of signal is needed; {recording.name} has "
+            f"{recording.n_samples} samples at {recording.sampling_rate:g} Hz.",
+            "Check that the recording was exported completely.",
+        )
+    conditions = survey(recording, frame, line_frequency)
+    if conditions.average_reference and frame.montage == "referential":
+        frame = build_frame(
+            recording.labels, recording.types, recording.positions, measured_average=True
+        )
+    leads = eye_leads(frame)
+    parts = []
+    counts = {name: np.zeros(len(frame.channels)) for name in ("flat", "missing", "clipped")}
+    for batch in batches(recording, frame, grid, batch_epochs):
+        parts.append(measure(batch, frame, leads, conditions))
+        for name, count in counts.items():
+            count += getattr(batch, name).sum(axis=1)
+        if progress is not None:
+            progress(batch.first + len(batch), len(grid))
+    table = feature_table(parts)
+    if not np.isfinite(table.values).any():
+        cause = "flat" if counts["flat"].sum() >= counts["missing"].sum() else "missing (NaN)"
+        raise RecordingError(
+            f"A signal is needed on at least two EEG channels; in {recording.name} all "
+            f"{len(frame.channels)} are {cause}.",
+            "Check the export and the unit of the channels.",
+        )
+    faults = {name: count / len(grid) for name, count in counts.items()}
+    return Measured(recording, frame, leads, conditions, grid, table, faults)
+
+
+def conclude(
+    measured: Measured, model: Model, *, mark: str, line_frequency: float | None
+) -> Result:
+    """Judge what was measured and put the result together."""
+    recording, frame, conditions = measured.recording, measured.frame, measured.conditions
+    amplitude = conditions.amplitude_uv
+    implausible = not PLAUSIBLE_UV[0] <= amplitude <= PLAUSIBLE_UV[1]
+    assessable = assess(
+        frame, measured.leads, conditions, float(len(measured.grid)), implausible
+    )
+    judgement = judge(model, measured.table, assessable)
+    end = recording.duration
+    flags = make_flags(
+        model, judgement, measured.table, measured.grid, frame, conditions, mark, end
+    )
+    sites = site_evidence(
+        model,
+        judgement,
+        measured.table,
+        frame,
+        assessable,
+        flags,
+        measured.faults,
+        mark,
+    )
+    notes = [*recording.notes, *frame.notes]
+    if implausible:
+        notes.append(unit_note(amplitude))
+    return Result(
+        tool_version=__version__,
+        model_name=model.name,
+        model_sha256=model.sha256,
+        parameters={
+            "mark": mark,
+            "line_frequency": f"{line_frequency:g}" if line_frequency else "auto",
+        },
+        recording=_facts(measured, tuple(notes)),
+        assessable=assessable,
+        touched=touched_seconds(flags, end),
+        flags=flags,
+        sites=sites,
+        scores=Scores(
+            kinds=KIND_NAMES,
+            onset=measured.grid.onset,
+            sites=frame.sites,
+            probability=judgement.probability,
+        ),
+    )
+
+
+def unit_note(amplitude_uv: float) -> str:
+    """Say that the amplitudes cannot be those of scalp EEG and which unit would fit."""
+    low, high = PLAUSIBLE_UV
+    fits = [
+        unit
+        for unit, factor in (("V", 1e6), ("mV", 1e3), ("nV", 1e-3))
+        if low <= amplitude_uv * factor <= high
+    ]
+    advice = (
+        f"the values would fit scalp EEG if they were in {fits[0]}"
+        if fits
+        else "no usual unit would make them fit"
+    )
+    return (
+        f"The median amplitude is {amplitude_uv:.3g} uV, where scalp EEG has {low:g} to "
+        f"{high:g} uV: {advice}. Check the unit in the header; nothing was rescaled."
+    )
+
+
+def _facts(measured: Measured, notes: tuple[str, ...]) -> RecordingFacts:
+    recording, conditions = measured.recording, measured.conditions
+    rate = recording.sampling_rate
+    ends = [segment.onset + segment.n_samples / rate for segment in recording.segments]
+    gaps = tuple(
+        (round(end, 3), round(segment.onset - end, 3))
+        for end, segment in zip(ends[:-1], recording.segments[1:], strict=True)
+        if segment.onset - end > 0.5 / rate
+    )
+    return RecordingFacts(
+        name=recording.name,
+        format=recording.format,
+        duration=round(recording.duration, 3),
+        sampling_rate=rate,
+        montage=measured.frame.montage,
+        high_pass=conditions.high_pass,
+        low_pass=None if conditions.low_pass_source == "sampling rate" else conditions.low_pass,
+        notch=conditions.notch,
+        line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
+        gaps=gaps,
+        set_aside=(*recording.set_aside, *measured.frame.set_aside),
+        annotation_onsets=tuple(round(entry[0], 3) for entry in recording.annotations),
+        notes=notes,
+    )
+
+
+def triage(
+    source: str | Path | Recording | mne.io.BaseRaw,
+    *,
+    mark: str = "sure",
+    line_frequency: float | None = None,
+    progress: Progress | None = None,
+) -> Result:
+    """Triage one recording; nothing is written.
+
+    Parameters
+    ----------
+    source : path, mne.io.Raw or Recording
+    mark : str
+        "sure" marks little and surely, "doubtful" all that is doubtful.
+    line_frequency : float, optional
+        50 or 60 hertz if known; found by itself otherwise.
+    progress : callable, optional
+        Called with seconds done and seconds in all.
+    """
+    measured = measure_recording(
+        _as_recording(source), line_frequency=line_frequency, progress=progress
+    )
+    return conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
+
+
+def _as_recording(source: str | Path | Recording | mne.io.BaseRaw) -> Recording:
+    if isinstance(source, Recording):
+        return source
+    if isinstance(source, str | Path):
+        return open_recording(source)
+    return from_raw(source)
+
+
+def default_folder(path: Path) -> Path:
+    """``x.triage`` beside ``x.edf``."""
+    return path.with_name(f"{path.stem}.triage")
+
+
+def triage_to_folder(
+    path: str | Path,
+    folder: Path | None = None,
+    *,
+    mark: str = "sure",
+    line_frequency: float | None = None,
+    progress: Progress | None = None,
+) -> tuple[Result, Path]:
+    """Triage a file and write all outputs; the recording itself is only read.
+
+    Raises
+    ------
+    ArtifactlensError
+        With what was needed, what was given and what to do; nothing is written half.
+    """
+    from artifactlens.closeups import closeup
+    from artifactlens.export.atomic import probe_folder
+    from artifactlens.export.folder import write_all
+    from artifactlens.page.need import by_need
+    from artifactlens.page.report import report_html
+
+    recording = open_recording(path)
+    target = folder or default_folder(Path(path))
+    probe_folder(target)
+    measured = measure_recording(
+        recording, line_frequency=line_frequency, progress=progress
+    )
+    result = conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
+    frame = measured.frame
+    chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
+    traces = [cut for flag, _ in chosen if (cut := closeup(recording, frame, flag)) is not None]
+    write_all(
+        result, target, start=recording.start, report_html=report_html(result, traces)
+    )
+    return result, target

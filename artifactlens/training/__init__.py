@@ -1,0 +1,1 @@
+"""Making the model: never imported by the pipeline."""

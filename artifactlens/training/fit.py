@@ -1,0 +1,211 @@
+"""Fit, calibrate and set the operating points of the four heads."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.features import FEATURE_NAMES
+from artifactlens.kinds import KIND_NAMES
+from artifactlens.training.compilation import Compiled, compile_forest
+from artifactlens.training.examples import CLEAN, PRESENT, Examples
+
+if TYPE_CHECKING:
+    from sklearn.ensemble import HistGradientBoostingClassifier
+
+HEAD_FEATURES: dict[str, tuple[str, ...]] = {
+    "eye": (
+        "swing", "swing_rise", "step_crest", "slow_power", "fast_share", "spread", "isolation",
+        "front_vertical", "front_lateral", "front_rise", "front_rhythm", "eye_reach",
+        "eye_match",
+    ),
+    "muscle": (
+        "step_crest", "beta_power", "beta_rise", "fast_power", "fast_rise", "fast_alone",
+        "high_power", "high_rise", "slope", "fast_share", "beta_peak", "isolation",
+        "mains_ratio",
+    ),
+    "pop": (
+        "swing", "swing_rise", "step", "step_rise", "step_crest", "step_alone", "step_stays",
+        "slow_power", "slope", "fast_share", "spread", "isolation", "fast_rise",
+    ),
+    "mains": ("mains_ratio", "mains_size", "mains_harmonic", "fast_power", "high_power"),
+}  # fmt: skip
+"""A head sees only what its kind acts on: what else differs in training is chance."""
+
+RISING: dict[str, tuple[str, ...]] = {
+    "eye": ("eye_reach", "eye_match"),
+    "muscle": ("slope", "fast_share", "fast_rise", "high_rise", "beta_rise"),
+    "pop": ("step_rise", "step_crest", "step_alone"),
+    "mains": ("mains_ratio", "mains_size", "mains_harmonic"),
+}
+"""Features of which more can only speak for the kind: the curve must not fall."""
+
+SURE_SPECIFICITY = 0.999
+DOUBTFUL_SPECIFICITY = 0.98
+"""Share of clean validation seconds that stay unmarked at every site."""
+
+LEAST_SURE, LEAST_DOUBTFUL = 0.5, 0.2
+
+
+@dataclass(frozen=True, slots=True)
+class FittedHead:
+    """One head before it is written: curves, calibration and operating points."""
+
+    kind: str
+    compiled: Compiled
+    slope: float
+    offset: float
+    sure: float
+    doubtful: float
+
+    def probability(self, features: NDArray[np.floating]) -> NDArray[np.float64]:
+        """Calibrated probability of rows in the order of ``FEATURE_NAMES``."""
+        from artifactlens.curves import logistic
+
+        return logistic(self.offset + self.slope * self.compiled.decision(features))
+
+
+def fit_forest(
+    kind: str,
+    examples: Examples,
+    *,
+    interactions: bool = False,
+    leave_out: frozenset[str] = frozenset(),
+    seed: int = 0,
+) -> tuple[HistGradientBoostingClassifier, NDArray[np.intp]]:
+    """Boosted forest of one kind; returns it with the columns that it sees.
+
+    ``interactions`` lets a tree use several features: the comparison, never shipped.
+    """
+    from sklearn.ensemble import HistGradientBoostingClassifier
+
+    names = [name for name in HEAD_FEATURES[kind] if name not in leave_out]
+    columns = np.array([FEATURE_NAMES.index(name) for name in names])
+    truth = examples.truth[:, KIND_NAMES.index(kind)]
+    known = truth >= 0
+    forest = HistGradientBoostingClassifier(
+        learning_rate=0.08,
+        max_iter=300,
+        max_leaf_nodes=8,
+        min_samples_leaf=60,
+        l2_regularization=5.0,
+        max_bins=128,
+        early_stopping=False,
+        random_state=seed,
+        interaction_cst=None if interactions else "no_interactions",
+        monotonic_cst=[int(name in RISING[kind]) for name in names],
+    )
+    forest.fit(
+        examples.features[known][:, columns].astype(np.float64),
+        truth[known],
+        sample_weight=row_weights(examples, known),
+    )
+    return forest, columns
+
+
+def row_weights(examples: Examples, known: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """Every origin counts by the square root of its rows, so that none drowns another."""
+    origin = examples.origin[known]
+    names, place, count = np.unique(origin, return_inverse=True, return_counts=True)
+    weight = np.sqrt(count.max() / count)
+    return np.asarray(weight[place] if len(names) > 1 else np.ones(len(origin)))
+
+
+def fit_head(kind: str, training: Examples, validation: Examples, seed: int = 0) -> FittedHead:
+    """Fit on training people, calibrate and set operating points on validation people."""
+    forest, columns = fit_forest(kind, training, seed=seed)
+    check = np.concatenate([training.features[::7], validation.features[::7]])[:, columns]
+    compiled = compile_forest(forest, _with_missing(check))
+    compiled = Compiled(
+        compiled.base, {int(columns[k]): curve for k, curve in compiled.curves.items()}
+    )
+    truth = validation.truth[:, KIND_NAMES.index(kind)]
+    decision = compiled.decision(validation.features)
+    slope, offset = calibrate(decision[truth >= 0], truth[truth >= 0])
+    head = FittedHead(kind, compiled, slope, offset, 0.5, 0.5)
+    probability = head.probability(validation.features)
+    worst = clean_seconds(validation, kind, probability)
+    sure = _threshold(worst, SURE_SPECIFICITY, LEAST_SURE)
+    doubtful = min(_threshold(worst, DOUBTFUL_SPECIFICITY, LEAST_DOUBTFUL), sure)
+    return FittedHead(kind, compiled, slope, offset, sure, doubtful)
+
+
+def _with_missing(rows: NDArray[np.floating]) -> NDArray[np.float64]:
+    """Rows plus copies with one feature missing in turn: NaN must compile exactly too."""
+    copies = rows[: 20 * rows.shape[1]].astype(np.float64)
+    index = np.arange(len(copies))
+    copies[index, index % rows.shape[1]] = np.nan
+    return np.concatenate([rows.astype(np.float64), copies])
+
+
+def calibrate(decision: NDArray[np.float64], truth: NDArray[np.int8]) -> tuple[float, float]:
+    """Slope and offset of a logistic fit to held-out scores (Platt 1999).
+
+    Platt's smoothed targets keep the slope finite where both classes separate.
+    """
+    from scipy.optimize import minimize
+
+    n_present, n_clean = int((truth == PRESENT).sum()), int((truth == CLEAN).sum())
+    target = np.where(
+        truth == PRESENT, (n_present + 1) / (n_present + 2), 1 / (n_clean + 2)
+    )
+
+    def loss(parameters: NDArray[np.float64]) -> float:
+        score = parameters[0] * decision + parameters[1]
+        return float(np.mean(np.logaddexp(0, score) - target * score))
+
+    fitted = minimize(loss, np.array([1.0, 0.0]), method="Nelder-Mead", options={"xatol": 1e-6, "fatol": 1e-10, "maxiter": 2000})
+    slope, offset = (float(value) for value in fitted.x)
+    return max(slope, 1e-3), offset
+
+
+def clean_seconds(
+    examples: Examples, kind: str, probability: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Highest probability over the sites of every second that is clean of the kind."""
+    truth = examples.truth[:, KIND_NAMES.index(kind)]
+    order = np.argsort(examples.second, kind="stable")
+    _, starts = np.unique(examples.second[order], return_index=True)
+    clean = np.minimum.reduceat((truth == CLEAN)[order], starts)
+    highest = np.maximum.reduceat(probability[order], starts)
+    return np.asarray(highest[clean])
+
+
+def _threshold(worst: NDArray[np.float64], specificity: float, least: float) -> float:
+    limit = float(np.quantile(worst, specificity)) if len(worst) else 0.5
+    return float(np.clip(limit + 1e-6, least, 0.999))
+
+
+def model_body(
+    heads: list[FittedHead], name: str, training: dict[str, Any]
+) -> dict[str, Any]:
+    """The model as plain JSON values; floats keep every digit."""
+    from artifactlens.curves import MODEL_VERSION
+    from artifactlens.features import feature_table_sha256
+
+    return {
+        "model_version": MODEL_VERSION,
+        "name": name,
+        "feature_table_sha256": feature_table_sha256(),
+        "training": training,
+        "heads": {
+            head.kind: {
+                "base": head.compiled.base,
+                "calibration": {"slope": head.slope, "offset": head.offset},
+                "sure": head.sure,
+                "doubtful": head.doubtful,
+                "curves": {
+                    FEATURE_NAMES[column]: {
+                        "edges": curve.edges.tolist(),
+                        "values": curve.values.tolist(),
+                        "missing": curve.missing,
+                    }
+                    for column, curve in head.compiled.curves.items()
+                },
+            }
+            for head in heads
+        },
+    }
