@@ -55,7 +55,9 @@ def assess(
             ("limited", f"only {seconds:g} s: too short to know what is usual here")
         )
     if units_implausible:
-        general.append(("limited", "the amplitudes are not those of scalp EEG in microvolt"))
+        general.append(
+            ("limited", "the amplitudes are not those of scalp EEG in microvolt")
+        )
     return tuple(_summary(kind, findings[kind] + general) for kind in KIND_NAMES)
 
 
@@ -63,7 +65,9 @@ def _summary(kind: str, found: list[tuple[str, str]]) -> Assessment:
     if not found:
         return Assessment(kind, "yes", "")
     verdict = max((entry[0] for entry in found), key=_WORST.__getitem__)
-    reasons = [reason for severity, reason in found if severity == verdict or verdict != "no"]
+    reasons = [
+        reason for severity, reason in found if severity == verdict or verdict != "no"
+    ]
     return Assessment(kind, verdict, "; ".join(reasons))
 
 
@@ -106,10 +110,15 @@ def _pop(frame: Frame, conditions: Conditions, n_sites: int) -> list[tuple[str, 
     found = []
     if conditions.sampling_rate < POP_LEAST_RATE:
         found.append(
-            ("no", f"sampled at {conditions.sampling_rate:g} Hz: too slow to see a steep rise")
+            (
+                "no",
+                f"sampled at {conditions.sampling_rate:g} Hz: too slow to see a steep rise",
+            )
         )
     if n_sites < FEW_SITES:
-        found.append(("limited", f"only {n_sites} sites: one electrode cannot be told alone"))
+        found.append(
+            ("limited", f"only {n_sites} sites: one electrode cannot be told alone")
+        )
     if not np.isfinite(frame.positions).any():
         found.append(("limited", "no site positions: all other sites serve as neighbours"))
     return found

@@ -16,7 +16,9 @@ if TYPE_CHECKING:
     from artifactlens.pipeline import Progress
     from artifactlens.result import Result
 
-EXIT_HELP = "Exit codes: 0 done; 1 some recording failed, the others are done; 2 wrong usage."
+EXIT_HELP = (
+    "Exit codes: 0 done; 1 some recording failed, the others are done; 2 wrong usage."
+)
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]}, epilog=EXIT_HELP)
@@ -72,13 +74,18 @@ def triage(
     the recording (x_marks.edf), the report (report.html) and the rest. Reads EDF, EDF+,
     BDF, BrainVision, EEGLAB, FIF and other formats that mne reads.
     """
-    reports = _triage_all([Path(name) for name in recordings], out, mark, line_frequency, quiet)
+    reports = _triage_all(
+        [Path(name) for name in recordings], out, mark, line_frequency, quiet
+    )
     _finish(reports, quiet, as_json)
 
 
 @main.command(epilog=EXIT_HELP)
 @click.argument(
-    "folder", required=False, type=click.Path(path_type=Path), default=Path("artifactlens-demo")
+    "folder",
+    required=False,
+    type=click.Path(path_type=Path),
+    default=Path("artifactlens-demo"),
 )
 @_MARK
 @_QUIET
@@ -115,7 +122,9 @@ def _triage_all(
     line = None if line_frequency == "auto" else float(line_frequency)
     with _progress(len(paths), quiet) as step:
         for path in paths:
-            folder = default_folder(path) if out is None else out / default_folder(path).name
+            folder = (
+                default_folder(path) if out is None else out / default_folder(path).name
+            )
             if folder.absolute() in taken:
                 first = taken[folder.absolute()]
                 reports.append(
@@ -133,7 +142,7 @@ def _triage_all(
                 )
             except ArtifactlensError as error:
                 reports.append(_failure(path, error.problem, error.remedy))
-            except Exception as error:  # noqa: BLE001 - one recording must not cost the others
+            except Exception as error:
                 reports.append(
                     _failure(
                         path,
@@ -171,10 +180,13 @@ def _finish(reports: list[dict[str, Any]], quiet: bool, as_json: bool) -> None:
         if len(failed) < len(reports):
             click.echo(CAUTION)
     for report in failed:
-        click.echo(f"{report['recording']}: {report['problem']} {report['remedy']}", err=True)
+        click.echo(
+            f"{report['recording']}: {report['problem']} {report['remedy']}", err=True
+        )
     if len(reports) > 1 and failed:
         click.echo(
-            f"{len(failed)} of {len(reports)} recordings failed; the others are done.", err=True
+            f"{len(failed)} of {len(reports)} recordings failed; the others are done.",
+            err=True,
         )
     raise SystemExit(1 if failed else 0)
 
@@ -253,7 +265,8 @@ def _progress(count: int, quiet: bool) -> Iterator[Any]:
         yield lambda name: None
         return
     from rich.console import Console
-    from rich.progress import BarColumn, Progress as Bar, TextColumn, TimeRemainingColumn
+    from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
+    from rich.progress import Progress as Bar
 
     with Bar(
         TextColumn("{task.description}"),

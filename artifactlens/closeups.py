@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import finite_rows
 from artifactlens.page.traces import TraceWindow
 
 if TYPE_CHECKING:
@@ -57,11 +58,11 @@ def closeup(recording: Recording, frame: Frame, flag: Flag) -> TraceWindow | Non
         segment.start + segment.n_samples, round((high + MARGIN_SECONDS) * rate) + shift
     )
     data = recording.read(first, stop)[frame.channels]
-    good = np.isfinite(data).all(axis=1)
+    good = finite_rows(data)
     if stop - first < 8 or not good.any():
         return None
     matrix = frame.matrix(good)
-    solvable = np.isfinite(matrix).all(axis=1)
+    solvable = finite_rows(matrix)
     sites = np.where(solvable[:, None], matrix, np.float32(0)) @ np.where(
         good[:, None], data, np.float32(0)
     )
@@ -69,7 +70,10 @@ def closeup(recording: Recording, frame: Frame, flag: Flag) -> TraceWindow | Non
     if not labels:
         return None
     shown_first = max(first, round(low * rate) + shift)
-    shown = slice(shown_first - first, max(shown_first - first + 1, round(high * rate) + shift - first))
+    shown = slice(
+        shown_first - first,
+        max(shown_first - first + 1, round(high * rate) + shift - first),
+    )
     top = min(HIGH_HZ, rate / 2)
     return TraceWindow(
         flag=flag.number,
@@ -144,5 +148,3 @@ def _derivations(
     )
     data = np.stack(rows) if rows else np.zeros((0, sites.shape[1]), dtype=np.float32)
     return labels, data, tuple(k < n_involved for k in range(len(chosen))), montage
-
-

@@ -44,7 +44,9 @@ class Curve:
     def __call__(self, x: NDArray[np.floating]) -> NDArray[np.float64]:
         """What measurements of any shape add to the score."""
         flat = np.asarray(x, dtype=np.float64)
-        step = self.values[np.searchsorted(self.edges, flat, side="left").clip(max=len(self.edges))]
+        step = self.values[
+            np.searchsorted(self.edges, flat, side="left").clip(max=len(self.edges))
+        ]
         return np.where(np.isnan(flat), self.missing, step)
 
 
@@ -189,7 +191,11 @@ def _curve_from(name: str, entry: dict[str, Any], slope: float) -> Curve:
     values = np.array(entry["values"], dtype=np.float64)
     missing = float(entry["missing"])
     if values.shape != (len(edges) + 1,) or np.any(np.diff(edges) <= 0):
-        raise ValueError(f"the curve of {name} needs rising edges and one value more than edges")
-    if not (np.isfinite(values).all() and np.isfinite(edges).all() and np.isfinite(missing)):
+        raise ValueError(
+            f"the curve of {name} needs rising edges and one value more than edges"
+        )
+    if not (
+        np.isfinite(values).all() and np.isfinite(edges).all() and np.isfinite(missing)
+    ):
         raise ValueError(f"the curve of {name} holds a number that is not finite")
     return Curve(edges, slope * values, slope * missing)

@@ -13,6 +13,8 @@ if TYPE_CHECKING:
     from artifactlens.frames import Frame
     from artifactlens.recording import Recording
 
+Bools = NDArray[np.bool_]
+
 BATCH_EPOCHS = 32
 
 FLAT_UV = 0.2
@@ -96,8 +98,15 @@ def windows_of(
     """
     if len(starts) and np.all(np.diff(starts) == n):
         first = int(starts[0])
-        return signal[:, first : first + n * len(starts)].reshape(len(signal), len(starts), n)
+        return signal[:, first : first + n * len(starts)].reshape(
+            len(signal), len(starts), n
+        )
     return signal[:, starts[:, None] + np.arange(n)]
+
+
+def finite_rows(values: NDArray[np.floating]) -> Bools:
+    """Which rows of a matrix hold finite numbers only, shape (n_rows,)."""
+    return np.asarray(np.isfinite(values).all(axis=1))
 
 
 def epoch_grid(recording: Recording) -> EpochGrid:
@@ -133,7 +142,9 @@ def batches(
         members = np.flatnonzero(grid.segment == number)
         for low in range(0, len(members), batch_epochs):
             chosen = members[low : low + batch_epochs]
-            yield _batch(recording, frame, grid, chosen, segment.start, segment.n_samples, solved)
+            yield _batch(
+                recording, frame, grid, chosen, segment.start, segment.n_samples, solved
+            )
 
 
 def _batch(
@@ -214,7 +225,7 @@ def _solve(
     ok = np.empty((n_sites, len(starts)), dtype=bool)
     if patterns.shape[1] == 1:
         matrix = matrix_for(patterns[:, 0])
-        good = np.isfinite(matrix).all(axis=1)
+        good = finite_rows(matrix)
         ok[:] = good[:, None]
         if not available.all():
             data = np.where(patterns, data, np.float32(0))
@@ -225,7 +236,7 @@ def _solve(
     for number in range(patterns.shape[1]):
         pattern = patterns[:, number]
         matrix = matrix_for(pattern)
-        good = np.isfinite(matrix).all(axis=1)
+        good = finite_rows(matrix)
         ok[:, which == number] = good[:, None]
         part = np.where(pattern[:, None], data[:, owner == number], np.float32(0))
         sites[:, owner == number] = np.where(good[:, None], matrix, np.float32(0)) @ part

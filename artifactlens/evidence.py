@@ -42,22 +42,21 @@ def explain(
     }
     parts = model.contributions(kind, measured)
     order = np.argsort(-np.abs(parts), axis=0, kind="stable")
-    explained = []
-    for cell in range(len(epochs)):
-        explained.append(
-            tuple(
-                Contribution(
-                    feature=FEATURE_NAMES[row],
-                    label=BY_NAME[FEATURE_NAMES[row]].label,
-                    unit=BY_NAME[FEATURE_NAMES[row]].unit,
-                    value=finite_or_none(measured[FEATURE_NAMES[row]][cell]),
-                    usual=finite_or_none(usual[FEATURE_NAMES[row]][sites[cell]]),
-                    log_odds=float(parts[row, cell]),
-                )
-                for row in order[:, cell]
-            )
+
+    def part(row: int, cell: int) -> Contribution:
+        feature = BY_NAME[FEATURE_NAMES[row]]
+        return Contribution(
+            feature=feature.name,
+            label=feature.label,
+            unit=feature.unit,
+            value=finite_or_none(measured[feature.name][cell]),
+            usual=finite_or_none(usual[feature.name][sites[cell]]),
+            log_odds=float(parts[row, cell]),
         )
-    return explained
+
+    return [
+        tuple(part(int(row), cell) for row in order[:, cell]) for cell in range(len(epochs))
+    ]
 
 
 def quiet_values(
@@ -74,7 +73,9 @@ def quiet_values(
     chosen = quiet[::stride]
     chosen = chosen | ~chosen.any(axis=0)
     return {
-        name: median_over_epochs(np.where(chosen, table.column(name)[::stride], np.float32("nan")))
+        name: median_over_epochs(
+            np.where(chosen, table.column(name)[::stride], np.float32("nan"))
+        )
         for name in FEATURE_NAMES
     }
 
@@ -140,9 +141,8 @@ def sentence(
         body = _measures(kind, site, values, line_frequency, field_count)
     driver = max(parts, key=lambda part: part.log_odds)
     speaks_for = sum(part.log_odds for part in parts if part.log_odds > 0)
-    reason = (
-        f"{_capital(driver.label)} drove this mark ({driver.log_odds:+.1f} of {speaks_for:+.1f})"
-    )
+    share = f"{driver.log_odds:+.1f} of {speaks_for:+.1f}"
+    reason = f"{_capital(driver.label)} drove this mark ({share})"
     signed = driver.feature.startswith("front_") and driver.unit == "uV"
     if driver.value is not None:
         reason += f": {amount(driver.value, driver.unit, signed=signed)}"

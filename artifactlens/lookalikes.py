@@ -65,4 +65,6 @@ SIGNS: tuple[Sign, ...] = (
 
 def look_alike(kind: str, values: Values) -> str:
     """The look-alikes whose signs are present, joined by semicolons; empty if none are."""
-    return "; ".join(sign.words for sign in SIGNS if sign.kind == kind and sign.holds(values))
+    return "; ".join(
+        sign.words for sign in SIGNS if sign.kind == kind and sign.holds(values)
+    )

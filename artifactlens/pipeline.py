@@ -85,7 +85,9 @@ def measure_recording(
         )
     leads = eye_leads(frame)
     parts = []
-    counts = {name: np.zeros(len(frame.channels)) for name in ("flat", "missing", "clipped")}
+    counts = {
+        name: np.zeros(len(frame.channels)) for name in ("flat", "missing", "clipped")
+    }
     for batch in batches(recording, frame, grid, batch_epochs):
         parts.append(measure(batch, frame, leads, conditions))
         for name, count in counts.items():
@@ -94,7 +96,9 @@ def measure_recording(
             progress(batch.first + len(batch), len(grid))
     table = feature_table(parts)
     if not np.isfinite(table.values).any():
-        cause = "flat" if counts["flat"].sum() >= counts["missing"].sum() else "missing (NaN)"
+        cause = (
+            "flat" if counts["flat"].sum() >= counts["missing"].sum() else "missing (NaN)"
+        )
         raise RecordingError(
             f"A signal is needed on at least two EEG channels; in {recording.name} all "
             f"{len(frame.channels)} are {cause}.",
@@ -189,7 +193,9 @@ def _facts(measured: Measured, notes: tuple[str, ...]) -> RecordingFacts:
         sampling_rate=rate,
         montage=measured.frame.montage,
         high_pass=conditions.high_pass,
-        low_pass=None if conditions.low_pass_source == "sampling rate" else conditions.low_pass,
+        low_pass=None
+        if conditions.low_pass_source == "sampling rate"
+        else conditions.low_pass,
         notch=conditions.notch,
         line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
         gaps=gaps,
@@ -267,7 +273,9 @@ def triage_to_folder(
     result = conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
     frame = measured.frame
     chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
-    traces = [cut for flag, _ in chosen if (cut := closeup(recording, frame, flag)) is not None]
+    traces = [
+        cut for flag, _ in chosen if (cut := closeup(recording, frame, flag)) is not None
+    ]
     write_all(
         result, target, start=recording.start, report_html=report_html(result, traces)
     )

@@ -241,14 +241,19 @@ def _result_from(body: dict[str, Any]) -> Result:
             **{
                 **flag,
                 "sites": tuple(flag["sites"]),
-                "contributions": tuple(Contribution(**part) for part in flag["contributions"]),
+                "contributions": tuple(
+                    Contribution(**part) for part in flag["contributions"]
+                ),
             }
         )
         for flag in body["flags"]
     )
     sites = tuple(
         SiteEvidence(
-            **{**site, "position": None if site["position"] is None else tuple(site["position"])}
+            **{
+                **site,
+                "position": None if site["position"] is None else tuple(site["position"]),
+            }
         )
         for site in body["sites"]
     )

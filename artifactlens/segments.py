@@ -276,10 +276,14 @@ def refine(
             table, events.peak_epoch, events.peak_site
         )
         begin = grid.onset[events.first] + _place(table, events.first, events.first_site)
-        final = grid.onset[events.last - 1] + _place(table, events.last - 1, events.last_site)
+        final = grid.onset[events.last - 1] + _place(
+            table, events.last - 1, events.last_site
+        )
         return np.maximum(begin - 0.03, 0), final + tail_seconds, moment
     if kind == "eye":
-        moment = grid.onset[events.peak_epoch] + table.front_at[events.peak_epoch].astype(float)
+        moment = grid.onset[events.peak_epoch] + table.front_at[events.peak_epoch].astype(
+            float
+        )
     edge_before, has_before = _neighbour_epoch(events.first, -1, grid)
     edge_after, has_after = _neighbour_epoch(events.last - 1, +1, grid)
     pace_first = np.concatenate(
@@ -302,7 +306,9 @@ def refine(
     above = pace_first[:, half:] >= start_level[:, None]
     begin = np.where(above.any(axis=1), above.argmax(axis=1) - half, 0) / TENTHS
     above = (pace_last[:, : TENTHS + half] >= end_level[:, None])[:, ::-1]
-    final = np.where(above.any(axis=1), TENTHS + half - above.argmax(axis=1), TENTHS) / TENTHS
+    final = (
+        np.where(above.any(axis=1), TENTHS + half - above.argmax(axis=1), TENTHS) / TENTHS
+    )
     refined_end = grid.onset[events.last - 1] + final
     refined_onset = np.maximum(onset + begin, 0)
     short = refined_end - refined_onset < 0.1

@@ -47,7 +47,9 @@ def site_evidence(
     for row, (head, entry) in enumerate(zip(model.heads, assessable, strict=True)):
         limit = head.sure if mark == "sure" else head.doubtful
         marked = (judgement.probability[row] >= limit).sum(axis=0)
-        shares[head.kind] = None if entry.verdict == "no" else marked / np.maximum(seconds, 1)
+        shares[head.kind] = (
+            None if entry.verdict == "no" else marked / np.maximum(seconds, 1)
+        )
     pops = {name: 0 for name in frame.sites}
     for flag in flags:
         if flag.kind == "pop":

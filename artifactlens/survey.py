@@ -76,7 +76,9 @@ def survey(
         good = np.isfinite(data).all(axis=1) & (np.ptp(data, axis=1) > 0)
         if not good.any():
             continue
-        robust.append(1.4826 * np.median(np.abs(data - np.median(data, axis=1)[:, None]), 1)[good])
+        robust.append(
+            1.4826 * np.median(np.abs(data - np.median(data, axis=1)[:, None]), 1)[good]
+        )
         centred = data[good] - data[good].mean(axis=1, keepdims=True)
         common.append(
             (centred.mean(axis=0).std(), np.sqrt(np.mean(centred**2, axis=1)).mean())
@@ -117,7 +119,7 @@ def survey(
             if nominal + 7 < nyquist
         ]
         if looked:
-            found, line, dip, nominal = max(
+            found, line, _, nominal = max(
                 (peak, at, dip, nominal) for peak, at, dip, nominal in looked
             )
             dips = [(entry[2], entry[3]) for entry in looked if entry[3] + 3 < low_pass]
@@ -171,7 +173,9 @@ def _spectrum(
     cut -= cut.mean(axis=2, keepdims=True)
     window = np.hanning(n)
     power = np.abs(scipy.fft.rfft(cut * window, axis=2)) ** 2
-    return scipy.fft.rfftfreq(n, 1 / rate), 2 * power.mean(axis=1) / (rate * np.sum(window**2))
+    return scipy.fft.rfftfreq(n, 1 / rate), 2 * power.mean(axis=1) / (
+        rate * np.sum(window**2)
+    )
 
 
 def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | None:
@@ -191,7 +195,12 @@ def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | N
     falls = np.full(candidates.shape, -np.inf)
     for k, edge in enumerate(candidates):
         below = keep & (freqs >= 0.8 * edge) & (freqs <= edge)
-        above = keep & (freqs >= 1.25 * edge) & (freqs <= 1.45 * edge) & (freqs < 0.97 * nyquist)
+        above = (
+            keep
+            & (freqs >= 1.25 * edge)
+            & (freqs <= 1.45 * edge)
+            & (freqs < 0.97 * nyquist)
+        )
         if below.sum() >= 3 and above.sum() >= 3:
             falls[k] = level[below].mean() - level[above].mean()
     if not len(falls) or falls.max() < ROLL_OFF_DB:

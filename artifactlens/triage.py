@@ -178,5 +178,3 @@ def touched_seconds(flags: tuple[Flag, ...], end: float) -> dict[str, float]:
     }
     touched["any"] = round(union_seconds(onset, finish, end), 2)
     return touched
-
-

@@ -63,7 +63,10 @@ def gather(root: Path, jobs: int) -> tuple[Examples, Examples]:
         *corpora.gestures(faces),
     ]  # fmt: skip
     validation = copies(
-        corpora.mental_arithmetic(eegmat, VALIDATION_PEOPLE), VALIDATION_COPIES, 3_000_000, jobs
+        corpora.mental_arithmetic(eegmat, VALIDATION_PEOPLE),
+        VALIDATION_COPIES,
+        3_000_000,
+        jobs,
     )
     return join(training), validation
 
@@ -72,10 +75,14 @@ def main() -> int:
     """Train, print, save."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     default = os.environ.get("ARTIFACTLENS_CORPORA", "../shared/corpora")
-    parser.add_argument("--corpora", type=Path, default=Path(default), help="folder of corpora")
+    parser.add_argument(
+        "--corpora", type=Path, default=Path(default), help="folder of corpora"
+    )
     parser.add_argument("--out", type=Path, default=Path("models/scalp-1.json"))
     parser.add_argument("--jobs", type=int, default=2, help="worker processes")
-    parser.add_argument("--full-forest", action="store_true", help="also train the comparison")
+    parser.add_argument(
+        "--full-forest", action="store_true", help="also train the comparison"
+    )
     arguments = parser.parse_args()
     try:
         training, validation = gather(arguments.corpora, arguments.jobs)
@@ -91,9 +98,13 @@ def main() -> int:
             forest, columns = fit_forest(kind, training, interactions=True)
             rows = validation.features[:, columns].astype(np.float64)
             full[kind] = forest.decision_function(rows)
-    print("SIMULATED artifact over eegmat 24-29 (validation: calibration and operating points")
+    print(
+        "SIMULATED artifact over eegmat 24-29 (validation: calibration and operating points"
+    )
     print("were set on these people)")
-    print(check_table(validation, scores, {h.kind: (h.sure, h.doubtful) for h in heads}, full))
+    print(
+        check_table(validation, scores, {h.kind: (h.sure, h.doubtful) for h in heads}, full)
+    )
     facts = {
         "tool_version": __version__,
         "training": "eegmat 00-23 and eegmmidb_s001 with simulated artifact; "

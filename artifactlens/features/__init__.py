@@ -241,7 +241,9 @@ def measure(
     ):
         found[name] = np.broadcast_to(per_epoch, ok.shape)
 
-    values = np.stack([np.where(ok, found[name], np.float32(np.nan)).T for name in MEASURED])
+    values = np.stack(
+        [np.where(ok, found[name], np.float32(np.nan)).T for name in MEASURED]
+    )
     return Measures(
         values=values,
         pace=np.minimum(steps.pace, 60000).transpose(1, 0, 2).astype(np.float16),
@@ -366,6 +368,7 @@ def median_over_epochs(values: Array) -> Array:
     count = np.isfinite(ordered).sum(axis=0)
     low, high = np.maximum((count - 1) // 2, 0), np.minimum(count // 2, len(values) - 1)
     middle = (
-        np.take_along_axis(ordered, low[None], 0)[0] + np.take_along_axis(ordered, high[None], 0)[0]
+        np.take_along_axis(ordered, low[None], 0)[0]
+        + np.take_along_axis(ordered, high[None], 0)[0]
     ) / 2
     return np.where(count > 0, middle, np.float32(np.nan)).astype(np.float32)

@@ -71,11 +71,11 @@ def fastest_steps(batch: EpochBatch, neighbours: Array) -> Steps:
     for shift in (-(lag // 2), lag // 2):
         if shift:
             np.maximum(seen, np.abs(change[:, instant + shift]), out=seen)
-    elsewhere = np.sqrt(np.einsum("st,tse->se", neighbours, seen**2))
+    elsewhere = np.sqrt(np.einsum("st,tse->se", neighbours, seen**2)).astype(np.float32)
 
     edges = (np.arange(BINS_PER_SECOND) * n) // BINS_PER_SECOND
     counts = np.diff(np.append(edges, n)).astype(np.float32)
-    pace = np.add.reduceat(size_abs, edges, axis=2) / counts
+    pace = (np.add.reduceat(size_abs, edges, axis=2) / counts).astype(np.float32)
     return Steps(size, at, elsewhere, pace, step_retention(batch, size, instant, lag))
 
 

@@ -153,7 +153,9 @@ class FrontalPolarity:
     match: Array
 
 
-def frontal_polarity(slow: Array, ok: NDArray[np.bool_], leads: EyeLeads) -> FrontalPolarity:
+def frontal_polarity(
+    slow: Array, ok: NDArray[np.bool_], leads: EyeLeads
+) -> FrontalPolarity:
     """Measure the eye deflections of each epoch; see :class:`FrontalPolarity`.
 
     Parameters
@@ -218,7 +220,10 @@ def _rhythm(three: Array) -> Array:
     lags = np.unique(np.rint(np.linspace(0.3, 0.6, 16) * per_second).astype(int))
     power = np.einsum("et,et->e", centred, centred)
     values = np.stack(
-        [np.einsum("et,et->e", centred[:, lag:], centred[:, : length - lag]) for lag in lags]
+        [
+            np.einsum("et,et->e", centred[:, lag:], centred[:, : length - lag])
+            for lag in lags
+        ]
     )
     with np.errstate(divide="ignore", invalid="ignore"):
         best = np.asarray(values.max(axis=0) / power)
@@ -238,7 +243,9 @@ def _map_match(departure: Array, maps: NDArray[np.float64]) -> Array:
     field = np.where(there, field - field.sum(axis=1, keepdims=True) / count, 0)
     templates = maps[:, known][None] * there[:, None]
     templates = np.where(
-        there[:, None], templates - templates.sum(axis=2, keepdims=True) / count[:, :, None], 0
+        there[:, None],
+        templates - templates.sum(axis=2, keepdims=True) / count[:, :, None],
+        0,
     )
     gram = templates @ templates.transpose(0, 2, 1)
     ridge = 1e-9 * np.trace(gram, axis1=1, axis2=2) + 1e-30

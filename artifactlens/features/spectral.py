@@ -13,6 +13,7 @@ References
 
 from __future__ import annotations
 
+import itertools
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -63,7 +64,9 @@ def _window_power(
     n_fft = scipy.fft.next_fast_len(n, real=True)
     freqs = scipy.fft.rfftfreq(n_fft, 1 / batch.sampling_rate)
     keep = int(np.searchsorted(freqs, min(HIGHEST_HZ, freqs[-1]), side="right"))
-    spectrum = scipy.fft.rfft(batch.windows(starts, n) * window, n=n_fft, axis=2)[..., :keep]
+    spectrum = scipy.fft.rfft(batch.windows(starts, n) * window, n=n_fft, axis=2)[
+        ..., :keep
+    ]
     power = spectrum.real**2
     power += spectrum.imag**2
     power *= np.float32(2 / (batch.sampling_rate * np.sum(window.astype(np.float64) ** 2)))
@@ -123,12 +126,14 @@ def spectral_slope(psd: Array, freqs: NDArray[np.float64], *, usable: float) -> 
     edges = np.array(SLOPE_EDGES_HZ)
     pairs = [
         (low, high)
-        for low, high in zip(edges[:-1], edges[1:], strict=True)
+        for low, high in itertools.pairwise(edges)
         if high <= usable and ((freqs >= low) & (freqs < high)).any()
     ]
     if len(pairs) < 4:
         return np.full(psd.shape[:-1], np.nan, dtype=np.float32)
-    masks = np.array([(freqs >= low) & (freqs < high) for low, high in pairs], dtype=np.float64)
+    masks = np.array(
+        [(freqs >= low) & (freqs < high) for low, high in pairs], dtype=np.float64
+    )
     masks /= masks.sum(axis=1, keepdims=True)
     centres = np.log10(masks @ freqs)
     weights = centres - centres.mean()
@@ -182,7 +187,7 @@ def mains_amplitude(psd: Array, freqs: NDArray[np.float64], *, mains_hz: float) 
     A sine of amplitude ``a`` adds power ``a^2 / 2``, which the Hann window spreads over the
     bins within 2 Hz; what the flanks lead one to expect there is taken off first.
     """
-    core, ring = _core_and_ring(freqs, mains_hz)
+    _, ring = _core_and_ring(freqs, mains_hz)
     wide = (np.abs(freqs - mains_hz) <= 2.01).astype(np.float32)
     spacing = np.float32(freqs[1] - freqs[0])
     excess = (psd @ wide - (psd @ ring) * wide.sum()) * spacing

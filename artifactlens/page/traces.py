@@ -158,7 +158,7 @@ def trace_path(
 def beyond_path(
     seconds: NDArray[np.float64], values_uv: NDArray[np.float64], step: float, base: float
 ) -> str:
-    """Strokes along the limit wherever a trace was clipped; empty if it never was."""
+    """Strokes that dot the trace wherever it was clipped; empty if it never was."""
     size = np.nan_to_num(values_uv) / step
     parts = []
     for side in (-1, 1):

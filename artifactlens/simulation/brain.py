@@ -6,7 +6,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from artifactlens.simulation.head import HEAD_RADIUS, SKULL, direction, lead_field, patch_map
+from artifactlens.simulation.head import (
+    HEAD_RADIUS,
+    SKULL,
+    direction,
+    lead_field,
+    patch_map,
+)
 from artifactlens.simulation.scene import Scene, Simulated
 
 if TYPE_CHECKING:

@@ -66,7 +66,9 @@ def compile_forest(
     curves = {column: _sum_of_steps(parts) for column, parts in sorted(steps.items())}
     compiled = Compiled(base, curves)
     rows = np.asarray(check_on, dtype=np.float64)
-    difference = np.abs(compiled.decision(rows) - forest.decision_function(rows)).max(initial=0)
+    difference = np.abs(compiled.decision(rows) - forest.decision_function(rows)).max(
+        initial=0
+    )
     if not difference <= LARGEST_DIFFERENCE:
         raise ModelError(
             f"Curves and forest must agree to {LARGEST_DIFFERENCE:g}; they differ by "

@@ -132,9 +132,13 @@ def motor_imagery_readings(folder: Path) -> list[Examples]:
                 if name is None:
                     continue
                 if kind == "eye":
-                    present = plain.all(axis=0) if name in FRONTAL else np.zeros(n_epochs, bool)
+                    present = (
+                        plain.all(axis=0) if name in FRONTAL else np.zeros(n_epochs, bool)
+                    )
                 else:
-                    present = _marked(own, n_epochs, kind, ("sure", "probable"), name).all(axis=0)
+                    present = _marked(own, n_epochs, kind, ("sure", "probable"), name).all(
+                        axis=0
+                    )
                 truth[number][page & present, site] = PRESENT
         strength = np.full(truth.shape, np.nan, dtype=np.float32)
         found.append(
@@ -160,7 +164,9 @@ def _marked(
     for row in rows:
         if row["kind"] != kind or (confidence and row["confidence"] not in confidence):
             continue
-        if site is not None and site not in {canonical_site(s) for s in row["sites"].split("|")}:
+        if site is not None and site not in {
+            canonical_site(s) for s in row["sites"].split("|")
+        }:
             continue
         first, last = int(float(row["onset"])), int(np.ceil(float(row["end"])))
         marked[0 if row["reader"] == "first" else 1, first:last] = True
@@ -193,10 +199,15 @@ def gestures(folder: Path) -> list[Examples]:
     )
     measured = measure_recording(recording, line_frequency=60.0)
     table: FeatureTable = measured.table
-    truth = np.full((len(KIND_NAMES), n_chunks, table.values.shape[2]), UNKNOWN, dtype=np.int8)
+    truth = np.full(
+        (len(KIND_NAMES), n_chunks, table.values.shape[2]), UNKNOWN, dtype=np.int8
+    )
     neutral = labels == "neutral"
     truth[EYE, neutral] = truth[MUSCLE, neutral] = CLEAN
-    for number, kind, feature in ((EYE, "eye", "eye_reach"), (MUSCLE, "muscle", "fast_power")):
+    for number, kind, feature in (
+        (EYE, "eye", "eye_reach"),
+        (MUSCLE, "muscle", "fast_power"),
+    ):
         column = table.column(feature)
         high = np.nanpercentile(column[neutral], 90, axis=0)
         middle = np.nanpercentile(column[neutral], 50, axis=0)
@@ -204,7 +215,9 @@ def gestures(folder: Path) -> list[Examples]:
             chosen = labels == gesture
             if kind in kinds:
                 truth[number, chosen] = np.where(
-                    column[chosen] > high, PRESENT, np.where(column[chosen] < middle, CLEAN, UNKNOWN)
+                    column[chosen] > high,
+                    PRESENT,
+                    np.where(column[chosen] < middle, CLEAN, UNKNOWN),
                 )
             elif kinds and f"{kind}?" not in kinds and kind == "muscle":
                 truth[number, chosen] = np.where(column[chosen] < middle, CLEAN, UNKNOWN)

@@ -114,7 +114,9 @@ def row_weights(examples: Examples, known: NDArray[np.bool_]) -> NDArray[np.floa
     return np.asarray(weight[place] if len(names) > 1 else np.ones(len(origin)))
 
 
-def fit_head(kind: str, training: Examples, validation: Examples, seed: int = 0) -> FittedHead:
+def fit_head(
+    kind: str, training: Examples, validation: Examples, seed: int = 0
+) -> FittedHead:
     """Fit on training people, calibrate and set operating points on validation people."""
     forest, columns = fit_forest(kind, training, seed=seed)
     check = np.concatenate([training.features[::7], validation.features[::7]])[:, columns]
@@ -141,7 +143,9 @@ def _with_missing(rows: NDArray[np.floating]) -> NDArray[np.float64]:
     return np.concatenate([rows.astype(np.float64), copies])
 
 
-def calibrate(decision: NDArray[np.float64], truth: NDArray[np.int8]) -> tuple[float, float]:
+def calibrate(
+    decision: NDArray[np.float64], truth: NDArray[np.int8]
+) -> tuple[float, float]:
     """Slope and offset of a logistic fit to held-out scores (Platt 1999).
 
     Platt's smoothed targets keep the slope finite where both classes separate.
@@ -157,7 +161,12 @@ def calibrate(decision: NDArray[np.float64], truth: NDArray[np.int8]) -> tuple[f
         score = parameters[0] * decision + parameters[1]
         return float(np.mean(np.logaddexp(0, score) - target * score))
 
-    fitted = minimize(loss, np.array([1.0, 0.0]), method="Nelder-Mead", options={"xatol": 1e-6, "fatol": 1e-10, "maxiter": 2000})
+    fitted = minimize(
+        loss,
+        np.array([1.0, 0.0]),
+        method="Nelder-Mead",
+        options={"xatol": 1e-6, "fatol": 1e-10, "maxiter": 2000},
+    )
     slope, offset = (float(value) for value in fitted.x)
     return max(slope, 1e-3), offset
 

@@ -7,6 +7,7 @@ the same low-pass, or a plausible fast floor that reaches as high as the artifac
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -89,7 +90,9 @@ CHAINS = (
 def draw_situation(background: Background, rng: np.random.Generator) -> Situation:
     """Recording conditions that the background allows."""
     extended = background.kept_to_hz is None or rng.random() < 0.65
-    rates = [rate for rate in (128.0, 200.0, 250.0, 256.0, 500.0) if rate <= background.sfreq]
+    rates = [
+        rate for rate in (128.0, 200.0, 250.0, 256.0, 500.0) if rate <= background.sfreq
+    ]
     sfreq = float(rng.choice(rates)) if rates else background.sfreq
     line = float(rng.choice([50.0, 60.0]))
     low_pass: float | None = None
@@ -269,7 +272,7 @@ def _moments(rng: np.random.Generator, length: float, per_minute: float) -> list
 
 
 def _eyes(scene: Scene, rng: np.random.Generator) -> list[Simulated]:
-    parts = []
+    parts: list[Simulated] = []
     length = scene.length
     if rng.random() < 0.7:
         onsets = eye.blink_onsets(length, rng, per_minute=float(rng.choice([4, 8, 15, 30])))
@@ -314,11 +317,13 @@ def _eyes(scene: Scene, rng: np.random.Generator) -> list[Simulated]:
 
 
 def _muscles(scene: Scene, rng: np.random.Generator) -> list[Simulated]:
-    parts = []
+    parts: list[Simulated] = []
     length = scene.length
     for _ in range(int(rng.integers(1, 4))):
         name = str(rng.choice(list(muscle.MUSCLES), p=[0.3, 0.4, 0.15, 0.15]))
-        sides = [["left", "right"], ["left"], ["right"]][int(rng.choice(3, p=[0.5, 0.25, 0.25]))]
+        sides = [["left", "right"], ["left"], ["right"]][
+            int(rng.choice(3, p=[0.5, 0.25, 0.25]))
+        ]
         style = rng.choice(["twitch", "burst", "long"], p=[0.25, 0.5, 0.25])
         low, high, rate = {
             "twitch": (0.06, 0.25, 5.0),
@@ -326,20 +331,20 @@ def _muscles(scene: Scene, rng: np.random.Generator) -> list[Simulated]:
             "long": (8.0, length, 0.5),
         }[str(style)]
         size = float(np.exp(rng.uniform(np.log(2.5), np.log(80.0))))
-        for onset in _moments(rng, length, rate):
-            parts.append(
-                muscle.contraction(
-                    scene, rng, name, onset,
-                    float(np.exp(rng.uniform(np.log(low), np.log(high)))),
-                    rms_uv=size * float(rng.uniform(0.6, 1.5)), sides=sides,
-                    units=int(rng.choice([4, 10, 20])),
-                )
-            )  # fmt: skip
+        parts += [
+            muscle.contraction(
+                scene, rng, name, onset,
+                float(np.exp(rng.uniform(np.log(low), np.log(high)))),
+                rms_uv=size * float(rng.uniform(0.6, 1.5)), sides=sides,
+                units=int(rng.choice([4, 10, 20])),
+            )
+            for onset in _moments(rng, length, rate)
+        ]  # fmt: skip
     return parts
 
 
 def _pops(scene: Scene, rng: np.random.Generator, n_refs: int) -> list[Simulated]:
-    parts = []
+    parts: list[Simulated] = []
     n_rows, length = scene.n_sites, scene.length
     for _ in range(int(rng.integers(1, 4))):
         linked = rng.random() < 0.15
@@ -411,15 +416,21 @@ def _montage(
         # A reference somewhere on the midline that has no channel of its own.
         middle = [row for row, name in enumerate(names) if name.endswith("z")] or [0]
         weights = rng.dirichlet(np.ones(len(middle)))
-        return channels - weights @ channels[middle], [f"{name}-REF" for name in names], "mix"
+        return (
+            channels - weights @ channels[middle],
+            [f"{name}-REF" for name in names],
+            "mix",
+        )
     if situation.montage == "bipolar":
         pairs = [
             (a, b)
             for chain in CHAINS
-            for a, b in zip(chain[:-1], chain[1:], strict=True)
+            for a, b in itertools.pairwise(chain)
             if a in names and b in names
         ]
-        data = np.stack([channels[names.index(a)] - channels[names.index(b)] for a, b in pairs])
+        data = np.stack(
+            [channels[names.index(a)] - channels[names.index(b)] for a, b in pairs]
+        )
         return data, [f"{a}-{b}" for a, b in pairs], None
     return channels, [f"EEG {name}-LE" for name in names], "ears"
 
@@ -498,7 +509,9 @@ def _rows_of(
     frame: Frame, names: tuple[str, ...], reference_row: str | None
 ) -> NDArray[np.intp]:
     rows = []
-    for site, canonical, role in zip(frame.sites, frame.canonical, frame.roles, strict=True):
+    for site, canonical, role in zip(
+        frame.sites, frame.canonical, frame.roles, strict=True
+    ):
         name = canonical or canonical_site(site)
         if role == "reference" and reference_row in ("ears", "mix"):
             rows.append(len(names))
@@ -534,7 +547,9 @@ def _above_15(x: Array, sfreq: float) -> Array:
 
 def _pop_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
     size = np.abs(field[:, :, lag:] - field[:, :, :-lag]).max(axis=2)
-    usual = np.median(np.abs(base[:, :, lag:] - base[:, :, :-lag]).max(axis=2), axis=1)[:, None]
+    usual = np.median(np.abs(base[:, :, lag:] - base[:, :, :-lag]).max(axis=2), axis=1)[
+        :, None
+    ]
     tail = np.ptp(field, axis=2)
     return size, (size >= 20) & (size >= 2 * usual), (size < 4) & (tail < 15)
 
