@@ -139,7 +139,14 @@ def load_model(path: Path | None = None) -> Model:
         return _model_from(body, hashlib.sha256(raw).hexdigest())
     except ModelError:
         raise
-    except (ValueError, KeyError, TypeError, AttributeError) as error:
+    except (
+        ValueError,
+        KeyError,
+        TypeError,
+        AttributeError,
+        OverflowError,
+        RecursionError,
+    ) as error:
         raise ModelError(
             f"The model file {Path(source).name} is damaged: {error}.",
             "Install artifactlens again, or train a model with scripts/train.py.",
@@ -190,7 +197,8 @@ def _curve_from(name: str, entry: dict[str, Any], slope: float) -> Curve:
     edges = np.array(entry["edges"], dtype=np.float64)
     values = np.array(entry["values"], dtype=np.float64)
     missing = float(entry["missing"])
-    if values.shape != (len(edges) + 1,) or np.any(np.diff(edges) <= 0):
+    fitting = edges.ndim == 1 and values.shape == (len(edges) + 1,)
+    if not fitting or np.any(np.diff(edges) <= 0):
         raise ValueError(
             f"the curve of {name} needs rising edges and one value more than edges"
         )

@@ -22,6 +22,7 @@ from artifactlens.sites import canonical_site, site_position
 if TYPE_CHECKING:
     from pathlib import Path
 
+    from edfio import Edf
     from numpy.typing import NDArray
 
 DEMO_NAME = "workshop.edf"
@@ -34,6 +35,7 @@ REFERENCE = "REF"
 
 HIGH_PASS_HZ, LOW_PASS_HZ = 0.3, 70.0
 _SFREQ, _SECONDS, _SEED = 256.0, 240, 20_240
+_RANGE_UV = (-3276.8, 3276.7)
 _ELECTRODES = (*DEMO_SITES, "A1", REFERENCE)
 
 _NOTES: tuple[tuple[float, str], ...] = (
@@ -274,21 +276,36 @@ def write_demo(folder: Path) -> Path:
     OutputError
         If the file cannot be written there.
     """
+    path = folder / DEMO_NAME
+    part = folder / f"{DEMO_NAME}.part"
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        _recording().write(part)
+        part.replace(path)
+    except OSError as error:
+        raise OutputError(
+            f"The demonstration cannot be written to {folder}: {error.strerror}.",
+            "Give a folder that may be written to.",
+        ) from error
+    return path
+
+
+def _recording() -> Edf:
     from edfio import Edf, EdfAnnotation, EdfSignal, Recording
 
     names, signals = demo_signals()
     channels = [(f"EEG {name}-REF", row) for name, row in zip(names, signals, strict=True)]
     heart = _heart(np.random.default_rng(_SEED + 1))
     channels.append(("ECG", electrode.high_pass_first_order(heart, HIGH_PASS_HZ, _SFREQ)))
-    recording = Edf(
+    return Edf(
         [
             EdfSignal(
-                np.clip(values, -3276.8, 3276.7),
+                np.clip(values, *_RANGE_UV),
                 _SFREQ,
                 label=label,
                 transducer_type="invented",
                 physical_dimension="uV",
-                physical_range=(-3276.8, 3276.7),
+                physical_range=_RANGE_UV,
                 prefiltering=f"HP:{HIGH_PASS_HZ:g}Hz LP:{LOW_PASS_HZ:g}Hz",
             )
             for label, values in channels
@@ -299,15 +316,3 @@ def write_demo(folder: Path) -> Path:
         data_record_duration=1.0,
         annotations=[EdfAnnotation(onset, None, text) for onset, text in _NOTES],
     )
-    path = folder / DEMO_NAME
-    part = folder / f"{DEMO_NAME}.part"
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-        recording.write(part)
-        part.replace(path)
-    except OSError as error:
-        raise OutputError(
-            f"The demonstration cannot be written to {folder}: {error.strerror}.",
-            "Give a folder that may be written to.",
-        ) from error
-    return path

@@ -115,10 +115,8 @@ def epoch_grid(recording: Recording) -> EpochGrid:
     n = int(np.floor(rate + 1e-9))
     start, onset, index = [], [], []
     for number, segment in enumerate(recording.segments):
-        count = max(0, int((segment.n_samples - n) / rate + 1e-9) + 1)
-        if segment.n_samples < n:
-            count = 0
-        offset = np.rint(np.arange(count) * rate).astype(np.int64)
+        most = int(segment.n_samples / rate) + 1
+        offset = np.rint(np.arange(most) * rate).astype(np.int64)
         offset = offset[offset + n <= segment.n_samples]
         start.append(segment.start + offset)
         onset.append(segment.onset + offset / rate)
@@ -158,8 +156,9 @@ def _batch(
 ) -> EpochBatch:
     n, rate = grid.n_samples, recording.sampling_rate
     own = grid.start[chosen]
-    before, after = int(own[0]) - n, int(own[-1]) + n
-    # The context epoch behind starts where the grid would put it, one sample off at most.
+    # Context lies where the grid has it, so that no measure depends on the batch size.
+    before = _beside(grid, int(chosen[0]), -1)
+    after = _beside(grid, int(chosen[-1]), +1)
     positions = np.concatenate([[before], own, [after]])
     low, high = max(before, segment_start), min(after + n, segment_start + segment_length)
     data = recording.read(low, high)[frame.channels]
@@ -174,7 +173,8 @@ def _batch(
 
     epochs = windows_of(data, starts, n)
     top, bottom = epochs.max(axis=2), epochs.min(axis=2)
-    missing = ~np.isfinite(top - bottom)
+    # Samples between two epochs (rates that are no whole number) count as well.
+    missing = np.logical_or.reduceat(~np.isfinite(data), starts, axis=1)
     with np.errstate(invalid="ignore"):
         flat = ~missing & (top - bottom < FLAT_UV)
         large = ~missing & (top - bottom > CLIPPED_UV)
@@ -201,6 +201,14 @@ def _batch(
         missing=missing[:, core],
         clipped=clipped[:, core],
     )
+
+
+def _beside(grid: EpochGrid, epoch: int, way: int) -> int:
+    """First sample of the epoch before (-1) or behind (+1), in the segment or beyond it."""
+    other = epoch + way
+    if 0 <= other < len(grid) and grid.segment[other] == grid.segment[epoch]:
+        return int(grid.start[other])
+    return int(grid.start[epoch]) + way * grid.n_samples
 
 
 def _solve(

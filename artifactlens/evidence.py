@@ -67,13 +67,13 @@ def quiet_values(
     ``quiet`` (n_epochs, n_sites) is true where no kind reaches its lower operating point; a
     site without a quiet epoch falls back on all its epochs.
     """
-    from artifactlens.features import USUAL_EPOCHS, median_over_epochs
+    from artifactlens.features import USUAL_EPOCHS, median_of_known
 
     stride = max(1, -(-len(quiet) // USUAL_EPOCHS))
     chosen = quiet[::stride]
     chosen = chosen | ~chosen.any(axis=0)
     return {
-        name: median_over_epochs(
+        name: median_of_known(
             np.where(chosen, table.column(name)[::stride], np.float32("nan"))
         )
         for name in FEATURE_NAMES
@@ -81,13 +81,12 @@ def quiet_values(
 
 
 def amount(value: float | None, unit: str, *, signed: bool = False) -> str:
-    """A measured value in words: three significant digits with its unit."""
+    """A measured value in words: one decimal for decibel, else three significant digits."""
     if value is None:
         return "not measurable"
-    text = f"{value:+.3g}" if signed else f"{value:.3g}"
-    if "e" in text:
-        text = f"{value:+.0f}" if signed else f"{value:.0f}"
-    return f"{text} {unit}".strip()
+    sign = "+" if signed else ""
+    digits = ".1f" if unit == "dB" else ".0f" if abs(value) >= 100 else ".3g"
+    return f"{value:{sign}{digits}} {unit}".strip()
 
 
 def sentence(

@@ -259,24 +259,19 @@ def triage_to_folder(
         With what was needed, what was given and what to do; nothing is written half.
     """
     from artifactlens.closeups import closeup
-    from artifactlens.export.atomic import probe_folder
-    from artifactlens.export.folder import write_all
+    from artifactlens.export.folder import prepared_folder, write_all
     from artifactlens.page.need import by_need
     from artifactlens.page.report import report_html
 
     recording = open_recording(path)
     target = folder or default_folder(Path(path))
-    probe_folder(target)
-    measured = measure_recording(
-        recording, line_frequency=line_frequency, progress=progress
-    )
-    result = conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
-    frame = measured.frame
-    chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
-    traces = [
-        cut for flag, _ in chosen if (cut := closeup(recording, frame, flag)) is not None
-    ]
-    write_all(
-        result, target, start=recording.start, report_html=report_html(result, traces)
-    )
+    with prepared_folder(target):
+        measured = measure_recording(
+            recording, line_frequency=line_frequency, progress=progress
+        )
+        result = conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
+        chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
+        cuts = [closeup(recording, measured.frame, flag) for flag, _ in chosen]
+        page = report_html(result, [cut for cut in cuts if cut is not None])
+        write_all(result, target, start=recording.start, report_html=page)
     return result, target

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from artifactlens.features import median_over_epochs
+from artifactlens.features import median_of_known
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import Assessment, Flag, SiteEvidence, finite_or_none
 
@@ -56,7 +56,7 @@ def site_evidence(
             for name in flag.sites:
                 pops[name] += 1
     medians = {
-        name: median_over_epochs(table.column(name))
+        name: median_of_known(table.column(name))
         for name in ("mains_size", "mains_ratio", "isolation")
     }
     worst = _site_faults(frame, faults)

@@ -96,8 +96,8 @@ def survey(
     header = [recording.filters[index] for index in frame.channels]
     low_pass, source = nyquist, "sampling rate"
     stated = [entry.low_pass for entry in header if entry.low_pass]
-    if stated and min(stated) < nyquist:
-        low_pass, source = float(np.median(stated)), "header"
+    if stated and (typical := float(np.median(stated))) < nyquist:
+        low_pass, source = typical, "header"
     high = [entry.high_pass for entry in header if entry.high_pass]
     notch = [entry.notch for entry in header if entry.notch]
     notch_at = float(np.median(notch)) if notch else None
@@ -108,15 +108,23 @@ def survey(
     same = [(freqs, psd) for freqs, psd in spectra if freqs.size == length]
     if same:
         freqs = same[0][0]
-        psd = np.median(np.stack([power for _, power in same]), axis=0)
+        stack = np.stack([power for _, power in same])
+        psd = np.median(stack, axis=0)
+        # Mains may be there for a part of the time only.
+        at_times = np.quantile(stack, 0.9, axis=0)
         roll_off = _roll_off(freqs, psd)
         if roll_off is not None and roll_off < 0.9 * low_pass:
             low_pass, source = roll_off, "measured"
         candidates = (line_frequency,) if line_frequency else LINE_FREQUENCIES
         looked = [
-            (*_line(freqs, psd, nominal), nominal)
+            (
+                *_line_height(freqs, at_times, nominal),
+                _line_dip(freqs, psd, nominal),
+                nominal,
+            )
             for nominal in candidates
-            if nominal + 7 < nyquist
+            # Less than half a second may have no bin at the line.
+            if nominal + 7 < nyquist and freqs[1] <= 1.5
         ]
         if looked:
             found, line, _, nominal = max(
@@ -185,7 +193,10 @@ def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | N
     meets the amplifier's floor; a recorder's low-pass falls faster. Compared are the levels
     just below a candidate and a third above it, line frequencies left out.
     """
-    level = 10 * np.log10(np.median(psd[(psd > 0).any(axis=1)], axis=0) + 1e-12)
+    alive = (psd > 0).any(axis=1)
+    if not alive.any():
+        return None
+    level = 10 * np.log10(np.median(psd[alive], axis=0) + 1e-12)
     keep = np.ones_like(freqs, dtype=bool)
     for line in LINE_FREQUENCIES:
         for harmonic in (1, 2, 3):
@@ -214,19 +225,31 @@ def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | N
     return float(edge)
 
 
-def _line(
+def _line_height(
     freqs: NDArray[np.float64], psd: NDArray[np.float64], nominal: float
-) -> tuple[float, float, float]:
-    """Height of the line at its strongest site (dB), where it is (Hz), median dip (dB)."""
+) -> tuple[float, float]:
+    """Height of the line at its strongest site over its flanks (dB), and where it is (Hz)."""
     near = np.abs(freqs - nominal) <= nominal * LINE_TOLERANCE + 0.25
-    ring = (np.abs(freqs - nominal) >= 2.5) & (np.abs(freqs - nominal) <= 6)
-    flank = np.median(psd[:, ring], axis=1)
+    flank = np.median(psd[:, _flanks(freqs, nominal)], axis=1)
     alive = flank > 0
     if not alive.any():
-        return float("nan"), nominal, 0.0
+        return float("nan"), nominal
     height = 10 * np.log10(psd[alive][:, near].max(axis=1) / flank[alive] + 1e-12)
     strongest = int(np.argmax(height))
     at = freqs[near][int(np.argmax(psd[alive][strongest][near]))]
+    return float(height[strongest]), float(at)
+
+
+def _line_dip(
+    freqs: NDArray[np.float64], psd: NDArray[np.float64], nominal: float
+) -> float:
+    """Median over sites of the level within 1 Hz of the line against its flanks, dB."""
+    flank = np.median(psd[:, _flanks(freqs, nominal)], axis=1)
+    alive = flank > 0
     middle = np.abs(freqs - nominal) <= 1.0
-    dip = 10 * np.log10(psd[alive][:, middle].mean(axis=1) / flank[alive] + 1e-12)
-    return float(height[strongest]), float(at), float(np.median(dip))
+    level = psd[alive][:, middle].mean(axis=1) / flank[alive]
+    return float(np.median(10 * np.log10(level + 1e-12))) if alive.any() else 0.0
+
+
+def _flanks(freqs: NDArray[np.float64], nominal: float) -> NDArray[np.bool_]:
+    return (np.abs(freqs - nominal) >= 2.5) & (np.abs(freqs - nominal) <= 6)

@@ -78,10 +78,10 @@ def make_flags(
     end : float
         End of the recording, seconds: no flag reaches beyond.
     """
-    from artifactlens.features import median_over_epochs
+    from artifactlens.features import median_of_known
 
     pace = table.pace.mean(axis=2, dtype=np.float32)
-    quiet_pace = median_over_epochs(np.where(judgement.quiet, pace, np.float32("nan")))
+    quiet_pace = median_of_known(np.where(judgement.quiet, pace, np.float32("nan")))
     tau = 1 / (2 * math.pi * conditions.high_pass) if conditions.high_pass else 0.5
     tail = float(np.clip(3 * tau, *POP_TAIL_SECONDS))
     flags: list[Flag] = []

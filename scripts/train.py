@@ -31,7 +31,7 @@ from artifactlens.training.simulated import Background, simulate
 TRAINING_PEOPLE, VALIDATION_PEOPLE = range(24), range(24, 30)
 """Subjects 30-35 are the reserved final check: nothing here reads them."""
 
-TRAINING_COPIES, VALIDATION_COPIES, IMAGERY_COPIES = 6, 14, 1
+TRAINING_COPIES, VALIDATION_COPIES, IMAGERY_COPIES = 8, 14, 2
 
 
 def copies(

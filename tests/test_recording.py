@@ -435,6 +435,15 @@ def test_an_electrode_of_another_rate_is_brought_to_the_rate_of_the_others(
         assert recording.filters[0] == UNSTATED
 
 
+def test_what_the_kept_rate_cannot_carry_is_not_folded_into_it(tmp_path):
+    fast = np.rint(10_000 * np.sin(2 * np.pi * 200 * np.arange(5120) / 512)).astype(int)
+    signals = [{"label": "Fp1", "stored": fast}]
+    signals += [{"label": label, "stored": stored(2560)} for label in ("C3", "C4")]
+    recording = open_recording(compose(tmp_path / "a.edf", signals, n_records=10))
+    assert recording.sampling_rate == 256
+    assert np.abs(whole(recording)[0, 256:-256]).max() < 0.005 * 1000
+
+
 def test_an_electrode_of_a_rate_too_far_from_the_others_is_set_aside(tmp_path):
     counts = {"Fp1": 10, "Fp2": 256, "Cz": 256, "O1": 4096}
     path = compose(
@@ -608,6 +617,28 @@ def test_a_record_that_states_an_earlier_time_follows_the_one_before_and_is_note
         "Data records that state a time before the end of the record before them: 1; taken "
         "as following it directly."
     )
+
+
+def test_a_stray_earlier_time_between_regular_ones_makes_no_gap(tmp_path):
+    recording = interrupted(tmp_path / "a.edf", ["0", "1", "0.5", "3"])
+    assert recording.segments == (Segment(0, 400, 0.0),)
+
+
+def test_only_the_first_annotation_signal_keeps_the_time(tmp_path):
+    first = b"".join(keeper(onset).ljust(16, b"\x00") for onset in (0, 1))
+    path = compose(
+        tmp_path / "a.edf",
+        [
+            {"stored": stored(200)},
+            {"label": "EDF Annotations", "stored": np.frombuffer(first, "<i2")},
+        ],
+        n_records=2,
+        reserved="EDF+D",
+        tals=[b"+0.5\x14blink\x14\x00", b"+50\x14\x14\x00"],
+    )
+    recording = open_recording(path)
+    assert recording.segments == (Segment(0, 200, 0.0),)
+    assert recording.annotations == ((0.5, 0.0, "blink"),)
 
 
 def test_a_file_that_calls_itself_continuous_is_taken_so_and_odd_times_are_noted(tmp_path):
@@ -824,6 +855,12 @@ def test_filters_that_mne_knows_are_taken_over(raw):
     with raw.info._unlock():
         raw.info["highpass"], raw.info["lowpass"] = 0.5, 40.0
     assert from_raw(raw).filters == (Filters(0.5, 40.0, None),) * 5
+
+
+def test_a_position_at_the_origin_means_unknown(raw):
+    raw.info["chs"][0]["loc"][:3] = 0
+    known = np.isfinite(from_raw(raw).positions).all(axis=1)
+    assert known.tolist() == [False, True, True, False, False]
 
 
 @pytest.mark.parametrize("dated", [True, False])

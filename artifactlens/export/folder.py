@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager, suppress
 from datetime import datetime
 from pathlib import Path
 
+from artifactlens.errors import OutputError
 from artifactlens.export.atomic import probe_folder, write_together
 from artifactlens.export.flags_table import flags_columns_json, flags_tsv
 from artifactlens.export.marks import marks_edf
@@ -14,6 +17,48 @@ from artifactlens.result import Result
 
 _NOT_IN_NAMES = frozenset('<>:"/\\|?*')  # separators, and what Windows reserves
 _LONGEST_NAME = 60  # characters of up to four bytes; file systems take 255 bytes
+
+
+_OURS = frozenset(
+    {
+        "flags.tsv", "flags.json", "sites.tsv", "sites.json", "scores.npz", "report.html",
+        "result.json",
+    }
+)  # fmt: skip
+
+
+@contextmanager
+def prepared_folder(folder: Path) -> Iterator[None]:
+    """Make sure before any work that results can go into ``folder``.
+
+    Results of an earlier run are replaced; a folder that holds anything else is left alone.
+    If the work fails, a folder that was made for it is taken away again.
+
+    Raises
+    ------
+    OutputError
+        If the folder cannot be written, or holds files that no triage wrote.
+    """
+    made = not folder.exists()
+    probe_folder(folder)
+    foreign = sorted(
+        path.name
+        for path in folder.iterdir()
+        if path.name not in _OURS and not path.name.endswith(("_marks.edf", ".part"))
+    )
+    if foreign:
+        raise OutputError(
+            f"The folder {folder} is needed for results, but it holds other files "
+            f"({', '.join(foreign[:3])}{', ...' if len(foreign) > 3 else ''}).",
+            "Move them, or choose another folder with --out.",
+        )
+    try:
+        yield
+    except BaseException:
+        if made:
+            with suppress(OSError):
+                folder.rmdir()
+        raise
 
 
 def write_all(

@@ -28,7 +28,8 @@ class Feature(NamedTuple):
     """One measured number.
 
     ``usual_of`` names the measured feature that this one compares with its usual value:
-    the difference from the site's median over the recording, in decibel.
+    the difference from the site's median over the recording, in decibel. ``steady_of``
+    names the measured feature whose median over five seconds this one is.
     """
 
     name: str
@@ -38,6 +39,7 @@ class Feature(NamedTuple):
     formula: str
     source: str
     usual_of: str = ""
+    steady_of: str = ""
 
 
 FEATURES: tuple[Feature, ...] = (
@@ -96,6 +98,19 @@ FEATURES: tuple[Feature, ...] = (
         "fast_power - weighted mean of the neighbours", "design of this tool",
     ),
     Feature(
+        "fast_lead", "power at 30-45 Hz over the head's median", "dB", "muscle power",
+        "fast_power - median over all sites of the epoch",
+        "muscle exceeds brain increasingly away from the vertex (PMC9480942)",
+    ),
+    Feature(
+        "burst", "highest pace within a tenth of a second", "uV", "muscle power",
+        "max over tenths of mean |x(t + 16 ms) - x(t)|", "design of this tool",
+    ),
+    Feature(
+        "burst_rise", "highest pace against usual", "dB", "muscle power",
+        "20 log10(burst / site's median burst)", "", "burst",
+    ),
+    Feature(
         "high_power", "power at 55-95 Hz", "dB", "muscle power",
         "10 log10 of the mean density in uV^2/Hz, line frequency left out",
         "Muthukumaraswamy 2013: EMG spans about 20-300 Hz",
@@ -110,6 +125,10 @@ FEATURES: tuple[Feature, ...] = (
         "Fitzgibbon et al. 2016 (from memory)",
     ),
     Feature(
+        "slope_rise", "spectral slope against usual", "", "spectral slope",
+        "slope - site's median", "", "slope",
+    ),
+    Feature(
         "fast_share", "power at 18-45 Hz over power at 2-14 Hz", "dB", "spectral slope",
         "10 log10 of the ratio of mean densities", "Welch 1967",
     ),
@@ -122,8 +141,14 @@ FEATURES: tuple[Feature, ...] = (
         "10 log10(mean density within 1 Hz / mean density 2-6 Hz away)", "Harris 1978",
     ),
     Feature(
+        "mains_steady", "mains over its flanks, over 5 s", "dB", "line frequency",
+        "median of mains_ratio over the epoch and two either side",
+        "mains lasts; EN 50160 rates it by means of 10 s", "", "mains_ratio",
+    ),
+    Feature(
         "mains_size", "mains amplitude", "uV", "line frequency",
-        "sqrt(2 x power above the flanks)", "a sine of amplitude a has power a^2/2",
+        "sqrt(2 x power above the flanks), 0 if it stands less than 5 dB above them",
+        "a sine of amplitude a has power a^2/2",
     ),
     Feature(
         "mains_harmonic", "second or third harmonic over its flanks", "dB", "line frequency",
@@ -162,6 +187,11 @@ FEATURES: tuple[Feature, ...] = (
         "|site less the sites behind| at the frontal moment", "design of this tool",
     ),
     Feature(
+        "eye_part", "deflection here that fits the eyes", "uV", "frontal polarity",
+        "|what the two eye maps predict here less at the sites behind|",
+        "V = p.r / r^3 at both eyes; Lins et al. 1993 on ocular sources",
+    ),
+    Feature(
         "eye_match", "fit of the field to eye dipoles", "", "frontal polarity",
         "share of the field explained by a vertical and a lateral eye map",
         "V = p.r / r^3 at both eyes; Lins et al. 1993 on ocular sources",
@@ -172,11 +202,11 @@ FEATURE_NAMES: tuple[str, ...] = tuple(feature.name for feature in FEATURES)
 HIDDEN = ("front_size",)
 """Measured only so that its usual value can be known."""
 MEASURED: tuple[str, ...] = (
-    *(feature.name for feature in FEATURES if not feature.usual_of),
+    *(feature.name for feature in FEATURES if not (feature.usual_of or feature.steady_of)),
     *HIDDEN,
 )
 BY_NAME: dict[str, Feature] = {feature.name: feature for feature in FEATURES}
-IN_MICROVOLT = frozenset({"swing", "step", "front_size"})
+IN_MICROVOLT = frozenset({"swing", "step", "burst", "front_size"})
 """Measured in microvolt and compared with its usual value as a ratio in decibel."""
 
 
@@ -218,12 +248,15 @@ def measure(
     found["step_crest"] = 20 * np.log10((size + small) / (mean_step + small))
     found["step_alone"] = 20 * np.log10((size + small) / (steps.elsewhere + small))
     found["step_stays"] = steps.retention
+    found["burst"] = steps.pace.max(axis=2)
 
     psd, freqs = spectral.epoch_spectra(batch)
     found |= _spectral(psd, freqs, conditions)
     found["fast_alone"] = found["fast_power"] - _neighbour_mean(
         found["fast_power"], ok, neighbours
     )
+    fast = np.where(ok, found["fast_power"], np.float32(np.nan))
+    found["fast_lead"] = found["fast_power"] - median_of_known(fast)
 
     slow = spatial.slow_traces(batch)
     covariance = spatial.field_covariance(slow)
@@ -231,6 +264,7 @@ def measure(
     found["isolation"] = spatial.isolation(covariance, neighbours)
     polarity = spatial.frontal_polarity(slow, batch.ok, leads)
     found["eye_reach"] = polarity.reach
+    found["eye_part"] = polarity.part
     front_size = np.fmax(np.abs(polarity.vertical), np.abs(polarity.lateral))
     for name, per_epoch in (
         ("front_vertical", polarity.vertical),
@@ -324,12 +358,23 @@ class FeatureTable:
     front_at: NDArray[np.float16]
 
     def column(self, name: str) -> Array:
-        """One feature of the model, measured or against usual, (n_epochs, n_sites)."""
-        base = BY_NAME[name].usual_of if name in BY_NAME else ""
-        if not base:
-            return self.values[MEASURED.index(name)]
-        row = MEASURED.index(base)
-        return in_decibel(base, self.values[row]) - self.usual[row]
+        """One feature of the model, measured or derived, (n_epochs, n_sites)."""
+        feature = BY_NAME[name]
+        if feature.steady_of:
+            return _steady(self.values[MEASURED.index(feature.steady_of)])
+        if feature.usual_of:
+            row = MEASURED.index(feature.usual_of)
+            return in_decibel(feature.usual_of, self.values[row]) - self.usual[row]
+        return self.values[MEASURED.index(name)]
+
+
+def _steady(values: Array) -> Array:
+    """Median over five epochs, the ends repeated; NaN where one of them is missing."""
+    reach = 2
+    padded = np.pad(values, ((reach, reach), (0, 0)), mode="edge")
+    windows = np.lib.stride_tricks.sliding_window_view(padded, 2 * reach + 1, axis=0)
+    ordered = np.sort(windows, axis=2)
+    return np.where(np.isnan(ordered[:, :, -1]), np.float32(np.nan), ordered[:, :, reach])
 
 
 USUAL_EPOCHS = 3000
@@ -349,7 +394,7 @@ def feature_table(parts: list[Measures]) -> FeatureTable:
     stride = max(1, -(-values.shape[1] // USUAL_EPOCHS))
     usual = np.stack(
         [
-            in_decibel(name, median_over_epochs(values[row, ::stride]))
+            in_decibel(name, median_of_known(values[row, ::stride]))
             for row, name in enumerate(MEASURED)
         ]
     )
@@ -362,7 +407,7 @@ def feature_table(parts: list[Measures]) -> FeatureTable:
     )
 
 
-def median_over_epochs(values: Array) -> Array:
+def median_of_known(values: Array) -> Array:
     """Median over the first axis ignoring NaN; NaN where nothing is left."""
     ordered = np.sort(values, axis=0)
     count = np.isfinite(ordered).sum(axis=0)

@@ -151,6 +151,7 @@ class FrontalPolarity:
     rhythm: Array
     reach: Array
     match: Array
+    part: Array
 
 
 def frontal_polarity(
@@ -183,13 +184,15 @@ def frontal_polarity(
     epochs = np.arange(slow.shape[1] - 2)
     departure = against[:, epochs + 1, at] - usual
     departure = np.where(ok[:, 1:-1], departure, np.float32(np.nan))
+    match, part = _map_fit(departure, leads)
     return FrontalPolarity(
         vertical=v_size,
         lateral=h_size,
         at=(at / np.float32(slow.shape[2])).astype(np.float32),
         rhythm=_rhythm(_three_seconds(vertical[None])[0]),
         reach=np.abs(departure),
-        match=_map_match(departure, leads.maps),
+        match=match,
+        part=part,
     )
 
 
@@ -230,18 +233,25 @@ def _rhythm(three: Array) -> Array:
     return np.where(power > 0, best, np.float32(np.nan)).astype(np.float32)
 
 
-def _map_match(departure: Array, maps: NDArray[np.float64]) -> Array:
-    """Share of the field's variance over the sites that two eye maps explain."""
-    known = np.isfinite(maps).all(axis=0)
-    n_epochs = departure.shape[1]
+def _map_fit(departure: Array, leads: EyeLeads) -> tuple[Array, Array]:
+    """Least squares of the field on two eye maps.
+
+    Returns the share of the field's variance over the sites that they explain,
+    (n_epochs,), and the potential they predict at each site against the sites behind,
+    (n_sites, n_epochs), microvolt.
+    """
+    known = np.isfinite(leads.maps).all(axis=0)
+    n_sites, n_epochs = departure.shape
+    part = np.full((n_sites, n_epochs), np.nan, dtype=np.float32)
     if known.sum() < 4:
-        return np.full(n_epochs, np.nan, dtype=np.float32)
+        return np.full(n_epochs, np.nan, dtype=np.float32), part
+    maps = leads.maps[:, known]
     field = departure[known].T.astype(np.float64)
     there = np.isfinite(field)
     field = np.where(there, field, 0)
     count = np.maximum(there.sum(axis=1, keepdims=True), 1)
     field = np.where(there, field - field.sum(axis=1, keepdims=True) / count, 0)
-    templates = maps[:, known][None] * there[:, None]
+    templates = maps[None] * there[:, None]
     templates = np.where(
         there[:, None],
         templates - templates.sum(axis=2, keepdims=True) / count[:, :, None],
@@ -256,4 +266,8 @@ def _map_match(departure: Array, maps: NDArray[np.float64]) -> Array:
     with np.errstate(divide="ignore", invalid="ignore"):
         share = np.einsum("em,em->e", fitted, moment) / power
     enough = (there.sum(axis=1) >= 4) & (power > 0)
-    return np.where(enough, np.clip(share, 0, 1), np.nan).astype(np.float32)
+    behind = leads.behind[known]
+    far = maps[:, behind].mean(axis=1) if behind.any() else maps.min(axis=1)
+    predicted = np.abs(fitted @ (maps - far[:, None]))
+    part[known] = np.where(enough[:, None], predicted, np.nan).T
+    return np.where(enough, np.clip(share, 0, 1), np.nan).astype(np.float32), part

@@ -31,6 +31,7 @@ HIGHEST_HZ = 200.0
 
 SLOPE_EDGES_HZ = (14.0, 17.0, 20.5, 24.5, 29.5, 35.5, 42.5)
 HIGH_BAND_HZ = (55.0, 95.0)
+LEAST_LINE_DB = 5.0
 FLOOR = np.float32(1e-6)
 """Power density (uV^2/Hz) added before a logarithm: far below any amplifier's noise."""
 
@@ -145,9 +146,12 @@ def spectral_slope(psd: Array, freqs: NDArray[np.float64], *, usable: float) -> 
 def peakedness(psd: Array, freqs: NDArray[np.float64], low: float, high: float) -> Array:
     """Highest bin of a band over the band's mean, decibel.
 
-    A spindle or medication beta makes one narrow peak, muscle a broad rise.
+    A spindle or medication beta makes one narrow peak, muscle a broad rise. NaN if the
+    band is empty, as below a low-pass at 12 Hz.
     """
     band = (freqs >= low) & (freqs <= high)
+    if not band.any():
+        return np.full(psd.shape[:-1], np.nan, dtype=np.float32)
     part = psd[..., band]
     return 10 * np.log10((part.max(axis=-1) + FLOOR) / (part.mean(axis=-1) + FLOOR))
 
@@ -185,13 +189,17 @@ def mains_amplitude(psd: Array, freqs: NDArray[np.float64], *, mains_hz: float) 
     """Amplitude of the mains sine, microvolt (peak).
 
     A sine of amplitude ``a`` adds power ``a^2 / 2``, which the Hann window spreads over the
-    bins within 2 Hz; what the flanks lead one to expect there is taken off first.
+    bins within 2 Hz; what the flanks lead one to expect there is taken off first. 0 where
+    the line stands less than ``LEAST_LINE_DB`` above its flanks: muscle has power there too,
+    and its chance peaks are no mains.
     """
-    _, ring = _core_and_ring(freqs, mains_hz)
+    core, ring = _core_and_ring(freqs, mains_hz)
     wide = (np.abs(freqs - mains_hz) <= 2.01).astype(np.float32)
     spacing = np.float32(freqs[1] - freqs[0])
-    excess = (psd @ wide - (psd @ ring) * wide.sum()) * spacing
-    return np.sqrt(2 * np.maximum(excess, 0))
+    beside = psd @ ring
+    excess = (psd @ wide - beside * wide.sum()) * spacing
+    stands_out = psd @ core > 10 ** (LEAST_LINE_DB / 10) * beside
+    return np.sqrt(2 * np.maximum(np.where(stands_out, excess, 0), 0))
 
 
 def _core_and_ring(freqs: NDArray[np.float64], mains_hz: float) -> tuple[Array, Array]:

@@ -111,7 +111,7 @@ def spike_and_wave(
     wave = -1.1 * _bump(place, 0.12, 0.22) + 0.35 * _bump(place, 0.24, 0.15)
     wave -= 0.9 * _bump(place, 0.6, 1.0)
     wave *= scene.gate(onset, duration, min(0.25, duration / 3))
-    site_map = _map(scene.sites, [-25, 25, 0], [35, 35, 55], 30.0)
+    site_map = _map(scene.sites, [-20, 20, 0, -75, 75], [30, 30, 55, 40, 40], 30.0)
     return _placed(scene, "spike-and-wave", site_map, wave, onset, duration, amplitude_uv)
 
 
@@ -131,7 +131,9 @@ def focal_spike(
         [-75, 75, -50, 50, -85, 85, -145, 145], [-5, -5, 20, 20, 45, 45, 10, 10]
     )
     centre = places[rng.integers(len(places))] + 0.15 * rng.standard_normal(3)
-    site_map = patch_map(scene.sites, centre, spread_deg=14.0, tilt_deg=rng.uniform(0, 40))
+    site_map = patch_map(
+        scene.sites, centre, spread_deg=rng.uniform(14, 25), tilt_deg=rng.uniform(0, 40)
+    )
     return _placed(scene, "focal spike", site_map, wave, onset, duration, amplitude_uv)
 
 
@@ -177,7 +179,7 @@ def vertex_wave(
     wave = 0.2 * _bump(time, 0.12, 0.2) - _bump(time, 0.4, 0.5)
     wave += rng.uniform(0.2, 0.4) * _bump(time, 0.75, 0.5)
     wave *= scene.gate(onset, duration, 0.1 * duration)
-    site_map = _map(scene.sites, [0, 180], [84, 84], 16.0)
+    site_map = _map(scene.sites, [0, 180, -90, 90], [68, 72, 62, 62], 24.0)
     return _placed(scene, "vertex wave", site_map, wave, onset, duration, amplitude_uv)
 
 
@@ -219,8 +221,8 @@ def mu(
     wave = carrier.real + 0.4 * (carrier**2 / np.maximum(np.abs(carrier), 1e-12)).real
     wave *= scene.gate(onset, duration, min(0.3, duration / 3))
     sides = rng.permutation([1.0, rng.uniform(0.2, 0.9)])
-    site_map = sides[0] * _map(scene.sites, [-87], [45], 12.0) + sides[1] * _map(
-        scene.sites, [87], [45], 12.0
+    site_map = sides[0] * _map(scene.sites, [-80, -108], [45, 45], 22.0) + sides[1] * _map(
+        scene.sites, [80, 108], [45, 45], 22.0
     )
     site_map /= np.abs(site_map).max()
     return _placed(scene, "mu", -site_map, wave, onset, duration, amplitude_uv)
@@ -240,7 +242,7 @@ def photic_driving(
         4 * np.pi * rate * time + rng.uniform(0, 6)
     )
     wave *= scene.gate(onset, duration, min(0.3, duration / 3))
-    site_map = _map(scene.sites, [-160, 160], [8, 8], 14.0)
+    site_map = _map(scene.sites, [-150, 150, 180], [5, 5, 20], 20.0)
     return _placed(scene, "photic driving", site_map, wave, onset, duration, amplitude_uv)
 
 

@@ -37,6 +37,8 @@ class Examples:
     strength : array, shape (n_rows, n_kinds), float32
         Size of the artifact at the cell (see ``simulated.py``), 0 where there is none,
         NaN where unknown.
+    look_alike : array, shape (n_rows,), str
+        Cerebral pattern that was put into this second, or "".
     """
 
     features: NDArray[np.float32]
@@ -46,6 +48,7 @@ class Examples:
     origin: NDArray[np.str_]
     condition: NDArray[np.str_]
     strength: NDArray[np.float32]
+    look_alike: NDArray[np.str_]
 
     def __len__(self) -> int:
         return len(self.features)
@@ -65,6 +68,7 @@ def from_table(
     person: str,
     origin: str,
     condition: str = "",
+    look_alike: NDArray[np.str_] | None = None,
 ) -> Examples:
     """Rows of one recording.
 
@@ -72,18 +76,22 @@ def from_table(
     ----------
     table : FeatureTable
     truth, strength : arrays, shape (n_kinds, n_epochs, n_sites)
+    look_alike : array, shape (n_epochs,), optional
     """
     known = np.isfinite(table.values[0])
     features = np.stack([table.column(name)[known] for name in FEATURE_NAMES], axis=1)
     n_rows = len(features)
+    second = np.nonzero(known)[0].astype(np.int64)
+    patterns = np.full(len(known), "") if look_alike is None else look_alike
     return Examples(
         features=features.astype(np.float32),
         truth=np.stack([truth[k][known] for k in range(len(KIND_NAMES))], axis=1),
         person=np.full(n_rows, person),
-        second=np.nonzero(known)[0].astype(np.int64),
+        second=second,
         origin=np.full(n_rows, origin),
         condition=np.full(n_rows, condition),
         strength=np.stack([strength[k][known] for k in range(len(KIND_NAMES))], axis=1),
+        look_alike=patterns[second],
     )
 
 

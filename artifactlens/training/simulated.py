@@ -157,7 +157,7 @@ def simulate(
         kind: draw_artifact(kind, scene, rng, situation.line, len(reference))
         for kind in kinds
     }
-    patterns = draw_look_alikes(scene, rng)
+    patterns, happenings = draw_look_alikes(scene, rng)
 
     recorder = _Recorder(situation, background, sfreq)
     fields = {kind: recorder(field) for kind, field in put_in.items()}
@@ -196,6 +196,7 @@ def simulate(
         person=background.person,
         origin=f"simulated: {background.origin}",
         condition=situation.words(),
+        look_alike=_pattern_per_epoch(happenings, measured.grid.onset),
     )
 
 
@@ -336,7 +337,7 @@ def _muscles(scene: Scene, rng: np.random.Generator) -> list[Simulated]:
                 scene, rng, name, onset,
                 float(np.exp(rng.uniform(np.log(low), np.log(high)))),
                 rms_uv=size * float(rng.uniform(0.6, 1.5)), sides=sides,
-                units=int(rng.choice([4, 10, 20])),
+                units=int(rng.choice([2, 4, 10, 20])),
             )
             for onset in _moments(rng, length, rate)
         ]  # fmt: skip
@@ -384,11 +385,17 @@ def _mains(
     return [made]
 
 
-def draw_look_alikes(scene: Scene, rng: np.random.Generator) -> Array:
-    """Patterns of the brain that are no artifact, in half of the copies."""
+def draw_look_alikes(
+    scene: Scene, rng: np.random.Generator
+) -> tuple[Array, list[tuple[str, float, float]]]:
+    """Patterns of the brain that are no artifact, in half of the copies.
+
+    Returns their potentials and what was put in: (name, onset, end), seconds.
+    """
     field = np.zeros((scene.n_sites, scene.n_samples))
+    happenings: list[tuple[str, float, float]] = []
     if rng.random() < 0.5:
-        return field
+        return field, happenings
     for name in rng.choice(list(LOOK_ALIKES), int(rng.integers(1, 4)), replace=False):
         pattern = LOOK_ALIKES[str(name)]
         for onset in _moments(rng, scene.length, 4.0):
@@ -398,7 +405,17 @@ def draw_look_alikes(scene: Scene, rng: np.random.Generator) -> Array:
             if duration >= 0.1:
                 size = float(rng.uniform(*pattern.amplitude_uv))
                 field += pattern.make(scene, rng, onset, duration, size).potentials
-    return field
+                happenings.append((str(name), onset, onset + duration))
+    return field, happenings
+
+
+def _pattern_per_epoch(
+    happenings: list[tuple[str, float, float]], onset: NDArray[np.float64]
+) -> NDArray[np.str_]:
+    patterns = np.full(len(onset), "", dtype="U40")
+    for name, begin, end in happenings:
+        patterns[(onset < end) & (onset + 1 > begin)] = name
+    return patterns
 
 
 def _montage(

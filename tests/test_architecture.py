@@ -1,0 +1,229 @@
+"""The import arrows of the design: what a module may know of the others."""
+
+import ast
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+import artifactlens
+
+ROOT = Path(artifactlens.__file__).parent
+FILES = {
+    ".".join(path.relative_to(ROOT).with_suffix("").parts).removesuffix(".__init__"): path
+    for path in sorted(ROOT.rglob("*.py"))
+}
+PACKAGE = FILES.pop("__init__")
+LONGEST = 450
+
+HEAVY = ("mne", "sklearn", "scipy.signal", "rich")
+"""Too slow to import for a command that only prints its help."""
+
+
+def imports_of(path):
+    """Full names of all that a file imports, inside functions and for typing too."""
+    names = set()
+    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.Import):
+            names |= {alias.name for alias in node.names}
+        elif isinstance(node, ast.ImportFrom):
+            assert node.level == 0, f"{path.name} has a relative import"
+            names |= {f"{node.module}.{alias.name}" for alias in node.names}
+    return names
+
+
+def modules_of(path):
+    """Modules of this package that a file imports, by their names within it."""
+    found = set()
+    for name in imports_of(path):
+        head, _, inner = name.partition(".")
+        if head != "artifactlens":
+            continue
+        while inner and inner not in FILES:  # cut off the imported object
+            inner = inner.rpartition(".")[0]
+        if inner:
+            found.add(inner)
+    return found
+
+
+ARROWS = {name: modules_of(path) for name, path in FILES.items()}
+
+
+def part_of(name, *packages):
+    return any(name == package or name.startswith(f"{package}.") for package in packages)
+
+
+def reached_from(name):
+    """All modules that a module needs, directly or by way of others."""
+    seen, waiting = set(), [name]
+    while waiting:
+        for other in ARROWS[waiting.pop()] - seen:
+            seen.add(other)
+            waiting.append(other)
+            if "." in other:  # importing a module runs its package first
+                waiting.append(other.rpartition(".")[0])
+    return seen
+
+
+def test_the_arrows_are_read_as_they_stand():
+    assert "epochs" in ARROWS["pipeline"]
+    assert "features.spatial" in ARROWS["pipeline"]
+    assert "page.traces" in ARROWS["closeups"]
+    assert "simulation.head" in reached_from("demo")
+    assert ARROWS["errors"] == set()
+
+
+def test_nothing_imports_the_command_line():
+    users = {name for name, arrows in ARROWS.items() if "cli" in arrows}
+    assert users == {"__main__"}
+
+
+@pytest.mark.parametrize(
+    ("name", "allowed"), [("errors", set()), ("kinds", {"errors"}), ("result", {"errors"})]
+)
+def test_the_ground_stands_on_nothing_but_errors(name, allowed):
+    assert ARROWS[name] <= allowed
+
+
+@pytest.mark.parametrize("entry", ["pipeline", "triage", "closeups", "features"])
+def test_the_pipeline_needs_neither_training_nor_simulation(entry):
+    found = {
+        name for name in reached_from(entry) if part_of(name, "training", "simulation")
+    }
+    assert found == set()
+
+
+def test_only_training_and_the_demo_know_of_the_simulation():
+    users = {
+        name
+        for name, arrows in ARROWS.items()
+        if any(part_of(other, "simulation") for other in arrows)
+        and not part_of(name, "simulation")
+    }
+    assert {name for name in users if not part_of(name, "training")} <= {"demo"}
+
+
+def test_only_training_knows_of_training():
+    users = {
+        name
+        for name, arrows in ARROWS.items()
+        if any(part_of(other, "training") for other in arrows)
+    }
+    assert all(part_of(name, "training") for name in users)
+
+
+def test_the_simulation_knows_nothing_of_what_judges_it():
+    judging = (
+        "features",
+        "curves",
+        "evidence",
+        "triage",
+        "segments",
+        "pipeline",
+        "training",
+    )
+    for name, arrows in ARROWS.items():
+        if part_of(name, "simulation"):
+            assert not [other for other in arrows if part_of(other, *judging)], name
+
+
+LATER = ("curves", "evidence", "triage", "result", "pipeline", "export", "page", "sitecare",
+         "segments", "closeups", "assessable", "cli")  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    "early", ["recording", "sites", "frames", "epochs", "survey", "features"]
+)
+def test_what_measures_does_not_know_what_is_made_of_it(early):
+    for name in FILES:
+        if part_of(name, early):
+            later = {other for other in ARROWS[name] if part_of(other, *LATER)}
+            assert later == set(), name
+
+
+@pytest.mark.parametrize("package", ["export", "page"])
+def test_outputs_read_only_the_result(package):
+    for name in FILES:
+        if part_of(name, package):
+            foreign = {
+                other
+                for other in ARROWS[name]
+                if not part_of(other, package)
+                and other not in ("result", "kinds", "errors")
+            }
+            assert foreign == set(), name
+
+
+def test_the_stages_follow_one_another():
+    order = ("recording", "frames", "epochs", "features", "curves", "evidence", "triage",
+             "pipeline", "cli")  # fmt: skip
+    for place, name in enumerate(order):
+        behind = order[place + 1 :]
+        for member in FILES:
+            if part_of(member, name):
+                wrong = {other for other in ARROWS[member] if part_of(other, *behind)}
+                # A type of a later stage that is only named in a signature is none either.
+                assert wrong == set(), member
+
+
+def test_no_module_needs_itself():
+    for name in FILES:
+        assert name not in reached_from(name) - {name.rpartition(".")[0]}, name
+
+
+@pytest.mark.parametrize("package", ["click", "rich"])
+def test_only_the_command_line_knows_the_terminal(package):
+    users = {
+        name
+        for name, path in FILES.items()
+        if any(found.split(".")[0] == package for found in imports_of(path))
+    }
+    assert users <= {"cli"}
+
+
+def heavy_after(code):
+    run = subprocess.run(
+        [sys.executable, "-c", f"{code}\nimport sys\nprint('LOADED', *sys.modules)"],
+        capture_output=True,
+        text=True,
+        check=True,
+        cwd=ROOT.parent,
+    )
+    loaded = set(run.stdout.rpartition("LOADED")[2].split())
+    return loaded, run.stdout
+
+
+def test_importing_the_package_loads_nothing_heavy():
+    loaded, _ = heavy_after("import artifactlens")
+    assert not loaded & {*HEAVY, "numpy", "scipy", "click"}
+
+
+def test_printing_help_loads_nothing_heavy():
+    loaded, printed = heavy_after(
+        "from artifactlens.cli import main\n"
+        "try:\n    main(['--help'])\nexcept SystemExit:\n    pass"
+    )
+    assert "Usage:" in printed
+    assert "artifactlens.cli" in loaded
+    assert not loaded & {*HEAVY, "numpy", "scipy"}
+
+
+def test_importing_the_pipeline_loads_no_training_library():
+    loaded, _ = heavy_after("import artifactlens.pipeline")
+    assert "artifactlens.features" in loaded
+    assert not loaded & set(HEAVY)
+
+
+@pytest.mark.parametrize("name", sorted(FILES))
+def test_every_module_is_read_in_one_sitting(name):
+    lines = FILES[name].read_text(encoding="utf-8").count("\n")
+    assert lines < LONGEST, f"{name} has {lines} lines"
+
+
+@pytest.mark.parametrize("name", sorted(FILES))
+def test_no_module_star_imports_or_asserts(name):
+    for node in ast.walk(ast.parse(FILES[name].read_text(encoding="utf-8"))):
+        assert not isinstance(node, ast.Assert), f"line {node.lineno}"
+        if isinstance(node, ast.ImportFrom):
+            assert all(alias.name != "*" for alias in node.names)

@@ -1,0 +1,301 @@
+"""The model as step curves: what an edge belongs to, exact sums, and refusing damage."""
+
+import copy
+import hashlib
+import json
+import math
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from artifactlens.curves import MODEL_VERSION, Curve, Head, Model, load_model, logistic
+from artifactlens.errors import ModelError
+from artifactlens.features import (
+    FEATURE_NAMES,
+    MEASURED,
+    FeatureTable,
+    feature_table_sha256,
+)
+from artifactlens.kinds import KIND_NAMES
+
+
+def body():
+    """A small model: three curves per kind."""
+    rng = np.random.default_rng(4)
+    heads = {}
+    for kind in KIND_NAMES:
+        curves = {}
+        for name in ("swing", "step_rise", "slope"):
+            edges = np.sort(rng.choice(np.arange(-30, 60), 4, replace=False) + 0.5)
+            curves[name] = {
+                "edges": edges.tolist(),
+                "values": rng.normal(size=5).round(3).tolist(),
+                "missing": -0.25,
+            }
+        heads[kind] = {
+            "base": -2.0,
+            "curves": curves,
+            "calibration": {"slope": 1.5, "offset": 0.5},
+            "sure": 0.9,
+            "doubtful": 0.4,
+        }
+    return {
+        "model_version": MODEL_VERSION,
+        "feature_table_sha256": feature_table_sha256(),
+        "name": "small",
+        "heads": heads,
+        "training": {"corpora": ["invented"], "seed": 4},
+    }
+
+
+def written(tmp_path, content):
+    path = tmp_path / "model.json"
+    path.write_text(content if isinstance(content, str) else json.dumps(content))
+    return path
+
+
+def table_of(values, usual=None):
+    values = np.asarray(values, dtype=np.float32)
+    n_epochs, n_sites = values.shape[1:]
+    return FeatureTable(
+        values=values,
+        usual=np.zeros((len(MEASURED), n_sites), np.float32) if usual is None else usual,
+        pace=np.zeros((n_epochs, n_sites, 10), np.float16),
+        step_at=np.zeros((n_epochs, n_sites), np.float16),
+        front_at=np.zeros(n_epochs, np.float16),
+    )
+
+
+# One curve -----------------------------------------------------------------------------
+
+
+def test_steps_are_closed_on_the_right():
+    curve = Curve(np.array([0.0, 1.0]), np.array([10.0, 20.0, 30.0]), -1.0)
+    just = np.nextafter
+    x = np.array([-np.inf, -5, 0.0, just(0.0, 1), 0.5, 1.0, just(1.0, 2), 99, np.inf])
+    np.testing.assert_array_equal(curve(x), [10, 10, 10, 20, 20, 20, 30, 30, 30])
+
+
+def test_what_is_missing_has_its_own_value_and_any_shape_will_do():
+    curve = Curve(np.array([0.0]), np.array([1.0, 2.0]), -7.0)
+    found = curve(np.array([[np.nan, -1.0], [1.0, np.nan]]))
+    np.testing.assert_array_equal(found, [[-7, 1], [2, -7]])
+    assert curve(np.float64("nan")) == -7.0
+    assert curve(np.zeros((0, 3))).shape == (0, 3)
+
+
+def test_a_curve_without_edges_is_a_constant():
+    curve = Curve(np.zeros(0), np.array([3.0]), -1.0)
+    np.testing.assert_array_equal(curve(np.array([-9.0, 9.0, np.nan])), [3, 3, -1])
+
+
+def test_float32_measurements_meet_float64_edges_as_the_numbers_they_are():
+    # float32(0.1) is 0.100000001...: it lies above an edge at 0.1.
+    curve = Curve(np.array([0.1]), np.array([0.0, 1.0]), 0.0)
+    assert curve(np.array([np.float32(0.1)]))[0] == 1.0
+    assert curve(np.array([0.1]))[0] == 0.0
+
+
+# The model -----------------------------------------------------------------------------
+
+VALUES = st.sampled_from([-3.0, -1.0, 0.0, 0.5, 1.0, 2.5, float("nan"), float("inf")])
+EDGES = st.lists(
+    st.sampled_from([-3.0, -1.0, 0.0, 0.5, 0.75, 2.5]), unique=True, max_size=5
+).map(sorted)
+NAMES = ("swing", "swing_rise", "step", "slope", "spread")
+
+
+@st.composite
+def models(draw):
+    heads = []
+    for kind in KIND_NAMES:
+        curves = {}
+        for name in draw(st.sets(st.sampled_from(NAMES))):
+            edges = draw(EDGES)
+            steps = st.floats(-5, 5, allow_nan=False)
+            values = draw(st.lists(steps, min_size=len(edges) + 1, max_size=len(edges) + 1))
+            curves[name] = Curve(np.array(edges, float), np.array(values), draw(steps))
+        heads.append(Head(kind, draw(st.floats(-5, 5)), curves, 0.9, 0.5))
+    return Model("drawn", "", tuple(heads), {})
+
+
+@settings(max_examples=80, deadline=None)
+@given(model=models(), data=st.data())
+def test_scores_are_the_base_plus_all_curves_and_contributions_add_up_to_them(model, data):
+    n_epochs, n_sites = data.draw(st.integers(1, 4)), data.draw(st.integers(1, 3))
+    values = np.zeros((len(MEASURED), n_epochs, n_sites), dtype=np.float32)
+    for name in set(NAMES) & set(MEASURED):
+        values[MEASURED.index(name)] = np.reshape(
+            data.draw(
+                st.lists(VALUES, min_size=n_epochs * n_sites, max_size=n_epochs * n_sites)
+            ),
+            (n_epochs, n_sites),
+        )
+    table = table_of(np.where(np.isinf(values) & (values < 0), 0, values))
+    scores = model.scores(table)
+    assert scores.shape == (4, n_epochs, n_sites)
+    for row, head in enumerate(model.heads):
+        expected = np.full((n_epochs, n_sites), head.base)
+        for name, curve in head.curves.items():
+            column = table.column(name)
+            for epoch in range(n_epochs):
+                for site in range(n_sites):
+                    x = float(column[epoch, site])
+                    step = sum(edge < x for edge in curve.edges)
+                    expected[epoch, site] += (
+                        curve.missing if math.isnan(x) else curve.values[step]
+                    )
+        np.testing.assert_allclose(scores[row], expected, atol=1e-9)
+        measured = {name: table.column(name).astype(float) for name in FEATURE_NAMES}
+        parts = model.contributions(head.kind, measured)
+        assert parts.shape == (len(FEATURE_NAMES), n_epochs, n_sites)
+        np.testing.assert_allclose(head.base + parts.sum(axis=0), scores[row], atol=1e-9)
+
+
+def test_contributions_stand_in_the_order_of_the_feature_table_and_unused_ones_are_0():
+    curve = Curve(np.array([0.0]), np.array([1.0, 2.0]), 0.5)
+    heads = tuple(Head(kind, 0.0, {"slope": curve}, 0.9, 0.5) for kind in KIND_NAMES)
+    parts = Model("one", "", heads, {}).contributions(
+        "pop", {name: np.array([1.0]) for name in FEATURE_NAMES}
+    )
+    expected = np.zeros((len(FEATURE_NAMES), 1))
+    expected[FEATURE_NAMES.index("slope")] = 2.0
+    np.testing.assert_array_equal(parts, expected)
+
+
+def test_logistic_is_exact_and_does_not_overflow():
+    x = np.array([0.0, math.log(3), -math.log(3), 800.0, -800.0, np.inf, -np.inf])
+    np.testing.assert_allclose(logistic(x), [0.5, 0.75, 0.25, 1, 0, 1, 0], atol=1e-12)
+    assert np.isnan(logistic(np.array([np.nan])))[0]
+
+
+# Loading -------------------------------------------------------------------------------
+
+
+def test_a_model_is_loaded_with_its_calibration_worked_in(tmp_path):
+    raw = body()
+    path = written(tmp_path, raw)
+    model = load_model(path)
+    assert model.name == "small"
+    assert model.sha256 == hashlib.sha256(path.read_bytes()).hexdigest()
+    assert model.training == raw["training"]
+    assert [head.kind for head in model.heads] == list(KIND_NAMES)
+    for head in model.heads:
+        entry = raw["heads"][head.kind]
+        assert head.base == 0.5 + 1.5 * -2.0
+        assert (head.sure, head.doubtful) == (0.9, 0.4)
+        for name, curve in head.curves.items():
+            np.testing.assert_array_equal(curve.edges, entry["curves"][name]["edges"])
+            np.testing.assert_allclose(
+                curve.values, 1.5 * np.array(entry["curves"][name]["values"])
+            )
+            assert curve.missing == 1.5 * -0.25
+
+
+def test_calibrated_scores_are_slope_times_raw_scores_plus_offset(tmp_path):
+    raw = body()
+    plain = copy.deepcopy(raw)
+    for entry in plain["heads"].values():
+        entry["calibration"] = {"slope": 1.0, "offset": 0.0}
+    values = np.random.default_rng(1).normal(size=(len(MEASURED), 6, 3), scale=30)
+    values[:, 2, 1] = np.nan
+    table = table_of(values)
+    calibrated = load_model(written(tmp_path, raw)).scores(table)
+    uncalibrated = load_model(written(tmp_path, plain)).scores(table)
+    np.testing.assert_allclose(calibrated, 1.5 * uncalibrated + 0.5, atol=1e-12)
+
+
+def changed(path, value):
+    """A model body in which the entry at ``path`` has another value."""
+    raw = body()
+    entry = raw
+    for key in path[:-1]:
+        entry = entry[key]
+    if value is KeyError:
+        del entry[path[-1]]
+    else:
+        entry[path[-1]] = value
+    return raw
+
+
+SWING = ("heads", "eye", "curves", "swing")
+
+
+@pytest.mark.parametrize(
+    ("path", "value", "words"),
+    [
+        (("model_version",), 2, "reads models of version 1; the file has version 2"),
+        (("model_version",), "1", "the file has version '1'"),
+        (("feature_table_sha256",), "0" * 64, "another feature table"),
+        (("feature_table_sha256",), None, "another feature table"),
+        ((*SWING, "edges"), [1, 2, 2, 3], "swing needs rising edges"),
+        ((*SWING, "edges"), [1, 3, 2, 4], "swing needs rising edges"),
+        ((*SWING, "edges"), [1, 2, 3], "one value more than edges"),
+        ((*SWING, "edges"), [[1], [2], [3], [4]], "swing needs rising edges"),
+        ((*SWING, "values"), [1, 2, 3, 4, 5, 6], "one value more than edges"),
+        ((*SWING, "values"), [1, 2, float("nan"), 4, 5], "swing holds a number that is not"),
+        ((*SWING, "values"), [1, 2, float("inf"), 4, 5], "swing holds a number that is not"),
+        ((*SWING, "edges"), [1, 2, 3, float("inf")], "swing holds a number that is not"),
+        ((*SWING, "edges"), [1, 2, float("nan"), 4], "swing holds a number that is not"),
+        ((*SWING, "missing"), float("nan"), "swing holds a number that is not"),
+        ((*SWING, "missing"), None, "damaged"),
+        ((*SWING, "missing"), KeyError, "damaged: 'missing'"),
+        ((*SWING, "values"), "abc", "damaged"),
+        ((*SWING, "values"), [1, 2, "x", 4, 5], "damaged"),
+        ((*SWING, "values"), [1, 2, 10**400, 4, 5], "damaged"),
+        (("heads", "pop"), KeyError, "damaged: 'pop'"),
+        (("heads",), KeyError, "damaged: 'heads'"),
+        (("heads",), [], "damaged"),
+        (("heads", "pop", "curves", "sneeze"), {"edges": [], "values": [0], "missing": 0},
+         "unknown features .'sneeze'."),
+        (("heads", "pop", "sure"), 0.3, "pop are not 0 < doubtful <= sure < 1"),
+        (("heads", "pop", "sure"), 1.0, "pop are not 0 < doubtful <= sure < 1"),
+        (("heads", "pop", "doubtful"), 0.0, "pop are not 0 < doubtful <= sure < 1"),
+        (("heads", "pop", "doubtful"), float("nan"), "pop are not 0 < doubtful <= sure"),
+        (("heads", "pop", "base"), float("nan"), "calibration of pop is not finite"),
+        (("heads", "pop", "base"), float("inf"), "calibration of pop is not finite"),
+        (("heads", "pop", "calibration", "slope"), 0, "calibration of pop is not finite"),
+        (("heads", "pop", "calibration", "slope"), -1, "finite and rising"),
+        (("heads", "pop", "calibration", "offset"), float("nan"), "not finite"),
+        (("heads", "pop", "calibration"), KeyError, "damaged: 'calibration'"),
+        (("training",), KeyError, "damaged: 'training'"),
+        (("name",), KeyError, "damaged: 'name'"),
+    ],
+)  # fmt: skip
+def test_damage_is_refused_in_words(tmp_path, path, value, words):
+    broken = written(tmp_path, changed(path, value))
+    with pytest.raises(ModelError, match=words) as caught:
+        load_model(broken)
+    assert caught.value.remedy
+
+
+@pytest.mark.parametrize("text", ["", "{", "[1, 2]", "null", '"model"', "PK\x03\x04", "{}"])
+def test_what_is_no_model_is_refused_in_words(tmp_path, text):
+    with pytest.raises(ModelError, match="damaged"):
+        load_model(written(tmp_path, text))
+
+
+def test_bytes_that_are_no_text_are_refused_in_words(tmp_path):
+    path = tmp_path / "model.json"
+    path.write_bytes(b"\x80\x04\x95\xff\xfe")
+    with pytest.raises(ModelError, match="damaged"):
+        load_model(path)
+
+
+def test_json_nested_without_end_is_refused_in_words(tmp_path):
+    with pytest.raises(ModelError, match="damaged"):
+        load_model(written(tmp_path, "[" * 200_000))
+
+
+def test_a_missing_file_is_told_with_what_to_do(tmp_path):
+    with pytest.raises(ModelError, match="cannot be read") as caught:
+        load_model(tmp_path / "nowhere.json")
+    assert "nowhere.json" in caught.value.problem
+    assert "Install artifactlens again" in caught.value.remedy
+
+
+def test_a_folder_is_no_model(tmp_path):
+    with pytest.raises(ModelError, match="cannot be read"):
+        load_model(tmp_path)
