@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from artifactlens.features import mains_is_carried
+from artifactlens.features.spectral import LINE_MARGIN_HZ
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import Assessment
 
@@ -128,12 +129,12 @@ def _mains(conditions: Conditions) -> list[tuple[str, str]]:
     line = 60 if conditions.line_frequency > 55 else 50
     if mains_is_carried(conditions):
         return []
-    if line + 6 > conditions.sampling_rate / 2 + 0.51:
+    if line + LINE_MARGIN_HZ > conditions.sampling_rate / 2:
         return [
             (
                 "no",
-                f"sampled at {conditions.sampling_rate:g} Hz, which carries "
-                f"{conditions.sampling_rate / 2:g} Hz at most",
+                f"sampled at {conditions.sampling_rate:g} Hz: {line} Hz is above or too near "
+                f"its limit of {conditions.sampling_rate / 2:g} Hz",
             )
         ]
     if conditions.notch is not None:

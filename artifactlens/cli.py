@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import json
+import os
+import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
@@ -16,9 +18,15 @@ if TYPE_CHECKING:
     from artifactlens.pipeline import Progress
     from artifactlens.result import Result
 
+Report = dict[str, Any]
+"""What is said of one recording: the entry of the JSON document."""
+
 EXIT_HELP = (
     "Exit codes: 0 done; 1 some recording failed, the others are done; 2 wrong usage."
 )
+NAMES_IN_SUMMARY = 10
+_HANG = 12
+"""Width of the first column: 'not judged' and two blanks."""
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]}, epilog=EXIT_HELP)
@@ -43,18 +51,23 @@ _LINE = click.option(
     type=click.Choice(["auto", "50", "60"]),
     default="auto",
     show_default=True,
-    help="Mains frequency in hertz; found by itself if not given.",
+    help="Mains frequency in hertz; auto finds it by itself.",
 )
-_QUIET = click.option("--quiet", is_flag=True, help="Print nothing but errors.")
-_JSON = click.option("--json", "as_json", is_flag=True, help="Print one JSON document.")
+_QUIET = click.option(
+    "--quiet", is_flag=True, help="No progress and no tables: print errors only."
+)
+_JSON = click.option(
+    "--json", "as_json", is_flag=True, help="Print one JSON document instead of tables."
+)
 
 
-@main.command(epilog=EXIT_HELP)
+@main.command(epilog=EXIT_HELP, short_help="Mark the artifacts of EEG recordings.")
 @click.argument("recordings", nargs=-1, required=True, metavar="RECORDING...")
 @click.option(
     "--out",
     type=click.Path(path_type=Path),
-    help="Folder for the results; NAME.triage is made in it. Default: beside each recording.",
+    metavar="DIR",
+    help="Make the folders NAME.triage in DIR; without it, beside each recording.",
 )
 @_MARK
 @_LINE
@@ -71,30 +84,30 @@ def triage(
     """Mark eye, muscle, electrode-pop and mains artifact in EEG recordings.
 
     For x.edf the folder x.triage holds the flags (flags.tsv), EDF+ marks that open beside
-    the recording (x_marks.edf), the report (report.html) and the rest. Reads EDF, EDF+,
-    BDF, BrainVision, EEGLAB, FIF and other formats that mne reads.
+    the recording (x_marks.edf), the report (report.html) and the rest; results of an
+    earlier run are replaced. Reads EDF, EDF+, BDF, BrainVision, EEGLAB, FIF and other
+    formats that mne reads. A name that begins with a hyphen is given as ./-name.edf.
     """
-    reports = _triage_all(
-        [Path(name) for name in recordings], out, mark, line_frequency, quiet
-    )
-    _finish(reports, quiet, as_json)
+    paths = [Path(name) for name in recordings]
+    _finish(_triage_all(paths, out, mark, line_frequency, quiet, as_json), as_json, quiet)
 
 
-@main.command(epilog=EXIT_HELP)
+@main.command(epilog=EXIT_HELP, short_help="Try it on an invented recording.")
 @click.argument(
     "folder",
     required=False,
     type=click.Path(path_type=Path),
     default=Path("artifactlens-demo"),
+    metavar="[DIR]",
 )
 @_MARK
 @_QUIET
 @_JSON
 def demo(folder: Path, mark: str, quiet: bool, as_json: bool) -> None:
-    """Write an invented recording to FOLDER and triage it.
+    """Write an invented recording into DIR and triage it.
 
     The recording is made up, with artifacts and brain rhythms at known times; no person
-    was recorded. FOLDER is artifactlens-demo if not given.
+    was recorded. DIR is artifactlens-demo if not given.
     """
     from artifactlens.demo import write_demo
     from artifactlens.errors import ArtifactlensError
@@ -104,100 +117,82 @@ def demo(folder: Path, mark: str, quiet: bool, as_json: bool) -> None:
         probe_folder(folder)
         path = write_demo(folder)
     except ArtifactlensError as error:
-        _finish([_failure(folder, error.problem, error.remedy)], quiet, as_json)
-        return
+        _finish([_failure(folder, error.problem, error.remedy)], as_json, quiet)
     if not (quiet or as_json):
-        click.echo(f"Wrote {path}: an invented recording, no person was recorded.\n")
-    _finish(_triage_all([path], None, mark, "auto", quiet), quiet, as_json)
+        _echo(f"Wrote {path}: an invented recording, no person was recorded.\n")
+    _finish(_triage_all([path], None, mark, "auto", quiet, as_json), as_json, quiet)
 
 
 def _triage_all(
-    paths: list[Path], out: Path | None, mark: str, line_frequency: str, quiet: bool
-) -> list[dict[str, Any]]:
-    from artifactlens.errors import ArtifactlensError
-    from artifactlens.pipeline import default_folder, triage_to_folder
+    paths: list[Path],
+    out: Path | None,
+    mark: str,
+    line_frequency: str,
+    quiet: bool,
+    as_json: bool,
+) -> list[Report]:
+    """Triage one after the other and print each when it is done."""
+    from artifactlens.pipeline import default_folder
 
-    reports: list[dict[str, Any]] = []
-    taken: dict[Path, Path] = {}
+    reports = []
     line = None if line_frequency == "auto" else float(line_frequency)
-    with _progress(len(paths), quiet) as step:
-        for path in paths:
-            folder = (
-                default_folder(path) if out is None else out / default_folder(path).name
+    # The same file given twice, as by two patterns of the shell, is triaged once.
+    once = list({os.path.realpath(path): path for path in reversed(paths)}.values())[::-1]
+    taken: dict[str, Path] = {}
+    for number, path in enumerate(once, start=1):
+        folder = default_folder(path) if out is None else out / default_folder(path).name
+        first = taken.setdefault(os.path.realpath(folder), path)
+        result = None
+        if first is not path:
+            report = _failure(
+                path,
+                f"{folder} would hold the results of both {first} and {path}.",
+                "Triage them in two calls with different --out folders.",
             )
-            if folder.absolute() in taken:
-                first = taken[folder.absolute()]
-                reports.append(
-                    _failure(
-                        path,
-                        f"{folder} would hold the results of both {first} and {path}.",
-                        "Triage them in two calls with different --out folders.",
-                    )
-                )
-                continue
-            taken[folder.absolute()] = path
-            try:
-                result, written = triage_to_folder(
-                    path, folder, mark=mark, line_frequency=line, progress=step(path.name)
-                )
-            except ArtifactlensError as error:
-                reports.append(_failure(path, error.problem, error.remedy))
-            except Exception as error:
-                reports.append(
-                    _failure(
-                        path,
-                        f"An error that artifactlens does not know: {type(error).__name__}.",
-                        "Please report it with the format and size of the recording; run "
-                        "Python's artifactlens.triage(path) to see where it happened.",
-                    )
-                )
-            else:
-                reports.append(
-                    {"recording": str(path), "status": "done", "folder": str(written),
-                     "result": result}
-                )  # fmt: skip
+        else:
+            place = f"{number} of {len(once)}  {path.name}" if len(once) > 1 else path.name
+            with _progress(place, quiet) as progress:
+                report, result = _triage_one(path, folder, mark, line, progress)
+        reports.append(report)
+        if result is None:
+            _print_failure(report)
+        elif not (quiet or as_json):
+            _print_result(result, report)
     return reports
 
 
-def _failure(path: Path, problem: str, remedy: str) -> dict[str, Any]:
-    return {
-        "recording": str(path), "status": "failed", "problem": problem, "remedy": remedy,
-    }  # fmt: skip
+def _triage_one(
+    path: Path,
+    folder: Path,
+    mark: str,
+    line_frequency: float | None,
+    progress: Progress | None,
+) -> tuple[Report, Result | None]:
+    from artifactlens.errors import ArtifactlensError
+    from artifactlens.pipeline import triage_to_folder
 
-
-def _finish(reports: list[dict[str, Any]], quiet: bool, as_json: bool) -> None:
-    """Print what was done and leave with the exit code that says it."""
-    from artifactlens.result import CAUTION
-
-    failed = [report for report in reports if report["status"] == "failed"]
-    if as_json:
-        body = {"caution": CAUTION, "recordings": [_plain(report) for report in reports]}
-        click.echo(json.dumps(body, indent=1, ensure_ascii=False))
-    elif not quiet:
-        for report in reports:
-            if report["status"] == "done":
-                _print_result(report["result"], report["folder"])
-        if len(failed) < len(reports):
-            click.echo(CAUTION)
-    for report in failed:
-        click.echo(
-            f"{report['recording']}: {report['problem']} {report['remedy']}", err=True
+    try:
+        result, written = triage_to_folder(
+            path, folder, mark=mark, line_frequency=line_frequency, progress=progress
         )
-    if len(reports) > 1 and failed:
-        click.echo(
-            f"{len(failed)} of {len(reports)} recordings failed; the others are done.",
-            err=True,
+    except ArtifactlensError as error:
+        return _failure(path, error.problem, error.remedy), None
+    except Exception as error:
+        problem = f"An error that artifactlens does not know: {type(error).__name__}."
+        remedy = (
+            "Please report it with the format and size of the recording; run Python's "
+            "artifactlens.triage(path) to see where it happened."
         )
-    raise SystemExit(1 if failed else 0)
+        return _failure(path, problem, remedy), None
+    return _success(path, written, result), result
 
 
-def _plain(report: dict[str, Any]) -> dict[str, Any]:
-    if "result" not in report:
-        return report
-    result: Result = report["result"]
+def _success(path: Path, folder: Path, result: Result) -> Report:
     counts = result.flag_counts()
     return {
-        **{key: value for key, value in report.items() if key != "result"},
+        "recording": str(path),
+        "status": "done",
+        "folder": str(folder),
         "seconds": result.recording.duration,
         "kinds": {
             entry.kind: {
@@ -212,77 +207,165 @@ def _plain(report: dict[str, Any]) -> dict[str, Any]:
     }
 
 
-def _print_result(result: Result, folder: str) -> None:
+def _failure(path: Path, problem: str, remedy: str) -> Report:
+    return {
+        "recording": str(path), "status": "failed", "problem": problem, "remedy": remedy,
+    }  # fmt: skip
+
+
+def _finish(reports: list[Report], as_json: bool, quiet: bool) -> NoReturn:
+    """Say how it ended and leave with the exit code that says it."""
+    from artifactlens.result import CAUTION
+
+    failed = [report for report in reports if report["status"] == "failed"]
+    if as_json:
+        # Escaped to ASCII, so that no name and no terminal can break the document.
+        click.echo(json.dumps({"caution": CAUTION, "recordings": reports}, indent=1))
+    elif not quiet and len(failed) < len(reports):
+        _echo(CAUTION)
+    if failed and len(reports) > 1:
+        rest = "the others are done" if len(failed) < len(reports) else "none is done"
+        listed = ", ".join(report["recording"] for report in failed[:NAMES_IN_SUMMARY])
+        more = ", ..." if len(failed) > NAMES_IN_SUMMARY else ""
+        _echo(
+            f"{len(failed)} of {len(reports)} recordings failed, {rest}: {listed}{more}",
+            err=True,
+        )
+    raise SystemExit(1 if failed else 0)
+
+
+def _print_failure(report: Report) -> None:
+    _echo(f"Failed: {report['recording']}", err=True)
+    for sentence in (report["problem"], report["remedy"]):
+        _echo(f"  {sentence}", err=True, hang=2)
+
+
+def _print_result(result: Result, report: Report) -> None:
+    from artifactlens.page.words import span
+
+    facts = result.recording
+    n_sites = sum(site.role != "reference" for site in result.sites)
+    _echo(
+        f"{report['recording']}: {span(facts.duration)}, {n_sites} sites, "
+        f"{facts.montage}, {facts.sampling_rate:g} Hz"
+    )
+    _print_kinds(result)
+    for entry in _alike([((e.verdict, e.reason), e.kind) for e in result.assessable]):
+        (verdict, reason), kinds = entry
+        if reason:
+            _detail("not judged" if verdict == "no" else verdict, f"{kinds}: {reason}")
+    for reason, labels in _alike([(why, label) for label, why in facts.set_aside]):
+        _detail("not used", f"{labels}: {reason}")
+    for note in facts.notes:
+        _detail("note", note)
+    _echo(f"{'report':<{_HANG}}{Path(report['folder']) / 'report.html'}\n", wrap=False)
+
+
+def _alike(pairs: list[tuple[Any, str]]) -> list[tuple[Any, str]]:
+    """Each reason once, with all the names it stands for."""
+    from artifactlens.edf_records import listing
+
+    groups: dict[Any, list[str]] = {}
+    for reason, name in pairs:
+        groups.setdefault(reason, []).append(name)
+    return [(reason, listing(names)) for reason, names in groups.items()]
+
+
+def _detail(word: str, text: str) -> None:
+    _echo(f"{word:<{_HANG}}{text}", hang=_HANG)
+
+
+def _print_kinds(result: Result) -> None:
+    """One line per kind: whether it is judged, how much there is of it, and where."""
     from rich.console import Console
     from rich.table import Table
     from rich.text import Text
 
-    console = Console(highlight=False)
-    facts = result.recording
-    n_sites = sum(site.role != "reference" for site in result.sites)
-    console.print(
-        Text(
-            f"{facts.name}: {_clock(facts.duration)}, {n_sites} sites, {facts.montage}, "
-            f"{facts.sampling_rate:g} Hz"
-        )
-    )
-    for note in facts.notes:
-        console.print(Text(f"note: {note}"))
-    table = Table(box=None, pad_edge=False, show_edge=False)
-    table.add_column("kind")
-    table.add_column("judged")
-    table.add_column("flags", justify="right")
-    table.add_column("touched", justify="right")
+    from artifactlens.page.words import span
+
+    table = Table(box=None, pad_edge=False, padding=(0, 3, 0, 0))
+    table.add_column("kind", min_width=_HANG - 3, no_wrap=True)
+    table.add_column("judged", no_wrap=True)
+    table.add_column("flags", justify="right", no_wrap=True)
+    table.add_column("touched", justify="right", no_wrap=True)
     table.add_column("sites flagged most")
     counts = result.flag_counts()
     for entry in result.assessable:
         if entry.verdict == "no":
-            table.add_row(entry.kind, Text(f"no: {entry.reason}"), "-", "-", "")
+            table.add_row(entry.kind, entry.verdict, "-", "-")
             continue
-        judged = entry.verdict if not entry.reason else f"{entry.verdict}: {entry.reason}"
         table.add_row(
             entry.kind,
-            Text(judged),
+            entry.verdict,
             str(counts[entry.kind]),
-            f"{result.touched[entry.kind]:.0f} s",
-            Text(", ".join(result.sites_flagged_most(entry.kind, 4))),
+            span(result.touched[entry.kind]),
+            Text(_shown(", ".join(result.sites_flagged_most(entry.kind, 4)))),
         )
-    console.print(table)
-    console.print(Text(f"Report: {Path(folder) / 'report.html'}\n"))
+    console = Console(highlight=False)
+    with console.capture() as captured:
+        console.print(table)
+    for line in captured.get().splitlines():
+        click.echo(line.rstrip())
 
 
-def _clock(seconds: float) -> str:
-    whole = round(seconds)
-    return f"{whole // 3600}:{whole // 60 % 60:02d}:{whole % 60:02d}"
+def _shown(text: str) -> str:
+    """Text from a file or a path without what could steer the terminal."""
+    from artifactlens.export.one_line import one_line
+
+    return one_line(text)
+
+
+def _echo(text: str, *, err: bool = False, hang: int = 0, wrap: bool = True) -> None:
+    """Print a paragraph; a terminal gets it broken between words, a file in one line."""
+    import shutil
+    import textwrap
+
+    lead = text[: len(text) - len(text.lstrip(" "))]
+    end = "\n" * (len(text) - len(text.rstrip("\n")))
+    text = lead + _shown(text)
+    if wrap and (sys.stderr if err else sys.stdout).isatty():
+        text = textwrap.fill(
+            text,
+            max(shutil.get_terminal_size().columns, 40),
+            subsequent_indent=" " * hang,
+            break_long_words=False,
+            break_on_hyphens=False,
+        )
+    click.echo(text + end, err=err)
 
 
 @contextmanager
-def _progress(count: int, quiet: bool) -> Iterator[Any]:
-    """A progress bar on standard error; yields a maker of callbacks per recording."""
-    import sys
-
+def _progress(place: str, quiet: bool) -> Iterator[Progress | None]:
+    """A progress bar on standard error, if that is a terminal."""
     if quiet or not sys.stderr.isatty():
-        yield lambda name: None
+        yield None
         return
     from rich.console import Console
     from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
     from rich.progress import Progress as Bar
+    from rich.table import Column
 
+    from artifactlens.page.words import span
+
+    name = TextColumn(
+        "{task.description}",
+        markup=False,
+        table_column=Column(no_wrap=True, overflow="ellipsis", max_width=40),
+    )
     with Bar(
-        TextColumn("{task.description}"),
+        name,
         BarColumn(),
-        TextColumn("{task.completed:.0f} of {task.total:.0f} s"),
+        TextColumn("{task.fields[state]}"),
         TimeRemainingColumn(),
         console=Console(stderr=True),
         transient=True,
+        redirect_stdout=False,
+        redirect_stderr=False,
     ) as bar:
+        task = bar.add_task(_shown(place), total=None, state="opening")
 
-        def step(name: str) -> Progress:
-            task = bar.add_task(name.replace("[", "("), total=None)
+        def update(done: int, total: int) -> None:
+            state = f"{span(done)} of {span(total)}" if done < total else "writing"
+            bar.update(task, completed=done, total=total, state=state)
 
-            def update(done: int, total: int) -> None:
-                bar.update(task, completed=done, total=total, visible=done < total)
-
-            return update
-
-        yield step
+        yield update

@@ -109,6 +109,18 @@ def finite_rows(values: NDArray[np.floating]) -> Bools:
     return np.asarray(np.isfinite(values).all(axis=1))
 
 
+def median_of_known(values: NDArray[np.floating]) -> NDArray[np.float32]:
+    """Median over the first axis ignoring NaN; NaN where nothing is left."""
+    ordered = np.sort(values, axis=0)
+    count = np.isfinite(ordered).sum(axis=0)
+    low, high = np.maximum((count - 1) // 2, 0), np.minimum(count // 2, len(values) - 1)
+    middle = (
+        np.take_along_axis(ordered, low[None], 0)[0]
+        + np.take_along_axis(ordered, high[None], 0)[0]
+    ) / 2
+    return np.where(count > 0, middle, np.float32(np.nan)).astype(np.float32)
+
+
 def epoch_grid(recording: Recording) -> EpochGrid:
     """Lay the grid of one-second epochs; a rest shorter than an epoch is left out."""
     rate = recording.sampling_rate
@@ -131,9 +143,17 @@ def epoch_grid(recording: Recording) -> EpochGrid:
 
 
 def batches(
-    recording: Recording, frame: Frame, grid: EpochGrid, batch_epochs: int = BATCH_EPOCHS
+    recording: Recording,
+    frame: Frame,
+    grid: EpochGrid,
+    batch_epochs: int = BATCH_EPOCHS,
+    levels_uv: NDArray[np.float32] | None = None,
 ) -> Iterator[EpochBatch]:
-    """Read the recording once, a batch at a time; no batch crosses a gap."""
+    """Read the recording once, a batch at a time; no batch crosses a gap.
+
+    ``levels_uv`` (n_used_channels,) is taken off every channel, so that an electrode offset
+    makes no jump in the others where its channel is lost.
+    """
     segments = recording.segments
     solved: dict[bytes, NDArray[np.float32]] = {}
     for number, segment in enumerate(segments):
@@ -141,8 +161,9 @@ def batches(
         for low in range(0, len(members), batch_epochs):
             chosen = members[low : low + batch_epochs]
             yield _batch(
-                recording, frame, grid, chosen, segment.start, segment.n_samples, solved
-            )
+                recording, frame, grid, chosen, segment.start, segment.n_samples, solved,
+                levels_uv,
+            )  # fmt: skip
 
 
 def _batch(
@@ -153,6 +174,7 @@ def _batch(
     segment_start: int,
     segment_length: int,
     solved: dict[bytes, NDArray[np.float32]],
+    levels_uv: NDArray[np.float32] | None,
 ) -> EpochBatch:
     n, rate = grid.n_samples, recording.sampling_rate
     own = grid.start[chosen]
@@ -187,6 +209,8 @@ def _batch(
             (cut == bottom[rows, columns, None]).mean(axis=1),
         )
         clipped[rows, columns] = at_extreme > CLIPPED_SHARE
+    if levels_uv is not None and len(levels_uv):
+        data = data - levels_uv[:, None]
     sites, ok = _solve(data, ~(missing | flat), starts, n, frame, solved)
     core = slice(1, -1)
     return EpochBatch(

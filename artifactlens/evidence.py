@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import median_of_known
 from artifactlens.features import BY_NAME, FEATURE_NAMES
 from artifactlens.result import Contribution, finite_or_none
 
@@ -67,7 +68,7 @@ def quiet_values(
     ``quiet`` (n_epochs, n_sites) is true where no kind reaches its lower operating point; a
     site without a quiet epoch falls back on all its epochs.
     """
-    from artifactlens.features import USUAL_EPOCHS, median_of_known
+    from artifactlens.features import USUAL_EPOCHS
 
     stride = max(1, -(-len(quiet) // USUAL_EPOCHS))
     chosen = quiet[::stride]
@@ -85,6 +86,8 @@ def amount(value: float | None, unit: str, *, signed: bool = False) -> str:
     if value is None:
         return "not measurable"
     sign = "+" if signed else ""
+    if abs(value) < 0.001:
+        value = 0.0
     digits = ".1f" if unit == "dB" else ".0f" if abs(value) >= 100 else ".3g"
     return f"{value:{sign}{digits}} {unit}".strip()
 
@@ -160,9 +163,15 @@ def _capital(text: str) -> str:
     return text[:1].upper() + text[1:]
 
 
+def _field_words(count: int) -> str:
+    return "field at this site alone" if count <= 1 else f"field over {count} sites"
+
+
 def _eye_words(values: dict[str, float | None], field_count: int) -> tuple[str, str]:
     vertical, lateral = values["front_vertical"], values["front_lateral"]
-    field = f"field over {field_count} sites"
+    field = _field_words(field_count)
+    if vertical is None and lateral is None:
+        return "an eye movement", field
     if lateral is not None and abs(lateral) > 1.2 * abs(vertical or 0.0):
         side = "right" if lateral > 0 else "left"
         return (
@@ -192,7 +201,7 @@ def _measures(
     if kind == "pop":
         words = f"a step of {amount(values['step'], 'uV')} within 16 ms at {site}"
         alone = values["step_alone"]
-        if alone is not None and alone > 3:
+        if alone is not None and alone > 5:
             words += f", {10 ** (alone / 20):.0f} times that of its neighbours"
         stays = values["step_stays"]
         if stays is not None and stays > 0.2:
@@ -205,5 +214,5 @@ def _measures(
         )
     return (
         f"{amount(values['front_vertical'], 'uV', signed=True)} at the front, "
-        f"field over {field_count} sites"
+        f"{_field_words(field_count)}"
     )

@@ -13,7 +13,7 @@ from artifactlens import __version__
 from artifactlens.assessable import assess
 from artifactlens.curves import Model, load_model
 from artifactlens.epochs import BATCH_EPOCHS, EpochGrid, batches, epoch_grid
-from artifactlens.errors import RecordingError
+from artifactlens.errors import ArtifactlensError, RecordingError
 from artifactlens.features import FeatureTable, feature_table, mains_is_carried, measure
 from artifactlens.features.spatial import EyeLeads, eye_leads
 from artifactlens.frames import Frame, build_frame
@@ -21,8 +21,8 @@ from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores
 from artifactlens.sitecare import site_evidence
-from artifactlens.survey import PLAUSIBLE_UV, Conditions, survey
-from artifactlens.triage import judge, make_flags, touched_seconds
+from artifactlens.survey import LINE_FREQUENCIES, PLAUSIBLE_UV, Conditions, survey
+from artifactlens.triage import MARKS, judge, make_flags, touched_seconds
 
 if TYPE_CHECKING:
     import mne
@@ -32,6 +32,10 @@ Progress = Callable[[int, int], None]
 """Called with seconds done and seconds in all."""
 
 CLOSEUPS = 60
+
+
+class OptionError(ArtifactlensError, ValueError):
+    """An option was given a value that it does not know."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,24 +92,39 @@ def measure_recording(
     counts = {
         name: np.zeros(len(frame.channels)) for name in ("flat", "missing", "clipped")
     }
-    for batch in batches(recording, frame, grid, batch_epochs):
+    for batch in batches(recording, frame, grid, batch_epochs, conditions.levels_uv):
         parts.append(measure(batch, frame, leads, conditions))
         for name, count in counts.items():
             count += getattr(batch, name).sum(axis=1)
         if progress is not None:
             progress(batch.first + len(batch), len(grid))
-    table = feature_table(parts)
+    table = feature_table(parts, grid.segment)
     if not np.isfinite(table.values).any():
-        cause = (
-            "flat" if counts["flat"].sum() >= counts["missing"].sum() else "missing (NaN)"
-        )
-        raise RecordingError(
-            f"A signal is needed on at least two EEG channels; in {recording.name} all "
-            f"{len(frame.channels)} are {cause}.",
-            "Check the export and the unit of the channels.",
-        )
+        raise _no_signal(counts, conditions.amplitude_uv)
     faults = {name: count / len(grid) for name, count in counts.items()}
     return Measured(recording, frame, leads, conditions, grid, table, faults)
+
+
+def _no_signal(
+    counts: dict[str, NDArray[np.float64]], amplitude_uv: float
+) -> RecordingError:
+    """Say what is there instead of a signal, and which unit would make it one."""
+    n_channels = len(counts["flat"])
+    needed = "A signal is needed on at least two EEG channels"
+    if counts["missing"].sum() > counts["flat"].sum():
+        return RecordingError(
+            f"{needed}; all {n_channels} hold no numbers (NaN).", "Check the export."
+        )
+    if amplitude_uv > 0:
+        return RecordingError(
+            f"{needed}; all {n_channels} are flat: their median amplitude is "
+            f"{amplitude_uv:.3g} uV; {_unit_advice(amplitude_uv)}.",
+            "Check the unit in the header, and export the recording again with the right one.",
+        )
+    return RecordingError(
+        f"{needed}; all {n_channels} are flat.",
+        "Check that the recorder was connected and that the right channels were exported.",
+    )
 
 
 def conclude(
@@ -161,20 +180,19 @@ def conclude(
 def unit_note(amplitude_uv: float) -> str:
     """Say that the amplitudes cannot be those of scalp EEG and which unit would fit."""
     low, high = PLAUSIBLE_UV
-    fits = [
-        unit
-        for unit, factor in (("V", 1e6), ("mV", 1e3), ("nV", 1e-3))
-        if low <= amplitude_uv * factor <= high
-    ]
-    advice = (
-        f"the values would fit scalp EEG if they were in {fits[0]}"
-        if fits
-        else "no usual unit would make them fit"
-    )
     return (
         f"The median amplitude is {amplitude_uv:.3g} uV, where scalp EEG has {low:g} to "
-        f"{high:g} uV: {advice}. Check the unit in the header; nothing was rescaled."
+        f"{high:g} uV: {_unit_advice(amplitude_uv)}. Check the unit in the header; nothing "
+        "was rescaled."
     )
+
+
+def _unit_advice(amplitude_uv: float) -> str:
+    low, high = PLAUSIBLE_UV
+    for unit, factor in (("mV", 1e3), ("V", 1e6), ("nV", 1e-3)):
+        if low <= amplitude_uv * factor <= high:
+            return f"the values would fit scalp EEG if they were in {unit}"
+    return "no usual unit would make them fit"
 
 
 def _facts(measured: Measured, notes: tuple[str, ...]) -> RecordingFacts:
@@ -223,11 +241,31 @@ def triage(
         50 or 60 hertz if known; found by itself otherwise.
     progress : callable, optional
         Called with seconds done and seconds in all.
+
+    Raises
+    ------
+    ArtifactlensError
+        With what was needed, what was given and what to do.
     """
+    _check_options(mark, line_frequency)
+    model = load_model()
     measured = measure_recording(
         _as_recording(source), line_frequency=line_frequency, progress=progress
     )
-    return conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
+    return conclude(measured, model, mark=mark, line_frequency=line_frequency)
+
+
+def _check_options(mark: str, line_frequency: float | None) -> None:
+    if mark not in MARKS:
+        raise OptionError(
+            f"mark needs to be {' or '.join(MARKS)}; given was {mark!r}.",
+            "'sure' marks little and surely, 'doubtful' all that is doubtful.",
+        )
+    if line_frequency is not None and line_frequency not in LINE_FREQUENCIES:
+        raise OptionError(
+            f"line_frequency needs to be 50 or 60 Hz; given was {line_frequency!r}.",
+            "Leave it out to have it found by itself.",
+        )
 
 
 def _as_recording(source: str | Path | Recording | mne.io.BaseRaw) -> Recording:
@@ -239,8 +277,9 @@ def _as_recording(source: str | Path | Recording | mne.io.BaseRaw) -> Recording:
 
 
 def default_folder(path: Path) -> Path:
-    """``x.triage`` beside ``x.edf``."""
-    return path.with_name(f"{path.stem}.triage")
+    """``x.triage`` beside ``x.edf`` or ``x.fif.gz``."""
+    packed = path.name.lower().endswith(".fif.gz")
+    return path.with_name(f"{Path(path.stem).stem if packed else path.stem}.triage")
 
 
 def triage_to_folder(
@@ -263,13 +302,16 @@ def triage_to_folder(
     from artifactlens.page.need import by_need
     from artifactlens.page.report import report_html
 
+    # What can fail at once fails before the long pass over the recording.
+    _check_options(mark, line_frequency)
+    model = load_model()
     recording = open_recording(path)
     target = folder or default_folder(Path(path))
     with prepared_folder(target):
         measured = measure_recording(
             recording, line_frequency=line_frequency, progress=progress
         )
-        result = conclude(measured, load_model(), mark=mark, line_frequency=line_frequency)
+        result = conclude(measured, model, mark=mark, line_frequency=line_frequency)
         chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
         cuts = [closeup(recording, measured.frame, flag) for flag, _ in chosen]
         page = report_html(result, [cut for cut in cuts if cut is not None])

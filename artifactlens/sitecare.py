@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from artifactlens.features import median_of_known
+from artifactlens.epochs import median_of_known
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import Assessment, Flag, SiteEvidence, finite_or_none
 

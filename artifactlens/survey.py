@@ -6,11 +6,13 @@ one pass over everything can then run with fixed parameters.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
+
+from artifactlens.epochs import median_of_known
 
 if TYPE_CHECKING:
     from artifactlens.frames import Frame
@@ -23,6 +25,11 @@ LINE_FREQUENCIES = (50.0, 60.0)
 LINE_TOLERANCE = 0.01
 """EN 50160: within 1 % for 99.5 % of the year."""
 
+CHANCE_DB = 14.0
+"""What the strongest bin of many sites makes of the noise of one stretch; falls with the root
+of their number (our own simulation of pink noise)."""
+
+LINE_FOUND_DB = 3.0
 NOTCH_DIP_DB = -6.0
 ROLL_OFF_DB = 10.0
 AVERAGE_REFERENCE_RATIO = 0.02
@@ -38,8 +45,10 @@ class Conditions:
     above the Nyquist frequency; ``low_pass_source`` is "header", "measured" or
     "sampling rate". ``notch`` is the line frequency that was filtered out.
     ``line_frequency`` is where mains is looked for, ``line_found_db`` by how much it stands
-    above its flanks at the site where it is strongest. ``amplitude_uv`` is the median
-    robust standard deviation over channels.
+    above its flanks, and above what chance makes of so few stretches, at the site where it is
+    strongest. ``amplitude_uv`` is the median
+    robust standard deviation over channels. ``levels_uv`` (n_channels,) is the usual
+    level of each used channel (electrode offset), empty where unknown.
     """
 
     sampling_rate: float
@@ -52,6 +61,9 @@ class Conditions:
     line_found_db: float
     amplitude_uv: float
     average_reference: bool
+    levels_uv: NDArray[np.float32] = field(
+        default_factory=lambda: np.zeros(0, dtype=np.float32), compare=False
+    )
 
 
 def survey(
@@ -70,15 +82,15 @@ def survey(
     channels = [recording.read(a, b)[frame.channels] for a, b in stretches]
     rate = recording.sampling_rate
     nyquist = rate / 2
-    spectra, robust, common = [], [], []
+    spectra, robust, common, levels = [], [], [], []
     matrix = frame.matrix()
     for data in channels:
         good = np.isfinite(data).all(axis=1) & (np.ptp(data, axis=1) > 0)
         if not good.any():
             continue
-        robust.append(
-            1.4826 * np.median(np.abs(data - np.median(data, axis=1)[:, None]), 1)[good]
-        )
+        level = np.median(data, axis=1)
+        levels.append(np.where(good, level, np.float32(np.nan)))
+        robust.append(1.4826 * np.median(np.abs(data - level[:, None]), axis=1)[good])
         centred = data[good] - data[good].mean(axis=1, keepdims=True)
         common.append(
             (centred.mean(axis=0).std(), np.sqrt(np.mean(centred**2, axis=1)).mean())
@@ -112,6 +124,7 @@ def survey(
         psd = np.median(stack, axis=0)
         # Mains may be there for a part of the time only.
         at_times = np.quantile(stack, 0.9, axis=0)
+        chance = CHANCE_DB / np.sqrt(len(same))
         roll_off = _roll_off(freqs, psd)
         if roll_off is not None and roll_off < 0.9 * low_pass:
             low_pass, source = roll_off, "measured"
@@ -124,7 +137,7 @@ def survey(
             )
             for nominal in candidates
             # Less than half a second may have no bin at the line.
-            if nominal + 7 < nyquist and freqs[1] <= 1.5
+            if nominal + 3 < nyquist and freqs[1] <= 1.5
         ]
         if looked:
             found, line, _, nominal = max(
@@ -133,7 +146,8 @@ def survey(
             dips = [(entry[2], entry[3]) for entry in looked if entry[3] + 3 < low_pass]
             if notch_at is None and dips and min(dips)[0] < NOTCH_DIP_DB:
                 notch_at, notch_source = min(dips)[1], "measured"
-            if found < 3.0:
+            found -= chance
+            if found < LINE_FOUND_DB:
                 line = notch_at or nominal
     return Conditions(
         sampling_rate=rate,
@@ -148,6 +162,7 @@ def survey(
         average_reference=bool(
             len(frame.channels) > 2 and mean_rms < AVERAGE_REFERENCE_RATIO * channel_rms
         ),
+        levels_uv=np.nan_to_num(median_of_known(np.stack(levels))),
     )
 
 
@@ -214,10 +229,11 @@ def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | N
         )
         if below.sum() >= 3 and above.sum() >= 3:
             falls[k] = level[below].mean() - level[above].mean()
-    if not len(falls) or falls.max() < ROLL_OFF_DB:
+    steep = np.flatnonzero(falls >= ROLL_OFF_DB)
+    if not len(steep):
         return None
-    # Above the steepest fall everything must stay low, or it is a dip and no roll-off.
-    edge = candidates[int(np.argmax(falls))]
+    # Above the first such fall everything must stay low, or it is a dip and no roll-off.
+    edge = candidates[steep[0]]
     beyond = keep & (freqs > 1.3 * edge) & (freqs < 0.97 * nyquist)
     below = keep & (freqs >= 0.8 * edge) & (freqs <= edge)
     if level[beyond].mean() > level[below].mean() - ROLL_OFF_DB:

@@ -78,7 +78,7 @@ def make_flags(
     end : float
         End of the recording, seconds: no flag reaches beyond.
     """
-    from artifactlens.features import median_of_known
+    from artifactlens.epochs import median_of_known
 
     pace = table.pace.mean(axis=2, dtype=np.float32)
     quiet_pace = median_of_known(np.where(judgement.quiet, pace, np.float32("nan")))

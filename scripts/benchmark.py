@@ -20,9 +20,10 @@ from pathlib import Path
 import numpy as np
 
 LABELS = (
-    "Fp1 Fp2 F7 F3 Fz F4 F8 T3 C3 Cz C4 T4 T5 P3 Pz P4 T6 O1 O2 A1 A2 FT9 FT10 TP9 TP10 "
-    "F9 F10 P9 P10 AFz POz Oz"
-).split()
+    "Fp1", "Fp2", "F7", "F3", "Fz", "F4", "F8", "T3", "C3", "Cz", "C4", "T4", "T5", "P3", "Pz",
+    "P4", "T6", "O1", "O2", "A1", "A2", "FT9", "FT10", "TP9", "TP10", "F9", "F10", "P9", "P10",
+    "AFz", "POz", "Oz",
+)  # fmt: skip
 
 PLAIN = """
 import sys, edfio, scipy.signal

@@ -49,7 +49,9 @@ def fetch(folder: Path) -> Path:
             raise FetchError("pip did not finish within 300 s") from error
         archive = Path(scratch) / ARCHIVE
         if done.returncode or not archive.exists():
-            raise FetchError("pip could not download the archive: " + done.stderr.strip()[-200:])
+            raise FetchError(
+                "pip could not download the archive: " + done.stderr.strip()[-200:]
+            )
         found = hashlib.sha256(archive.read_bytes()).hexdigest()
         if found != ARCHIVE_SHA256:
             raise FetchError(f"{ARCHIVE} has the hash {found}, expected {ARCHIVE_SHA256}")

@@ -26,7 +26,8 @@ from artifactlens.training import corpora
 from artifactlens.training.examples import Examples, join
 from artifactlens.training.fit import fit_forest, fit_head, model_body
 from artifactlens.training.report import check_table
-from artifactlens.training.simulated import Background, simulate
+from artifactlens.training.simulated import simulate
+from artifactlens.training.situation import Background
 
 TRAINING_PEOPLE, VALIDATION_PEOPLE = range(24), range(24, 30)
 """Subjects 30-35 are the reserved final check: nothing here reads them."""

@@ -285,6 +285,14 @@ def test_a_flat_channel_is_told_and_leaves_the_mean_of_the_others():
     np.testing.assert_array_equal(batch.sites_uv[row("T8")], 0)
 
 
+@pytest.mark.parametrize(("swing", "flat"), [(0.15, True), (0.25, False)])
+def test_a_channel_is_flat_below_a_swing_of_a_fifth_of_a_microvolt(swing, flat):
+    data = ten_twenty(3, 100.0)
+    data[row("Fz")] = 5 + swing * (np.arange(300) % 2)
+    batch = single_batch(referential(data, 100.0))
+    np.testing.assert_array_equal(batch.flat[row("Fz")], flat)
+
+
 def test_an_amplifiers_own_noise_is_not_flat():
     rate = 256.0
     data = ten_twenty(4, rate)

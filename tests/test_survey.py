@@ -162,6 +162,15 @@ def test_a_notch_is_measured_by_its_dip(rate, hz, quality):
     assert found.low_pass_source == "sampling rate"
 
 
+@pytest.mark.parametrize(("dip_db", "notch"), [(4.0, None), (9.0, 50.0)])
+def test_a_dip_is_a_notch_from_6_decibel(dip_db, notch):
+    data = eeg()
+    spectrum = np.fft.rfft(data, axis=1)
+    freqs = np.fft.rfftfreq(data.shape[1], 1 / 256.0)
+    spectrum[:, np.abs(freqs - 50) < 2] *= 10 ** (-dip_db / 20)
+    assert look(np.fft.irfft(spectrum, data.shape[1], axis=1)).notch == notch
+
+
 @pytest.mark.parametrize("exponent", [0, 1, 2, 3])
 def test_no_notch_is_measured_where_there_is_none(exponent):
     assert look(eeg(exponent=exponent)).notch is None

@@ -18,13 +18,13 @@ from artifactlens.result import Result
 _NOT_IN_NAMES = frozenset('<>:"/\\|?*')  # separators, and what Windows reserves
 _LONGEST_NAME = 60  # characters of up to four bytes; file systems take 255 bytes
 
-
 _OURS = frozenset(
     {
         "flags.tsv", "flags.json", "sites.tsv", "sites.json", "scores.npz", "report.html",
         "result.json",
     }
 )  # fmt: skip
+_LITTER = frozenset({".DS_Store", "Thumbs.db", "desktop.ini"})
 
 
 @contextmanager
@@ -39,13 +39,9 @@ def prepared_folder(folder: Path) -> Iterator[None]:
     OutputError
         If the folder cannot be written, or holds files that no triage wrote.
     """
-    made = not folder.exists()
+    made = [path for path in (folder, *folder.parents) if not path.exists()]
     probe_folder(folder)
-    foreign = sorted(
-        path.name
-        for path in folder.iterdir()
-        if path.name not in _OURS and not path.name.endswith(("_marks.edf", ".part"))
-    )
+    foreign = sorted(path.name for path in folder.iterdir() if not _is_ours(path.name))
     if foreign:
         raise OutputError(
             f"The folder {folder} is needed for results, but it holds other files "
@@ -55,10 +51,21 @@ def prepared_folder(folder: Path) -> Iterator[None]:
     try:
         yield
     except BaseException:
-        if made:
-            with suppress(OSError):
-                folder.rmdir()
+        with suppress(OSError):  # where something else has come in by now, it stays
+            for path in made:
+                path.rmdir()
         raise
+
+
+def _is_ours(name: str) -> bool:
+    """Whether a file is one that a triage wrote, or one that desktops leave everywhere."""
+    return (
+        name in _OURS
+        or name in _LITTER
+        or name.endswith("_marks.edf")
+        or name.startswith("._")
+        or (name.startswith(".") and name.endswith(".part"))
+    )
 
 
 def write_all(

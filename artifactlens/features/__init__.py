@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import median_of_known
 from artifactlens.features import amplitude, spatial, spectral
 
 if TYPE_CHECKING:
@@ -308,7 +309,7 @@ def _spectral(
     ) - spectral.band_density(psd, freqs, 2, 14)
     found |= {"mains_ratio": nothing, "mains_size": nothing, "mains_harmonic": nothing}
     top = freqs[-1]
-    if mains_is_carried(conditions) and line + 6 <= top:
+    if mains_is_carried(conditions):
         found["mains_ratio"] = spectral.mains_ratio(psd, freqs, mains_hz=line)
         found["mains_size"] = spectral.mains_amplitude(psd, freqs, mains_hz=line)
         ratios = [
@@ -327,7 +328,7 @@ def mains_is_carried(conditions: Conditions) -> bool:
     A line that stands out by 6 dB is there, whatever the header says.
     """
     line = conditions.line_frequency
-    if line + 6 > conditions.sampling_rate / 2 + 0.51:
+    if round(line, -1) + spectral.LINE_MARGIN_HZ > conditions.sampling_rate / 2:
         return False
     if conditions.line_found_db >= 6 and conditions.notch_source != "measured":
         return True
@@ -348,7 +349,7 @@ class FeatureTable:
     ``values`` float32 (n_measured, n_epochs, n_sites) in the order of ``MEASURED``;
     ``usual`` float32 (n_measured, n_sites) the median over the recording (in decibel for
     those in ``IN_MICROVOLT``). ``pace``, ``step_at`` and ``front_at`` as in
-    :class:`Measures`.
+    :class:`Measures`; ``segment`` (n_epochs,) the stretch between gaps that an epoch is of.
     """
 
     values: Array
@@ -356,25 +357,27 @@ class FeatureTable:
     pace: NDArray[np.float16]
     step_at: NDArray[np.float16]
     front_at: NDArray[np.float16]
+    segment: NDArray[np.int64]
 
     def column(self, name: str) -> Array:
         """One feature of the model, measured or derived, (n_epochs, n_sites)."""
         feature = BY_NAME[name]
         if feature.steady_of:
-            return _steady(self.values[MEASURED.index(feature.steady_of)])
+            return _steady(self.values[MEASURED.index(feature.steady_of)], self.segment)
         if feature.usual_of:
             row = MEASURED.index(feature.usual_of)
             return in_decibel(feature.usual_of, self.values[row]) - self.usual[row]
         return self.values[MEASURED.index(name)]
 
 
-def _steady(values: Array) -> Array:
-    """Median over five epochs, the ends repeated; NaN where one of them is missing."""
-    reach = 2
-    padded = np.pad(values, ((reach, reach), (0, 0)), mode="edge")
-    windows = np.lib.stride_tricks.sliding_window_view(padded, 2 * reach + 1, axis=0)
-    ordered = np.sort(windows, axis=2)
-    return np.where(np.isnan(ordered[:, :, -1]), np.float32(np.nan), ordered[:, :, reach])
+def _steady(values: Array, segment: NDArray[np.int64]) -> Array:
+    """Median over five epochs of one segment, its ends repeated; NaN where not measured."""
+    epoch = np.arange(len(values))
+    first = np.searchsorted(segment, segment, side="left")
+    last = np.searchsorted(segment, segment, side="right") - 1
+    shifts = [values[np.clip(epoch + shift, first, last)] for shift in range(-2, 3)]
+    middle = median_of_known(np.stack(shifts))
+    return np.where(np.isnan(values), np.float32(np.nan), middle)
 
 
 USUAL_EPOCHS = 3000
@@ -388,8 +391,11 @@ def in_decibel(name: str, values: Array) -> Array:
     return 20 * np.log10(np.maximum(values, amplitude.SMALL_UV))
 
 
-def feature_table(parts: list[Measures]) -> FeatureTable:
-    """Join the batches of a recording and find each site's usual values."""
+def feature_table(parts: list[Measures], segment: NDArray[np.int64]) -> FeatureTable:
+    """Join the batches of a recording and find each site's usual values.
+
+    ``segment`` (n_epochs,) is that of the grid.
+    """
     values = np.concatenate([part.values for part in parts], axis=1)
     stride = max(1, -(-values.shape[1] // USUAL_EPOCHS))
     usual = np.stack(
@@ -404,16 +410,5 @@ def feature_table(parts: list[Measures]) -> FeatureTable:
         pace=np.concatenate([part.pace for part in parts]),
         step_at=np.concatenate([part.step_at for part in parts]),
         front_at=np.concatenate([part.front_at for part in parts]),
+        segment=segment,
     )
-
-
-def median_of_known(values: Array) -> Array:
-    """Median over the first axis ignoring NaN; NaN where nothing is left."""
-    ordered = np.sort(values, axis=0)
-    count = np.isfinite(ordered).sum(axis=0)
-    low, high = np.maximum((count - 1) // 2, 0), np.minimum(count // 2, len(values) - 1)
-    middle = (
-        np.take_along_axis(ordered, low[None], 0)[0]
-        + np.take_along_axis(ordered, high[None], 0)[0]
-    ) / 2
-    return np.where(count > 0, middle, np.float32(np.nan)).astype(np.float32)

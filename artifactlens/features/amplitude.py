@@ -25,9 +25,9 @@ class Steps:
     """The fastest step of each epoch and site.
 
     ``size`` signed microvolt and ``at`` (sample within the epoch), shape (n_sites,
-    n_epochs); ``elsewhere`` root mean square step of the neighbours at the same instant,
-    microvolt; ``pace`` mean absolute step in tenths of a second, shape
-    (n_sites, n_epochs, 10), microvolt; ``retention`` see :func:`step_retention`.
+    n_epochs); ``elsewhere`` root mean square step of the neighbours that have a signal at the
+    same instant, microvolt, NaN where none has; ``pace`` mean absolute step in tenths of a
+    second, shape (n_sites, n_epochs, 10), microvolt; ``retention`` see :func:`step_retention`.
     """
 
     size: Array
@@ -58,6 +58,7 @@ def fastest_steps(batch: EpochBatch, neighbours: Array) -> Steps:
     change = np.empty_like(signal)
     np.subtract(signal[:, lag:], signal[:, :-lag], out=change[:, :-lag])
     change[:, -lag:] = 0
+    _forget_lost(batch, change, lag)
     starts = batch.starts[1:-1]
     within = batch.windows(starts, n, change)
     size_abs = np.abs(within)
@@ -71,12 +72,23 @@ def fastest_steps(batch: EpochBatch, neighbours: Array) -> Steps:
     for shift in (-(lag // 2), lag // 2):
         if shift:
             np.maximum(seen, np.abs(change[:, instant + shift]), out=seen)
-    elsewhere = np.sqrt(np.einsum("st,tse->se", neighbours, seen**2)).astype(np.float32)
+    there = neighbours @ batch.ok[:, 1:-1].astype(np.float32)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        square = np.einsum("st,tse->se", neighbours, seen**2) / there
+    elsewhere = np.sqrt(np.where(there > 0, square, np.nan)).astype(np.float32)
 
     edges = (np.arange(BINS_PER_SECOND) * n) // BINS_PER_SECOND
     counts = np.diff(np.append(edges, n)).astype(np.float32)
     pace = (np.add.reduceat(size_abs, edges, axis=2) / counts).astype(np.float32)
     return Steps(size, at, elsewhere, pace, step_retention(batch, size, instant, lag))
+
+
+def _forget_lost(batch: EpochBatch, change: Array, lag: int) -> None:
+    """A site that is lost falls to 0 in the frame: that jump is none of its trace."""
+    rows, epochs = np.nonzero(batch.ok[:, :-1] & ~batch.ok[:, 1:])
+    if len(rows):
+        ends = batch.starts[epochs + 1]
+        change[rows[:, None], ends[:, None] - np.arange(1, lag + 1)] = 0
 
 
 def step_retention(

@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import median_of_known
+
 if TYPE_CHECKING:
     from artifactlens.epochs import EpochBatch
     from artifactlens.frames import Frame
@@ -60,7 +62,7 @@ def eye_leads(frame: Frame) -> EyeLeads:
             poles, row = scalp & (y >= 0.5), "frontal sites"
         behind = scalp & (y <= -0.3)
         if not behind.any():
-            behind = scalp & (y <= 0.05) & (np.abs(x) < 0.9)
+            behind = scalp & (y <= 0.1) & (np.abs(x) < 0.9)
         left, right = scalp & (x <= -0.6) & (y >= 0.3), scalp & (x >= 0.6) & (y >= 0.3)
     where = frame.positions / distance[:, None] * HEAD_RADIUS_M
     away = where[None] - EYE_POSITION_M[:, None]
@@ -95,17 +97,18 @@ def field_covariance(slow: Array) -> Array:
 def field_spread(covariance: Array) -> Array:
     """Share of the other sites that follow with at least 0.3 of the site's size.
 
-    Regression of each other site on this one: cov / var. One electrode alone gives 0.
+    Regression of each other site on this one: cov / var. One electrode alone gives 0. Sites
+    without variance do not count.
 
     Returns
     -------
     array, shape (n_sites, n_epochs), 0..1; NaN where the site has no variance
     """
     variance = np.einsum("ess->es", covariance)
-    n_sites = variance.shape[1]
+    others = np.maximum((variance > 0).sum(axis=1, keepdims=True) - 1, 1)
     with np.errstate(divide="ignore", invalid="ignore"):
         follow = np.abs(covariance) / variance[:, :, None] >= SPREAD_SHARE
-        share = (follow.sum(axis=2) - 1) / np.float32(max(1, n_sites - 1))
+        share = (follow.sum(axis=2) - 1) / others.astype(np.float32)
     return np.where(variance > 0, share, np.float32(np.nan)).T.astype(np.float32)
 
 
@@ -119,7 +122,8 @@ def isolation(covariance: Array, neighbours: Array) -> Array:
 
     Returns
     -------
-    array, shape (n_sites, n_epochs), decibel, -30..0
+    array, shape (n_sites, n_epochs), decibel, -30..0; NaN where the site or all its
+    neighbours are without signal
     """
     toward = covariance @ neighbours.T
     shared = np.einsum("ess->es", toward)
@@ -129,7 +133,8 @@ def isolation(covariance: Array, neighbours: Array) -> Array:
         r = shared / np.sqrt(variance * mean_power)
     alone = 1 - np.clip(np.where(np.isfinite(r), r, 0), 0, 1) ** 2
     decibel = 10 * np.log10(np.maximum(alone, np.float32(1e-3)))
-    return np.where(variance > 0, decibel, np.float32(np.nan)).T.astype(np.float32)
+    known = (variance > 0) & (mean_power > 0)
+    return np.where(known, decibel, np.float32(np.nan)).T.astype(np.float32)
 
 
 @dataclass(frozen=True, slots=True)
@@ -209,7 +214,7 @@ def _three_seconds(signal: Array) -> Array:
 
 
 def _departure(trace: Array) -> tuple[Array, NDArray[np.intp]]:
-    usual = np.median(_three_seconds(trace[None])[0], axis=1)
+    usual = median_of_known(_three_seconds(trace[None])[0].T)
     away = trace[1:-1] - usual[:, None]
     at = np.nan_to_num(np.abs(away)).argmax(axis=1)
     return away[np.arange(len(away)), at], at

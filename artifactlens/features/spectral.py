@@ -31,6 +31,9 @@ HIGHEST_HZ = 200.0
 
 SLOPE_EDGES_HZ = (14.0, 17.0, 20.5, 24.5, 29.5, 35.5, 42.5)
 HIGH_BAND_HZ = (55.0, 95.0)
+LINE_MARGIN_HZ = 6.0
+"""How far beyond the line its flanks are read."""
+
 LEAST_LINE_DB = 5.0
 FLOOR = np.float32(1e-6)
 """Power density (uV^2/Hz) added before a logarithm: far below any amplifier's noise."""
@@ -98,8 +101,7 @@ def band_density(
 
     Returns
     -------
-    array, shape (...), decibel; NaN if fewer than three quarters of the band's bins below
-    its upper edge are left.
+    array, shape (...), decibel; NaN if less than three tenths of the band is left.
     """
     band = (freqs >= low) & (freqs <= high)
     keep = band & (freqs <= usable)
@@ -203,7 +205,8 @@ def mains_amplitude(psd: Array, freqs: NDArray[np.float64], *, mains_hz: float) 
 
 
 def _core_and_ring(freqs: NDArray[np.float64], mains_hz: float) -> tuple[Array, Array]:
-    if mains_hz + 6 > freqs[-1] + 0.51:
+    # The last bin of an odd window lies half a bin below Nyquist, the line up to 1 % off.
+    if mains_hz + LINE_MARGIN_HZ > freqs[-1] + 1.2:
         raise SamplingRateError(
             f"mains_ratio reads up to {mains_hz + 6:g} Hz, but the spectrum ends at "
             f"{freqs[-1]:g} Hz.",

@@ -15,7 +15,7 @@ from artifactlens.pipeline import measure_recording
 from artifactlens.recording import Segment, from_array, open_recording
 from artifactlens.sites import parse_label
 from artifactlens.training.examples import CLEAN, PRESENT, UNKNOWN, Examples, from_table
-from artifactlens.training.simulated import Background
+from artifactlens.training.situation import Background
 
 CHUNK_SECONDS = 62
 EYE, MUSCLE = KIND_NAMES.index("eye"), KIND_NAMES.index("muscle")

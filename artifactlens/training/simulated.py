@@ -7,119 +7,28 @@ the same low-pass, or a plausible fast floor that reaches as high as the artifac
 
 from __future__ import annotations
 
-import itertools
-from dataclasses import dataclass
-from typing import NamedTuple
-
 import numpy as np
 from numpy.typing import NDArray
 
-from artifactlens.features.amplitude import STEP_SECONDS
-from artifactlens.frames import Frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import measure_recording
-from artifactlens.recording import Filters, Recording, from_array
 from artifactlens.simulation import electrode, eye, mains, muscle
 from artifactlens.simulation.floor import extend_above
 from artifactlens.simulation.lookalikes import LOOK_ALIKES
 from artifactlens.simulation.scene import Scene, Simulated
-from artifactlens.sites import canonical_site, site_position
-from artifactlens.training.examples import CLEAN, PRESENT, UNKNOWN, Examples, from_table
-
-Array = NDArray[np.float64]
-
-
-class Background(NamedTuple):
-    """Real recording to put artifact into.
-
-    ``potentials`` (n_sites, n_samples) microvolt against the common reference;
-    ``reference_sites`` names whose mean that reference is. ``kept_to_hz`` is where its own
-    low-pass lies (None: full bandwidth) and ``notch_hz`` its own notch.
-    """
-
-    person: str
-    sites: tuple[str, ...]
-    potentials: Array
-    sfreq: float
-    reference_sites: tuple[str, ...]
-    kept_to_hz: float | None
-    notch_hz: float | None
-    origin: str
-
-
-@dataclass(frozen=True, slots=True)
-class Situation:
-    """One draw of recording conditions; None where a filter is absent."""
-
-    sfreq: float
-    extended: bool
-    low_pass: float | None
-    notch: float | None
-    line: float
-    high_pass: float | None
-    montage: str
-    n_sites: int
-    header: bool
-
-    def words(self) -> str:
-        """For tables by condition."""
-        band = "as recorded" if not self.extended else f"low-pass {self.low_pass or 'none'}"
-        return (
-            f"{self.sfreq:g} Hz; {band}; notch {self.notch or 'none'}; {self.montage}; "
-            f"{self.n_sites} sites"
-        )
-
-
-FEWER_SITES: dict[int, tuple[str, ...]] = {
-    8: ("Fp1", "Fp2", "C3", "C4", "T7", "T8", "O1", "O2"),
-    12: ("Fp1", "Fp2", "F7", "F8", "C3", "C4", "T7", "T8", "P3", "P4", "O1", "O2"),
-    14: (
-        "Fp1", "Fp2", "F7", "F8", "F3", "F4", "T7", "T8", "P7", "P8", "C3", "C4", "O1", "O2",
-    ),
-}  # fmt: skip
-
-CHAINS = (
-    ("Fp1", "F7", "T7", "P7", "O1"),
-    ("Fp2", "F8", "T8", "P8", "O2"),
-    ("Fp1", "F3", "C3", "P3", "O1"),
-    ("Fp2", "F4", "C4", "P4", "O2"),
-    ("Fz", "Cz", "Pz"),
+from artifactlens.sites import site_position
+from artifactlens.training.examples import Examples, from_table
+from artifactlens.training.labels import label_cells
+from artifactlens.training.situation import (
+    FEWER_SITES,
+    Background,
+    Recorder,
+    as_recording,
+    draw_situation,
+    in_montage,
 )
 
-
-def draw_situation(background: Background, rng: np.random.Generator) -> Situation:
-    """Recording conditions that the background allows."""
-    extended = background.kept_to_hz is None or rng.random() < 0.65
-    rates = [
-        rate for rate in (128.0, 200.0, 250.0, 256.0, 500.0) if rate <= background.sfreq
-    ]
-    sfreq = float(rng.choice(rates)) if rates else background.sfreq
-    line = float(rng.choice([50.0, 60.0]))
-    low_pass: float | None = None
-    if extended:
-        allowed = [cut for cut in (30.0, 40.0, 50.0, 70.0, 100.0) if cut < 0.4 * sfreq]
-        low_pass = float(rng.choice(allowed)) if rng.random() < 0.45 else None
-    notch = line if rng.random() < 0.3 else None
-    n_channels = len(background.sites)
-    montage = str(
-        rng.choice(
-            ["ears", "Cz", "average", "system", "bipolar"], p=[0.4, 0.15, 0.15, 0.15, 0.15]
-        )
-    )
-    n_sites = n_channels
-    if montage != "bipolar" and rng.random() < 0.3:
-        n_sites = int(rng.choice(list(FEWER_SITES)))
-    return Situation(
-        sfreq=sfreq,
-        extended=extended,
-        low_pass=low_pass,
-        notch=notch,
-        line=line,
-        high_pass=float(rng.choice([0.1, 0.16, 0.3, 0.5, 1.0])),
-        montage=montage,
-        n_sites=n_sites,
-        header=bool(rng.random() < 0.5),
-    )
+Array = NDArray[np.float64]
 
 
 def simulate(
@@ -159,7 +68,7 @@ def simulate(
     }
     patterns, happenings = draw_look_alikes(scene, rng)
 
-    recorder = _Recorder(situation, background, sfreq)
+    recorder = Recorder(situation, background, sfreq)
     fields = {kind: recorder(field) for kind, field in put_in.items()}
     brain = recorder(patterns)
     potentials = recorder(potentials, own=True)
@@ -175,8 +84,8 @@ def simulate(
         kind: np.concatenate([field[:-n_refs], field[-n_refs:].mean(axis=0, keepdims=True)])
         for kind, field in fields.items()
     }
-    data, labels, reference_row = _montage(situation, channels, names, rng)
-    recording = _recording(data, labels, situation, recorder)
+    data, labels, reference_row = in_montage(situation, channels, names, rng)
+    recording = as_recording(data, labels, situation, recorder)
     measured = measure_recording(recording, line_frequency=situation.line)
     truth, strength = label_cells(
         measured.frame,
@@ -198,52 +107,6 @@ def simulate(
         condition=situation.words(),
         look_alike=_pattern_per_epoch(happenings, measured.grid.onset),
     )
-
-
-class _Recorder:
-    """The recorder's filters and sampling rate, the same for everything it records."""
-
-    def __init__(self, situation: Situation, background: Background, sfreq: float) -> None:
-        self.situation = situation
-        self.sfreq = sfreq
-        self.own_low = None if situation.extended else background.kept_to_hz
-        self.own_notch = None if situation.extended else background.notch_hz
-
-    def __call__(self, field: Array, *, own: bool = False) -> Array:
-        """Filter and resample; ``own``: the background, which has its own filters already."""
-        from scipy.fft import irfft, next_fast_len, rfft, rfftfreq
-        from scipy.signal import resample_poly
-
-        s = self.situation
-        field = np.asarray(field, dtype=np.float64)
-        n = field.shape[1]
-        if s.high_pass:
-            field = electrode.high_pass_first_order(field, s.high_pass, self.sfreq)
-        padded = next_fast_len(n + int(self.sfreq), real=True)
-        freqs = rfftfreq(padded, 1 / self.sfreq)
-        gain = np.ones_like(freqs)
-        low = s.low_pass
-        if low is not None:
-            gain /= np.sqrt(1 + (freqs / low) ** 8)
-        notch = s.notch
-        if not own:
-            if self.own_low is not None:
-                gain /= np.sqrt(1 + (freqs / (0.97 * self.own_low)) ** 40)
-            notch = notch or self.own_notch
-        if notch is not None:
-            gain *= 1 - np.exp(-0.5 * ((freqs - notch) / 1.2) ** 2)
-        field = irfft(rfft(field, padded, axis=1) * gain, padded, axis=1)[:, :n]
-        if s.sfreq != self.sfreq:
-            up, down = _ratio(s.sfreq, self.sfreq)
-            field = resample_poly(field, up, down, axis=1)
-        return np.asarray(field)
-
-
-def _ratio(new: float, old: float) -> tuple[int, int]:
-    from math import gcd
-
-    common = gcd(round(new), round(old))
-    return round(new) // common, round(old) // common
 
 
 def draw_artifact(
@@ -416,178 +279,3 @@ def _pattern_per_epoch(
     for name, begin, end in happenings:
         patterns[(onset < end) & (onset + 1 > begin)] = name
     return patterns
-
-
-def _montage(
-    situation: Situation, channels: Array, names: tuple[str, ...], rng: np.random.Generator
-) -> tuple[Array, list[str], str | None]:
-    """Channels of the drawn montage, their labels, and what the reference row stands for."""
-    if situation.montage == "Cz" and "Cz" in names:
-        cz = names.index("Cz")
-        keep = [row for row in range(len(names)) if row != cz]
-        labels = [f"EEG {names[row]}-Cz" for row in keep]
-        return channels[keep] - channels[cz], labels, "Cz"
-    if situation.montage == "average":
-        return channels - channels.mean(axis=0), [f"{name}-AVG" for name in names], None
-    if situation.montage == "system":
-        # A reference somewhere on the midline that has no channel of its own.
-        middle = [row for row, name in enumerate(names) if name.endswith("z")] or [0]
-        weights = rng.dirichlet(np.ones(len(middle)))
-        return (
-            channels - weights @ channels[middle],
-            [f"{name}-REF" for name in names],
-            "mix",
-        )
-    if situation.montage == "bipolar":
-        pairs = [
-            (a, b)
-            for chain in CHAINS
-            for a, b in itertools.pairwise(chain)
-            if a in names and b in names
-        ]
-        data = np.stack(
-            [channels[names.index(a)] - channels[names.index(b)] for a, b in pairs]
-        )
-        return data, [f"{a}-{b}" for a, b in pairs], None
-    return channels, [f"EEG {name}-LE" for name in names], "ears"
-
-
-def _recording(
-    data: Array, labels: list[str], situation: Situation, recorder: _Recorder
-) -> Recording:
-    low = situation.low_pass or recorder.own_low
-    notch = situation.notch or recorder.own_notch
-    stated = Filters(situation.high_pass, low, notch)
-    blank = Filters(None, None, None)
-    return from_array(
-        data.astype(np.float32),
-        situation.sfreq,
-        labels,
-        filters=[stated if situation.header else blank] * len(labels),
-    )
-
-
-def label_cells(
-    frame: Frame,
-    starts: NDArray[np.int64],
-    n: int,
-    sfreq: float,
-    names: tuple[str, ...],
-    electrodes: dict[str, Array],
-    quiet_channels: Array,
-    situation: Situation,
-    reference_row: str | None,
-) -> tuple[NDArray[np.int8], NDArray[np.float32]]:
-    """Truth and strength of every kind at every epoch and site of the frame.
-
-    A cell is *present* when the artifact at its electrode is large enough for a reader to
-    see over the background there, *clean* when it is far below, and unknown in between:
-
-    ======  ==========================  ===================  ==================
-    kind    size                        present from         clean below
-    ======  ==========================  ===================  ==================
-    eye     peak-to-peak                30 uV                10 uV
-    muscle  rms above 15 Hz in the      1.25 times the       0.35 times
-            strongest fifth of a        background there
-            second
-    pop     change over 16 ms           20 uV and twice the  4 uV and no tail
-                                        background's usual   above 15 uV
-    mains   amplitude                   1.5 uV and 3 dB      0.4 uV or -6 dB
-                                        over the background
-    ======  ==========================  ===================  ==================
-
-    ``electrodes`` holds per kind the potentials at ``names`` and, last, at the reference.
-    """
-    index = starts[:, None] + np.arange(n)
-    rows = _rows_of(frame, names, reference_row)
-    shape = (len(KIND_NAMES), len(starts), len(frame.sites))
-    truth = np.full(shape, UNKNOWN, dtype=np.int8)
-    strength = np.full(shape, np.nan, dtype=np.float32)
-    average = quiet_channels - quiet_channels.mean(axis=0)
-    quiet = np.concatenate([average, -quiet_channels.mean(axis=0, keepdims=True)])
-    lag = max(1, round(STEP_SECONDS * sfreq))
-    for number, kind in enumerate(KIND_NAMES):
-        if kind not in electrodes:
-            continue
-        field = electrodes[kind][:, index]
-        base = quiet[:, index]
-        size, present, clean = _SIZES[kind](field, base, sfreq, lag, situation)
-        cell = np.where(present, PRESENT, np.where(clean, CLEAN, UNKNOWN)).astype(np.int8)
-        known = rows >= 0
-        truth[number][:, known] = cell[rows[known]].T
-        strength[number][:, known] = size[rows[known]].T
-        if reference_row == "mix":
-            # The made-up reference shares in what its electrodes have: not a clean label.
-            truth[number][:, [role == "reference" for role in frame.roles]] = UNKNOWN
-    return truth, strength
-
-
-def _rows_of(
-    frame: Frame, names: tuple[str, ...], reference_row: str | None
-) -> NDArray[np.intp]:
-    rows = []
-    for site, canonical, role in zip(
-        frame.sites, frame.canonical, frame.roles, strict=True
-    ):
-        name = canonical or canonical_site(site)
-        if role == "reference" and reference_row in ("ears", "mix"):
-            rows.append(len(names))
-        else:
-            rows.append(names.index(name) if name in names else -1)
-    return np.array(rows, dtype=np.intp)
-
-
-Sized = tuple[Array, NDArray[np.bool_], NDArray[np.bool_]]
-
-
-def _eye_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
-    size = np.ptp(field, axis=2)
-    return size, size >= 30, size < 10
-
-
-def _muscle_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
-    fast, usual = _above_15(field, sfreq), _above_15(base, sfreq)
-    n = fast.shape[2] // 5
-    parts = fast[:, :, : 5 * n].reshape(*fast.shape[:2], 5, n)
-    size = np.sqrt((parts**2).mean(axis=3)).max(axis=2)
-    beside = np.sqrt(np.median((usual**2).mean(axis=2), axis=1))[:, None] + 0.3
-    return size, size >= 1.25 * beside, size < 0.35 * beside
-
-
-def _above_15(x: Array, sfreq: float) -> Array:
-    from scipy.fft import irfft, rfft, rfftfreq
-
-    n = x.shape[2]
-    gain = rfftfreq(n, 1 / sfreq) >= 15
-    return np.asarray(irfft(rfft(x, axis=2) * gain, n, axis=2))
-
-
-def _pop_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
-    size = np.abs(field[:, :, lag:] - field[:, :, :-lag]).max(axis=2)
-    usual = np.median(np.abs(base[:, :, lag:] - base[:, :, :-lag]).max(axis=2), axis=1)[
-        :, None
-    ]
-    tail = np.ptp(field, axis=2)
-    return size, (size >= 20) & (size >= 2 * usual), (size < 4) & (tail < 15)
-
-
-def _mains_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
-    from scipy.fft import rfft, rfftfreq
-
-    n = field.shape[2]
-    window = np.hanning(n + 1)[:-1]
-    near = np.abs(rfftfreq(n, 1 / sfreq) - s.line) <= 1.6
-    scale = 2 / (sfreq * np.sum(window**2)) * (sfreq / n)
-
-    def power(x: Array) -> Array:
-        spectrum = rfft(x * window, axis=2)[:, :, near]
-        return np.asarray(scale * (np.abs(spectrum) ** 2).sum(axis=2))
-
-    own = power(field)
-    beside = np.median(power(base), axis=1)[:, None] + 1e-3
-    size = np.sqrt(2 * own)
-    over = 10 * np.log10(own / beside + 1e-9)
-    return size, (size >= 1.5) & (over >= 3), (size < 0.4) | (over < -6)
-
-
-_SIZES = {"eye": _eye_size, "muscle": _muscle_size, "pop": _pop_size, "mains": _mains_size}
