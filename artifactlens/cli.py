@@ -141,18 +141,16 @@ def _triage_all(
     taken: dict[str, Path] = {}
     for number, path in enumerate(once, start=1):
         folder = default_folder(path) if out is None else out / default_folder(path).name
-        first = taken.setdefault(os.path.realpath(folder), path)
+        place = os.path.realpath(folder)
         result = None
-        if first is not path:
-            report = _failure(
-                path,
-                f"{folder} would hold the results of both {first} and {path}.",
-                "Triage them in two calls with different --out folders.",
-            )
+        if place in taken:
+            report = _clash(path, taken[place], folder)
         else:
-            place = f"{number} of {len(once)}  {path.name}" if len(once) > 1 else path.name
-            with _progress(place, quiet) as progress:
+            name = f"{number} of {len(once)}  {path.name}" if len(once) > 1 else path.name
+            with _progress(name, quiet) as progress:
                 report, result = _triage_one(path, folder, mark, line, progress)
+            if result is not None:
+                taken[place] = path
         reports.append(report)
         if result is None:
             _print_failure(report)
@@ -185,6 +183,22 @@ def _triage_one(
         )
         return _failure(path, problem, remedy), None
     return _success(path, written, result), result
+
+
+def _clash(path: Path, first: Path, folder: Path) -> Report:
+    """Why a recording is not triaged into a folder that another one has filled."""
+    from artifactlens.errors import ArtifactlensError
+    from artifactlens.recording import open_recording
+
+    try:
+        open_recording(path)  # a companion file of the first one has another problem
+    except ArtifactlensError as error:
+        return _failure(path, error.problem, error.remedy)
+    return _failure(
+        path,
+        f"{folder} already holds the results of {first}.",
+        "Triage them in two calls with different --out folders.",
+    )
 
 
 def _success(path: Path, folder: Path, result: Result) -> Report:
@@ -335,7 +349,7 @@ def _echo(text: str, *, err: bool = False, hang: int = 0, wrap: bool = True) -> 
 
 
 @contextmanager
-def _progress(place: str, quiet: bool) -> Iterator[Progress | None]:
+def _progress(name: str, quiet: bool) -> Iterator[Progress | None]:
     """A progress bar on standard error, if that is a terminal."""
     if quiet or not sys.stderr.isatty():
         yield None
@@ -347,13 +361,13 @@ def _progress(place: str, quiet: bool) -> Iterator[Progress | None]:
 
     from artifactlens.page.words import span
 
-    name = TextColumn(
+    label = TextColumn(
         "{task.description}",
         markup=False,
         table_column=Column(no_wrap=True, overflow="ellipsis", max_width=40),
     )
     with Bar(
-        name,
+        label,
         BarColumn(),
         TextColumn("{task.fields[state]}"),
         TimeRemainingColumn(),
@@ -362,7 +376,7 @@ def _progress(place: str, quiet: bool) -> Iterator[Progress | None]:
         redirect_stdout=False,
         redirect_stderr=False,
     ) as bar:
-        task = bar.add_task(_shown(place), total=None, state="opening")
+        task = bar.add_task(_shown(name), total=None, state="opening")
 
         def update(done: int, total: int) -> None:
             state = f"{span(done)} of {span(total)}" if done < total else "writing"

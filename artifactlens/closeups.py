@@ -120,11 +120,11 @@ def _derivations(
     pairs = [(at[a], at[b]) for a, b in DOUBLE_BANANA if a in at and b in at]
     pairs = [(a, b) for a, b in pairs if frame.chain[a] == frame.chain[b]]
     reached = {index for pair in pairs for index in pair}
-    chosen: list[tuple[int, int | None]] = [
-        pair for pair in pairs if pair[0] in wanted or pair[1] in wanted
-    ]
     rank = {index: place for place, index in enumerate(wanted)}
-    chosen.sort(key=lambda pair: min(rank.get(pair[0], 999), rank.get(pair[1] or -1, 999)))
+    last = len(wanted)
+    touching = [pair for pair in pairs if pair[0] in rank or pair[1] in rank]
+    touching.sort(key=lambda pair: min(rank.get(index, last) for index in pair))
+    chosen: list[tuple[int, int | None]] = [*touching]
     chosen += [(index, None) for index in wanted if index not in reached]
     chosen = chosen[:MOST_INVOLVED]
     n_involved = len(chosen)

@@ -97,20 +97,6 @@ class Model:
                 scores[row] += np.append(curve(probes), curve.missing)[place]
         return scores
 
-    def contributions(
-        self, kind: str, measured: dict[str, NDArray[np.float64]]
-    ) -> NDArray[np.float64]:
-        """What each feature adds, shape (n_features, ...) in the order of FEATURE_NAMES."""
-        head = self.heads[KIND_NAMES.index(kind)]
-        return np.stack(
-            [
-                head.curves[name](measured[name])
-                if name in head.curves
-                else np.zeros(np.shape(measured[name]))
-                for name in FEATURE_NAMES
-            ]
-        )
-
 
 def logistic(score: NDArray[np.float64]) -> NDArray[np.float64]:
     """Probability of a log-odds score, without overflow."""

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
 from artifactlens.features import BY_NAME, FEATURE_NAMES
+from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import Contribution, finite_or_none
 
 if TYPE_CHECKING:
@@ -18,34 +19,46 @@ if TYPE_CHECKING:
 Cells = NDArray[np.intp]
 
 
+def values_at(
+    table: FeatureTable, epochs: Cells, sites: Cells
+) -> dict[str, NDArray[np.float64]]:
+    """Every feature at single cells, (n_cells,) each, NaN where not measured."""
+    return {
+        name: table.column(name)[epochs, sites].astype(np.float64) for name in FEATURE_NAMES
+    }
+
+
 def explain(
     model: Model,
     kind: str,
-    table: FeatureTable,
+    measured: dict[str, NDArray[np.float64]],
     usual: dict[str, NDArray[np.float32]],
-    epochs: Cells,
     sites: Cells,
 ) -> list[tuple[Contribution, ...]]:
-    """Contributions of all features at single cells, largest absolute log-odds first.
+    """Contributions at single cells, largest absolute log-odds first.
+
+    All features that the kind's head looks at are listed; the others add nothing to it.
 
     Parameters
     ----------
     model, kind
         Whose score is explained.
-    table : FeatureTable
+    measured : dict of array, shape (n_cells,)
+        See :func:`values_at`.
     usual : dict of array, shape (n_sites,)
         Each feature's value on the quiet epochs of this recording.
-    epochs, sites : array of int, shape (n_cells,)
-        The cells to explain.
+    sites : array of int, shape (n_cells,)
+        The site of each cell.
     """
-    measured = {
-        name: table.column(name)[epochs, sites].astype(np.float64) for name in FEATURE_NAMES
-    }
-    parts = model.contributions(kind, measured)
+    curves = model.heads[KIND_NAMES.index(kind)].curves
+    names = [name for name in FEATURE_NAMES if name in curves]
+    if not names:
+        return [()] * len(sites)
+    parts = np.stack([curves[name](measured[name]) for name in names])
     order = np.argsort(-np.abs(parts), axis=0, kind="stable")
 
     def part(row: int, cell: int) -> Contribution:
-        feature = BY_NAME[FEATURE_NAMES[row]]
+        feature = BY_NAME[names[row]]
         return Contribution(
             feature=feature.name,
             label=feature.label,
@@ -56,7 +69,7 @@ def explain(
         )
 
     return [
-        tuple(part(int(row), cell) for row in order[:, cell]) for cell in range(len(epochs))
+        tuple(part(int(row), cell) for row in order[:, cell]) for cell in range(len(sites))
     ]
 
 

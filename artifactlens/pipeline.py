@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -253,6 +254,11 @@ def triage(
         _as_recording(source), line_frequency=line_frequency, progress=progress
     )
     return conclude(measured, model, mark=mark, line_frequency=line_frequency)
+
+
+# Importing the module artifactlens.triage puts it into the package under the name of this
+# function, which is the public one.
+vars(sys.modules["artifactlens"])["triage"] = triage
 
 
 def _check_options(mark: str, line_frequency: float | None) -> None:

@@ -51,7 +51,6 @@ def find_segments(
     kind: str,
     probability: NDArray[np.floating],
     grid: EpochGrid,
-    near: Bools,
     step_at: NDArray[np.floating],
     *,
     enter: float,
@@ -66,8 +65,6 @@ def find_segments(
         NaN where the kind cannot be judged.
     grid : EpochGrid
         No event crosses a gap.
-    near : array, shape (n_sites, n_sites), bool
-        Spatial neighbours.
     step_at : array, shape (n_epochs, n_sites)
         Place of the fastest step within the epoch, 0..1.
     enter, stay : float
@@ -81,7 +78,7 @@ def find_segments(
         runs = _runs(together, grid, enter, stay, HOLE_SECONDS[kind])
         return _eye_events(runs, p, stay)
     runs = _runs(p, grid, enter, stay, HOLE_SECONDS[kind])
-    return _merge(kind, runs, p, near, step_at)
+    return _merge(kind, runs, p, step_at)
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,7 +155,6 @@ def _merge(
     kind: str,
     runs: _Runs,
     p: NDArray[np.floating],
-    near: Bools,
     step_at: NDArray[np.floating],
 ) -> Segments:
     n = len(runs.first)
@@ -166,7 +162,7 @@ def _merge(
         nothing = np.zeros(0, dtype=np.intp)
         return Segments(nothing, nothing, [], nothing, nothing, nothing, nothing)
     peak = _peaks(runs, p)
-    group = _groups(kind, runs, peak, p.shape, near, step_at)
+    group = _groups(kind, runs, peak, p.shape, step_at)
     strength = p[peak, runs.column]
 
     order = np.lexsort((runs.first, group))
@@ -212,10 +208,9 @@ def _groups(
     runs: _Runs,
     peak: Ints,
     shape: tuple[int, ...],
-    near: Bools,
     step_at: NDArray[np.floating],
 ) -> Ints:
-    """Which runs are one event: overlapping in time at neighbouring sites."""
+    """Which runs are one event: those that share most of their time (a pop: its instant)."""
     from scipy.sparse import coo_array
     from scipy.sparse.csgraph import connected_components
 
@@ -227,8 +222,8 @@ def _groups(
     epoch = np.arange(length.sum()) - offset[member] + runs.first[member]
     run_at[runs.column[member], epoch] = member
 
-    linked = near if kind == "muscle" else np.ones_like(near)
-    one, other_site = np.nonzero(linked[runs.column])
+    one = np.repeat(np.arange(n), n_sites)
+    other_site = np.tile(np.arange(n_sites), n)
     # Of two overlapping runs, one holds the first epoch of the other.
     other = run_at[other_site, runs.first[one]]
     held = (other >= 0) & (other != one)

@@ -32,6 +32,9 @@ of their number (our own simulation of pink noise)."""
 LINE_FOUND_DB = 3.0
 NOTCH_DIP_DB = -6.0
 ROLL_OFF_DB = 10.0
+OVERRIDE_SHARE = 0.7
+"""A measured low-pass counts if it lies below this share of the header's or of Nyquist."""
+
 AVERAGE_REFERENCE_RATIO = 0.02
 PLAUSIBLE_UV = (0.8, 400.0)
 """Median robust amplitude of scalp EEG channels that passes without a remark."""
@@ -126,7 +129,7 @@ def survey(
         at_times = np.quantile(stack, 0.9, axis=0)
         chance = CHANCE_DB / np.sqrt(len(same))
         roll_off = _roll_off(freqs, psd)
-        if roll_off is not None and roll_off < 0.9 * low_pass:
+        if roll_off is not None and roll_off < OVERRIDE_SHARE * low_pass:
             low_pass, source = roll_off, "measured"
         candidates = (line_frequency,) if line_frequency else LINE_FREQUENCIES
         looked = [
@@ -236,9 +239,14 @@ def _roll_off(freqs: NDArray[np.float64], psd: NDArray[np.float64]) -> float | N
     edge = candidates[steep[0]]
     beyond = keep & (freqs > 1.3 * edge) & (freqs < 0.97 * nyquist)
     below = keep & (freqs >= 0.8 * edge) & (freqs <= edge)
-    if level[beyond].mean() > level[below].mean() - ROLL_OFF_DB:
+    reference = level[below].mean()
+    if level[beyond].mean() > reference - ROLL_OFF_DB:
         return None
-    return float(edge)
+    # A steep filter bites later than the first fall shows: where 5 dB are gone, of which
+    # brain alone takes about 2.
+    smooth = np.convolve(level, np.ones(3) / 3, mode="same")
+    gone = keep & (freqs >= edge) & (smooth < reference - 5.0)
+    return float(freqs[gone][0]) if gone.any() else float(edge)
 
 
 def _line_height(

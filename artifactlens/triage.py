@@ -10,10 +10,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.curves import logistic
-from artifactlens.evidence import explain, quiet_values, sentence
+from artifactlens.evidence import explain, quiet_values, sentence, values_at
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.lookalikes import look_alike
-from artifactlens.result import Assessment, Flag
+from artifactlens.result import Assessment, Flag, finite_or_none
 from artifactlens.segments import Segments, find_segments, refine, union_seconds
 
 if TYPE_CHECKING:
@@ -91,7 +91,6 @@ def make_flags(
             head.kind,
             judgement.probability[row],
             grid,
-            frame.near,
             table.step_at,
             enter=enter,
             stay=head.doubtful,
@@ -122,14 +121,13 @@ def _flags_of(
     end: float,
 ) -> list[Flag]:
     kind = KIND_NAMES[row]
-    parts = explain(
-        model, kind, table, judgement.usual, events.peak_epoch, events.peak_site
-    )
+    measured = values_at(table, events.peak_epoch, events.peak_site)
+    parts = explain(model, kind, measured, judgement.usual, events.peak_site)
     n_others = len(frame.sites) - 1
     flags = []
     for event, sites in enumerate(events.sites):
         epoch, site = int(events.peak_epoch[event]), int(events.peak_site[event])
-        values = {part.feature: part.value for part in parts[event]}
+        values = {name: finite_or_none(column[event]) for name, column in measured.items()}
         at_reference = frame.roles[site] == "reference"
         if at_reference:
             sites = tuple(s for s in sites if frame.roles[s] == "reference")

@@ -25,7 +25,9 @@ CORPORA = Path(os.environ.get("ARTIFACTLENS_CORPORA", ROOT.parent / "shared" / "
 def corpora():
     """The folder of recordings described in data_cards/."""
     if not CORPORA.is_dir():
-        pytest.skip("ARTIFACTLENS_CORPORA and ../shared/corpora name no folder of recordings")
+        pytest.skip(
+            "ARTIFACTLENS_CORPORA and ../shared/corpora name no folder of recordings"
+        )
     return CORPORA
 
 

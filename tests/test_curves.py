@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 
 from artifactlens.curves import MODEL_VERSION, Curve, Head, Model, load_model, logistic
 from artifactlens.errors import ModelError
+from artifactlens.evidence import explain, values_at
 from artifactlens.features import (
     FEATURE_NAMES,
     MEASURED,
@@ -65,6 +66,7 @@ def table_of(values, usual=None):
         pace=np.zeros((n_epochs, n_sites, 10), np.float16),
         step_at=np.zeros((n_epochs, n_sites), np.float16),
         front_at=np.zeros(n_epochs, np.float16),
+        segment=np.zeros(n_epochs, np.int64),
     )
 
 
@@ -148,21 +150,36 @@ def test_scores_are_the_base_plus_all_curves_and_contributions_add_up_to_them(mo
                         curve.missing if math.isnan(x) else curve.values[step]
                     )
         np.testing.assert_allclose(scores[row], expected, atol=1e-9)
-        measured = {name: table.column(name).astype(float) for name in FEATURE_NAMES}
-        parts = model.contributions(head.kind, measured)
-        assert parts.shape == (len(FEATURE_NAMES), n_epochs, n_sites)
-        np.testing.assert_allclose(head.base + parts.sum(axis=0), scores[row], atol=1e-9)
+        epochs, sites = (cell.ravel() for cell in np.indices((n_epochs, n_sites)))
+        explained = explain(
+            model, head.kind, values_at(table, epochs, sites), no_usual(n_sites), sites
+        )
+        total = [head.base + sum(part.log_odds for part in parts) for parts in explained]
+        np.testing.assert_allclose(total, scores[row].ravel(), atol=1e-9)
+        for parts in explained:
+            assert sorted(part.feature for part in parts) == sorted(head.curves)
 
 
-def test_contributions_stand_in_the_order_of_the_feature_table_and_unused_ones_are_0():
-    curve = Curve(np.array([0.0]), np.array([1.0, 2.0]), 0.5)
-    heads = tuple(Head(kind, 0.0, {"slope": curve}, 0.9, 0.5) for kind in KIND_NAMES)
-    parts = Model("one", "", heads, {}).contributions(
-        "pop", {name: np.array([1.0]) for name in FEATURE_NAMES}
+def no_usual(n_sites):
+    return {name: np.full(n_sites, np.nan, np.float32) for name in FEATURE_NAMES}
+
+
+def test_equal_contributions_stand_in_the_order_of_the_feature_table():
+    def curve(value):
+        return Curve(np.array([0.0]), np.array([0.0, value]), 0.5)
+
+    # Written in another order; slope adds as much as swing, and spread more.
+    curves = {"slope": curve(-2.0), "swing": curve(2.0), "spread": curve(3.0)}
+    heads = tuple(Head(kind, 0.0, curves, 0.9, 0.5) for kind in KIND_NAMES)
+    (parts,) = explain(
+        Model("one", "", heads, {}),
+        "pop",
+        {name: np.array([1.0]) for name in FEATURE_NAMES},
+        no_usual(1),
+        np.array([0]),
     )
-    expected = np.zeros((len(FEATURE_NAMES), 1))
-    expected[FEATURE_NAMES.index("slope")] = 2.0
-    np.testing.assert_array_equal(parts, expected)
+    found = [(part.feature, part.log_odds) for part in parts]
+    assert found == [("spread", 3.0), ("swing", 2.0), ("slope", -2.0)]
 
 
 def test_logistic_is_exact_and_does_not_overflow():

@@ -21,15 +21,13 @@ def grid_of(n_epochs, segment=None):
     return EpochGrid(np.arange(n_epochs) * 256, onset, index, 256)
 
 
-def events_of(kind, columns, *, near=None, step_at=None, segment=None):
+def events_of(kind, columns, *, step_at=None, segment=None):
     """Events of probabilities given as one sequence per site."""
     p = np.array(columns, dtype=np.float32).T
-    n_sites = p.shape[1]
     return find_segments(
         kind,
         p,
         grid_of(len(p), segment),
-        np.zeros((n_sites, n_sites), bool) if near is None else np.array(near, bool),
         np.full(p.shape, 0.5) if step_at is None else np.array(step_at, dtype=float).T,
         enter=ENTER,
         stay=STAY,
@@ -43,20 +41,19 @@ def spans(events):
     ]
 
 
+def half_precision(values, *shape):
+    return np.zeros(shape, np.float16) if values is None else np.array(values, np.float16)
+
+
 def table_of(pace=None, step_at=None, front_at=None):
     n_epochs, n_sites = (pace if pace is not None else step_at).shape[:2]
     return FeatureTable(
         values=np.zeros((len(MEASURED), n_epochs, n_sites), np.float32),
         usual=np.zeros((len(MEASURED), n_sites), np.float32),
-        pace=np.zeros((n_epochs, n_sites, 10), np.float16)
-        if pace is None
-        else pace.astype(np.float16),
-        step_at=np.zeros((n_epochs, n_sites), np.float16)
-        if step_at is None
-        else np.asarray(step_at, np.float16),
-        front_at=np.zeros(n_epochs, np.float16)
-        if front_at is None
-        else np.asarray(front_at, np.float16),
+        pace=half_precision(pace, n_epochs, n_sites, 10),
+        step_at=half_precision(step_at, n_epochs, n_sites),
+        front_at=half_precision(front_at, n_epochs),
+        segment=np.zeros(n_epochs, np.int64),
     )
 
 
@@ -156,46 +153,54 @@ def test_runs_of_one_site_agree_with_a_plain_loop(kind, cells, cuts):
 
 # Which runs are one event ----------------------------------------------------------------
 
-CHAIN = [[0, 1, 0], [1, 0, 1], [0, 1, 0]]  # 0 beside 1 beside 2
 
-
-def test_muscle_at_neighbours_that_overlap_by_half_is_one_event():
-    found = events_of(
-        "muscle", [[0, 0.95, 0.95, 0.95, 0], [0, 0, 0.92, 0.99, 0.95], [0] * 5], near=CHAIN
-    )
+@pytest.mark.parametrize("kind", ["muscle", "mains"])
+def test_runs_that_share_half_of_the_longer_one_are_one_event(kind):
+    # Seconds 1-3 and 2-4 share 2 of 3.
+    found = events_of(kind, [[0, 0.95, 0.95, 0.95, 0], [0, 0, 0.92, 0.99, 0.95], [0] * 5])
     assert spans(found) == [(1, 5, (0, 1))]
     assert (found.peak_epoch[0], found.peak_site[0]) == (3, 1)
     assert (found.first_site[0], found.last_site[0]) == (0, 1)
+    # 2 of 4 are just enough, 1 of 3 is not.
+    just = events_of(kind, [[0.95] * 4 + [0] * 2, [0] * 2 + [0.95] * 4])
+    assert spans(just) == [(0, 6, (0, 1))]
+    less = events_of(kind, [[0.95] * 3 + [0] * 2, [0] * 2 + [0.95] * 3])
+    assert spans(less) == [(0, 3, (0,)), (2, 5, (1,))]
 
 
-def test_muscle_at_two_distant_sites_is_two_events():
-    found = events_of("muscle", [[0.95] * 3, [0] * 3, [0.95] * 3], near=CHAIN)
-    assert spans(found) == [(0, 3, (0,)), (0, 3, (2,))]
-
-
-def test_muscle_reaches_a_distant_site_by_way_of_the_one_between():
-    found = events_of("muscle", [[0.95] * 3] * 3, near=CHAIN)
-    assert spans(found) == [(0, 3, (0, 1, 2))]
-
-
-def test_a_short_burst_within_a_long_one_at_a_neighbour_stays_its_own_event():
-    found = events_of("muscle", [[0.95] * 10, [0] * 4 + [0.95] * 2 + [0] * 4, [0] * 10],
-                      near=CHAIN)  # fmt: skip
-    assert spans(found) == [(0, 10, (0,)), (4, 6, (1,))]
-
-
-def test_mains_at_any_sites_at_the_same_time_is_one_event():
-    found = events_of("mains", [[0.95] * 4, [0] * 4, [0.95] * 4])
+@pytest.mark.parametrize("kind", ["muscle", "mains"])
+def test_what_begins_and_ends_together_at_two_of_three_sites_is_one_event(kind):
+    found = events_of(kind, [[0.95] * 4, [0] * 4, [0.95] * 4])
     assert spans(found) == [(0, 4, (0, 2))]
+
+
+@pytest.mark.parametrize("kind", ["muscle", "mains"])
+def test_runs_that_follow_one_another_are_two_events(kind):
+    found = events_of(kind, [[0.95] * 3 + [0] * 3, [0] * 3 + [0.95] * 3])
+    assert spans(found) == [(0, 3, (0,)), (3, 6, (1,))]
+
+
+def test_two_runs_that_hardly_meet_are_one_event_by_way_of_the_one_between():
+    # 0-3 and 4-7 share nothing, but each shares 2 of 4 seconds with 2-5.
+    found = events_of(
+        "muscle",
+        [[0.95] * 4 + [0] * 4, [0] * 2 + [0.95] * 4 + [0] * 2, [0] * 4 + [0.95] * 4],
+    )
+    assert spans(found) == [(0, 8, (0, 1, 2))]
+    assert (found.first_site[0], found.last_site[0]) == (0, 2)
+
+
+def test_a_short_burst_within_a_long_one_at_another_site_stays_its_own_event():
+    found = events_of("muscle", [[0.95] * 10, [0] * 4 + [0.95] * 2 + [0] * 4, [0] * 10])
+    assert spans(found) == [(0, 10, (0,)), (4, 6, (1,))]
 
 
 def test_a_pop_at_one_instant_at_two_sites_is_one_event():
     p = [[0, 0.95, 0], [0, 0.97, 0]]
-    near = [[0, 0], [0, 0]]
-    together = events_of("pop", p, near=near, step_at=[[0, 0.50, 0], [0, 0.54, 0]])
+    together = events_of("pop", p, step_at=[[0, 0.50, 0], [0, 0.54, 0]])
     assert spans(together) == [(1, 2, (0, 1))]
     assert together.peak_site[0] == 1
-    apart = events_of("pop", p, near=near, step_at=[[0, 0.50, 0], [0, 0.56, 0]])
+    apart = events_of("pop", p, step_at=[[0, 0.50, 0], [0, 0.56, 0]])
     assert spans(apart) == [(1, 2, (0,)), (1, 2, (1,))]
 
 
@@ -245,9 +250,7 @@ def test_every_high_cell_lies_in_an_event_and_every_event_holds_one(data, kind):
         data.draw(st.lists(cells, min_size=n_epochs, max_size=n_epochs))
         for _ in range(n_sites)
     ]
-    near = np.zeros((n_sites, n_sites), bool)
-    near[np.arange(n_sites - 1), np.arange(1, n_sites)] = True
-    found = events_of(kind, columns, near=near | near.T)
+    found = events_of(kind, columns)
     p = np.nan_to_num(np.array(columns).T, nan=-1.0)
     covered = np.zeros_like(p, dtype=bool)
     for number, (first, last, sites) in enumerate(spans(found)):
@@ -286,9 +289,8 @@ def test_muscle_begins_and_ends_within_a_tenth_of_a_second(begin, end):
     p = np.zeros((12, 20))
     p[int(begin) : int(np.ceil(end)), at] = 0.95
     events = find_segments(
-        "muscle", p, measured.grid, measured.frame.near, measured.table.step_at,
-        enter=ENTER, stay=STAY,
-    )  # fmt: skip
+        "muscle", p, measured.grid, measured.table.step_at, enter=ENTER, stay=STAY
+    )
     quiet = np.median(measured.table.pace.astype(float).mean(axis=2), axis=0)
     onset, finish, moment = refine(
         "muscle", events, measured.grid, measured.table, quiet, 0.0
@@ -304,9 +306,8 @@ def test_a_burst_that_began_late_in_the_second_before_begins_there():
     p = np.zeros((12, 20))
     p[4:6, row("T7")] = 0.95
     events = find_segments(
-        "muscle", p, measured.grid, measured.frame.near, measured.table.step_at,
-        enter=ENTER, stay=STAY,
-    )  # fmt: skip
+        "muscle", p, measured.grid, measured.table.step_at, enter=ENTER, stay=STAY
+    )
     quiet = np.median(measured.table.pace.astype(float).mean(axis=2), axis=0)
     onset, _, _ = refine("muscle", events, measured.grid, measured.table, quiet, 0.0)
     assert onset[0] == pytest.approx(3.75, abs=0.101)
@@ -392,9 +393,8 @@ def test_the_step_of_a_pop_in_a_recording_is_found_to_a_hundredth_of_a_second():
     p = np.zeros((8, 20))
     p[4, row("P3")] = 0.95
     events = find_segments(
-        "pop", p, measured.grid, measured.frame.near, measured.table.step_at,
-        enter=ENTER, stay=STAY,
-    )  # fmt: skip
+        "pop", p, measured.grid, measured.table.step_at, enter=ENTER, stay=STAY
+    )
     quiet = np.ones(len(SITES) + 1)
     onset, _, moment = refine("pop", events, measured.grid, measured.table, quiet, 0.3)
     assert moment[0] == pytest.approx(4.37, abs=0.02)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from datetime import datetime
@@ -39,7 +40,7 @@ def prepared_folder(folder: Path) -> Iterator[None]:
     OutputError
         If the folder cannot be written, or holds files that no triage wrote.
     """
-    made = [path for path in (folder, *folder.parents) if not path.exists()]
+    made = [path for path in (folder, *folder.parents) if not os.path.exists(path)]
     probe_folder(folder)
     foreign = sorted(path.name for path in folder.iterdir() if not _is_ours(path.name))
     if foreign:
