@@ -117,7 +117,9 @@ def demo(folder: Path, mark: str, quiet: bool, as_json: bool) -> None:
         probe_folder(folder)
         path = write_demo(folder)
     except ArtifactlensError as error:
-        _finish([_failure(folder, error.problem, error.remedy)], as_json, quiet)
+        report = _failure(folder, error.problem, error.remedy)
+        _print_failure(report)
+        _finish([report], as_json, quiet)
     if not (quiet or as_json):
         _echo(f"Wrote {path}: an invented recording, no person was recorded.\n")
     _finish(_triage_all([path], None, mark, "auto", quiet, as_json), as_json, quiet)

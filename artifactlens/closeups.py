@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -31,12 +32,23 @@ MOST_OTHERS = 6
 MOST_INVOLVED = 10
 
 
-def closeup(recording: Recording, frame: Frame, flag: Flag) -> TraceWindow | None:
-    """The traces around a flag; None if the recording has no signal there.
+def closeups(
+    recording: Recording, frame: Frame, flags: Iterable[Flag]
+) -> list[TraceWindow]:
+    """The traces around each flag; none where the recording has no signal.
 
     The involved derivations come first, then a few of the rest. Long flags are shown
     around their driving moment.
     """
+    # Inverting the incidence takes longer than all the rest, and is nearly always the same.
+    solved: dict[bytes, NDArray[np.float32]] = {}
+    found = [_closeup(recording, frame, flag, solved) for flag in flags]
+    return [window for window in found if window is not None]
+
+
+def _closeup(
+    recording: Recording, frame: Frame, flag: Flag, solved: dict[bytes, NDArray[np.float32]]
+) -> TraceWindow | None:
     rate = recording.sampling_rate
     low, high = flag.onset - 1.5, flag.end + 1.5
     if high - low > LONGEST_SECONDS:
@@ -61,7 +73,10 @@ def closeup(recording: Recording, frame: Frame, flag: Flag) -> TraceWindow | Non
     good = finite_rows(data)
     if stop - first < 8 or not good.any():
         return None
-    matrix = frame.matrix(good)
+    pattern = good.tobytes()
+    if pattern not in solved:
+        solved[pattern] = frame.matrix(good)
+    matrix = solved[pattern]
     solvable = finite_rows(matrix)
     sites = np.where(solvable[:, None], matrix, np.float32(0)) @ np.where(
         good[:, None], data, np.float32(0)

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from artifactlens.epochs import median_of_known
 from artifactlens.features import BY_NAME, FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.result import Contribution, finite_or_none
+from artifactlens.result import Contribution, amount, finite_or_none
 
 if TYPE_CHECKING:
     from artifactlens.curves import Model
@@ -92,17 +92,6 @@ def quiet_values(
         )
         for name in FEATURE_NAMES
     }
-
-
-def amount(value: float | None, unit: str, *, signed: bool = False) -> str:
-    """A measured value in words: one decimal for decibel, else three significant digits."""
-    if value is None:
-        return "not measurable"
-    sign = "+" if signed else ""
-    if abs(value) < 0.001:
-        value = 0.0
-    digits = ".1f" if unit == "dB" else ".0f" if abs(value) >= 100 else ".3g"
-    return f"{value:{sign}{digits}} {unit}".strip()
 
 
 def sentence(

@@ -119,7 +119,7 @@ def _no_signal(
     if amplitude_uv > 0:
         return RecordingError(
             f"{needed}; all {n_channels} are flat: their median amplitude is "
-            f"{amplitude_uv:.3g} uV; {_unit_advice(amplitude_uv)}.",
+            f"{_microvolts(amplitude_uv)}; {_unit_advice(amplitude_uv)}.",
             "Check the unit in the header, and export the recording again with the right one.",
         )
     return RecordingError(
@@ -138,7 +138,7 @@ def conclude(
     assessable = assess(
         frame, measured.leads, conditions, float(len(measured.grid)), implausible
     )
-    judgement = judge(model, measured.table, assessable)
+    judgement = judge(model, measured.table, frame, assessable)
     end = recording.duration
     flags = make_flags(
         model, judgement, measured.table, measured.grid, frame, conditions, mark, end
@@ -182,10 +182,15 @@ def unit_note(amplitude_uv: float) -> str:
     """Say that the amplitudes cannot be those of scalp EEG and which unit would fit."""
     low, high = PLAUSIBLE_UV
     return (
-        f"The median amplitude is {amplitude_uv:.3g} uV, where scalp EEG has {low:g} to "
+        f"The median amplitude is {_microvolts(amplitude_uv)}, where scalp EEG has {low:g} to "
         f"{high:g} uV: {_unit_advice(amplitude_uv)}. Check the unit in the header; nothing "
         "was rescaled."
     )
+
+
+def _microvolts(amplitude_uv: float) -> str:
+    digits = ".0f" if amplitude_uv >= 100 else ".2g"
+    return f"{amplitude_uv:{digits}} uV"
 
 
 def _unit_advice(amplitude_uv: float) -> str:
@@ -290,7 +295,7 @@ def default_folder(path: Path) -> Path:
 
 def triage_to_folder(
     path: str | Path,
-    folder: Path | None = None,
+    folder: str | Path | None = None,
     *,
     mark: str = "sure",
     line_frequency: float | None = None,
@@ -298,12 +303,26 @@ def triage_to_folder(
 ) -> tuple[Result, Path]:
     """Triage a file and write all outputs; the recording itself is only read.
 
+    Parameters
+    ----------
+    path : path
+    folder : path, optional
+        Made if need be; ``x.triage`` beside ``x.edf`` if not given. Results of an earlier
+        run in it are replaced.
+    mark, line_frequency, progress
+        As for :func:`triage`.
+
+    Returns
+    -------
+    Result, Path
+        The folder as the second.
+
     Raises
     ------
     ArtifactlensError
         With what was needed, what was given and what to do; nothing is written half.
     """
-    from artifactlens.closeups import closeup
+    from artifactlens.closeups import closeups
     from artifactlens.export.folder import prepared_folder, write_all
     from artifactlens.page.need import by_need
     from artifactlens.page.report import report_html
@@ -312,14 +331,14 @@ def triage_to_folder(
     _check_options(mark, line_frequency)
     model = load_model()
     recording = open_recording(path)
-    target = folder or default_folder(Path(path))
+    target = default_folder(Path(path)) if folder is None else Path(folder)
     with prepared_folder(target):
         measured = measure_recording(
             recording, line_frequency=line_frequency, progress=progress
         )
         result = conclude(measured, model, mark=mark, line_frequency=line_frequency)
         chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
-        cuts = [closeup(recording, measured.frame, flag) for flag, _ in chosen]
-        page = report_html(result, [cut for cut in cuts if cut is not None])
+        traces = closeups(recording, measured.frame, [flag for flag, _ in chosen])
+        page = report_html(result, traces)
         write_all(result, target, start=recording.start, report_html=page)
     return result, target

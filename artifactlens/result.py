@@ -273,3 +273,17 @@ def _result_from(body: dict[str, Any]) -> Result:
 def finite_or_none(value: float) -> float | None:
     """A float for JSON: None where it is NaN or infinite."""
     return float(value) if math.isfinite(value) else None
+
+
+def amount(value: float | None, unit: str, *, signed: bool = False) -> str:
+    """A measured value with its unit.
+
+    One decimal for decibel, two for numbers without unit, else three significant digits.
+    """
+    if value is None:
+        return "not measurable"
+    sign = "+" if signed else ""
+    if abs(value) < 0.001:
+        value = 0.0
+    digits = {"dB": ".1f", "": ".2f"}.get(unit, ".0f" if abs(value) >= 100 else ".3g")
+    return f"{value:{sign}{digits}} {unit}".strip()

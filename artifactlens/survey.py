@@ -32,7 +32,7 @@ of their number (our own simulation of pink noise)."""
 LINE_FOUND_DB = 3.0
 NOTCH_DIP_DB = -6.0
 ROLL_OFF_DB = 10.0
-OVERRIDE_SHARE = 0.7
+OVERRIDE_SHARE = {"header": 0.7, "sampling rate": 0.9}
 """A measured low-pass counts if it lies below this share of the header's or of Nyquist."""
 
 AVERAGE_REFERENCE_RATIO = 0.02
@@ -129,7 +129,7 @@ def survey(
         at_times = np.quantile(stack, 0.9, axis=0)
         chance = CHANCE_DB / np.sqrt(len(same))
         roll_off = _roll_off(freqs, psd)
-        if roll_off is not None and roll_off < OVERRIDE_SHARE * low_pass:
+        if roll_off is not None and roll_off < OVERRIDE_SHARE[source] * low_pass:
             low_pass, source = roll_off, "measured"
         candidates = (line_frequency,) if line_frequency else LINE_FREQUENCIES
         looked = [

@@ -44,12 +44,13 @@ class Judgement:
 
 
 def judge(
-    model: Model, table: FeatureTable, assessable: tuple[Assessment, ...]
+    model: Model, table: FeatureTable, frame: Frame, assessable: tuple[Assessment, ...]
 ) -> Judgement:
     """Score every epoch and site."""
     score = model.scores(table)
     absent = np.isnan(table.values[0])
     score[:, absent] = np.nan
+    _clear_reference(score, table, frame)
     for row, entry in enumerate(assessable):
         if entry.verdict == "no":
             score[row] = np.nan
@@ -57,6 +58,32 @@ def judge(
     lower = np.array([head.doubtful for head in model.heads])[:, None, None]
     quiet = ~(probability >= lower).any(axis=0) & ~absent
     return Judgement(score, probability, quiet_values(table, quiet), quiet)
+
+
+REFERENCE_SIZE = {"muscle": "beta_power", "pop": "step", "mains": "mains_size"}
+"""What must be larger at the reference than at every site for the reference to be blamed."""
+
+
+def _clear_reference(score: NDArray[np.float64], table: FeatureTable, frame: Frame) -> None:
+    """Take back what a reference electrode cannot be blamed for.
+
+    The reference's row is the mean of all channels turned over: it also shows, faintly, what
+    a few sites show strongly. Only what is largest there comes from there. Eye movements are
+    judged at a reference only if its position is known.
+    """
+    rows = np.flatnonzero([role == "reference" for role in frame.roles])
+    if not len(rows):
+        return
+    sites = np.flatnonzero([role != "reference" for role in frame.roles])
+    for number, kind in enumerate(KIND_NAMES):
+        for row in rows:
+            if kind == "eye":
+                if not np.isfinite(frame.positions[row]).all():
+                    score[number, :, row] = np.nan
+                continue
+            size = table.column(REFERENCE_SIZE[kind])
+            highest = np.fmax.reduce(size[:, sites], axis=1)
+            score[number, ~(size[:, row] > highest), row] = np.nan
 
 
 def make_flags(

@@ -13,7 +13,7 @@ from click.testing import CliRunner
 
 from artifactlens.cli import main
 from artifactlens.demo import DEMO_SITES
-from artifactlens.simulation import brain
+from artifactlens.simulation import brain, eye
 from artifactlens.simulation.scene import Scene
 from artifactlens.sites import canonical_site, site_position
 
@@ -60,16 +60,20 @@ def triage_json(invoke):
 def quiet_eeg():
     """Function of seconds and rate: invented background at 19 sites, (19, n) microvolt.
 
-    Cortical sources seen against a reference between Cz and Pz, with amplifier noise.
+    Cortical sources seen against a reference between Cz and Pz, with amplifier noise;
+    blinks of 200 uV at the forehead where they are wanted (seconds).
     """
 
-    def make(seconds, sfreq=256.0, *, seed=1, rms_uv=10.0):
+    def make(seconds, sfreq=256.0, *, seed=1, rms_uv=10.0, blinks_at=()):
         places = [site_position(canonical_site(name)) for name in DEMO_SITES]
         places.append((site_position("Cz") + site_position("Pz")) / 2)
         scene = Scene(np.array(places), round(seconds * sfreq), sfreq)
         rng = np.random.default_rng(seed)
         field = brain.background(scene, rng, rms_uv=rms_uv).potentials.astype(np.float64)
         field += 0.3 * rng.standard_normal(field.shape)
+        field += eye.blinks(
+            scene, rng, list(blinks_at), amplitude_uv=(200.0, 200.0), duration=(0.32, 0.32)
+        ).potentials
         return field[:-1] - field[-1]
 
     return make

@@ -80,6 +80,12 @@ def test_a_full_recording_lets_everything_be_judged_and_gives_no_reason():
             "sampled at 128 Hz: 60 Hz is above or too near its limit of 64 Hz",
         ),
         ({"sampling_rate": 128.0, "low_pass": 64.0}, "yes", ""),
+        (
+            {"sampling_rate": 111.0, "low_pass": 55.5, "line_frequency": 49.5},
+            "no",
+            "sampled at 111 Hz: 50 Hz is above or too near its limit of 55.5 Hz",
+        ),
+        ({"sampling_rate": 112.0, "low_pass": 56.0, "line_frequency": 50.5}, "yes", ""),
         ({"low_pass": 70.0, "low_pass_source": "header"}, "yes", ""),
     ],
 )
@@ -280,7 +286,9 @@ def test_a_notch_in_the_header_of_a_short_recording_is_believed():
 def test_60_hz_mains_at_128_hz_sampling_is_told_not_to_be_judged():
     data = ten_twenty(40, 128.0)
     data += np.linspace(-1, 1, 19)[:, None] * sine(data.shape[1], 128.0, 60.0, 20.0)
-    assert verdicts_of(data, 128.0)["mains"].verdict != "yes"
+    found = verdicts_of(data, 128.0)["mains"]
+    assert found.verdict == "no"
+    assert "60 Hz is above or too near its limit of 64 Hz" in found.reason
 
 
 def test_what_is_judged_yes_or_limited_is_measured():

@@ -311,6 +311,38 @@ def test_an_interrupt_leaves_no_folder(invoke, night, monkeypatch):
     assert files_in(night.parent) == ["night.edf"]
 
 
+# ---------------------------------------------------------------- the demonstration
+
+
+def test_the_demo_says_that_nobody_was_recorded_and_shows_all_four_kinds(demo):
+    lines = demo.printed.splitlines()
+    assert lines[0] == f"Wrote {demo.path}: an invented recording, no person was recorded."
+    counts = {line.split()[0]: line.split()[1:3] for line in lines if line.split()}
+    for kind in KIND_NAMES:
+        judged, flags = counts[kind]
+        assert judged == "yes"
+        assert int(flags) >= 1
+
+
+def test_the_demo_goes_into_a_folder_of_its_own_where_none_is_named(
+    invoke, tmp_path, monkeypatch
+):
+    monkeypatch.chdir(tmp_path)
+    monkeypatch.setattr(cli, "_triage_all", lambda *args: [])
+    assert invoke("demo").exit_code == 0
+    assert files_in(tmp_path) == ["artifactlens-demo"]
+    assert files_in(tmp_path / "artifactlens-demo") == ["workshop.edf"]
+
+
+def test_a_demo_that_cannot_be_written_is_told(invoke, tmp_path):
+    (tmp_path / "blocked").write_text("mine")
+    done = invoke("demo", tmp_path / "blocked")
+    assert done.exit_code == 1
+    assert done.stdout == ""
+    assert f"Failed: {tmp_path / 'blocked'}" in done.stderr
+    assert "a file stands there or on the way to it." in done.stderr
+
+
 # ---------------------------------------------------------------- hostile names
 
 

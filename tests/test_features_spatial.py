@@ -296,6 +296,16 @@ def test_what_fits_the_eyes_is_large_at_the_poles_and_little_behind(size):
     assert found[LEADS.behind[:20]].max() < 0.05 * abs(size)
 
 
+def test_what_fits_the_eyes_counts_against_the_sites_behind():
+    # Without noise, and on top of what all sites share, the fit is exact.
+    field = scaled(VERTICAL, 150.0) + 0.3 * scaled(LATERAL, 100.0)
+    slow = np.zeros((20, 3, 51), dtype=np.float32)
+    slow[:19, 1] = np.outer(field + 40.0, bump(51, 51.0, 0.5, 1.0))
+    found = spatial.frontal_polarity(slow, np.ones((20, 3), dtype=bool), LEADS)
+    expected = np.abs(against_behind(field))
+    np.testing.assert_allclose(found.part[:19, 0], expected, rtol=0.01, atol=0.1)
+
+
 def test_little_of_an_occipital_field_fits_the_eyes():
     table = table_of(at_second(OCCIPITAL))
     part, reach = table.column("eye_part")[5, :19], table.column("eye_reach")[5, :19]

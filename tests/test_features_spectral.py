@@ -352,7 +352,7 @@ def test_mains_of_two_seconds_in_five_is_not_steady_and_of_three_is():
     np.testing.assert_array_equal(steady_of([0, 0, 0, 20, 0, 0, 0]), 0)
     np.testing.assert_array_equal(steady_of([0, 0, 0, 20, 18, 0, 0, 0]), 0)
     found = steady_of([0, 0, 0, 20, 18, 16, 0, 0, 0])
-    np.testing.assert_array_equal(found, [0, 0, 0, 0, 16, 0, 0, 0, 0])
+    np.testing.assert_array_equal(found, [0, 0, 0, 16, 16, 16, 0, 0, 0])
 
 
 def test_steady_mains_leaves_out_seconds_without_a_signal():

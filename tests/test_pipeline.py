@@ -1,5 +1,6 @@
 """The whole job on recordings whose truth is known, and what must hold of any result."""
 
+import dataclasses
 import json
 import math
 
@@ -8,6 +9,7 @@ import numpy as np
 import pytest
 
 import artifactlens
+from artifactlens.closeups import closeups, display_filter
 from artifactlens.curves import load_model
 from artifactlens.demo import DEMO_SITES, demo_signals, demo_truth
 from artifactlens.errors import ModelError, RecordingError
@@ -34,6 +36,7 @@ def signals():
     """What the demonstration's recorder shows, without its ear lead: (19, n) microvolt."""
     names, data = demo_signals()
     assert names[:19] == DEMO_SITES
+    data.flags.writeable = False
     return data[:19]
 
 
@@ -43,7 +46,7 @@ def result(demo):
 
 
 def cut(data, onset, end):
-    return data[:, round(onset * SFREQ) : round(end * SFREQ)]
+    return data[:, round(onset * SFREQ) : round(end * SFREQ)].copy()
 
 
 def recording_of(data, labels, **options):
@@ -69,16 +72,9 @@ def over(flags, kind, onset, end):
 
 
 def gist(flags):
-    """What of a flag is told to a person."""
+    """What of a flag does not hang on the order of sites that score alike."""
     return [
-        (
-            f.kind,
-            f.onset,
-            f.duration,
-            frozenset(f.sites),
-            f.strongest_site,
-            round(f.probability, 4),
-        )
+        (f.kind, f.onset, f.duration, frozenset(f.sites), round(f.probability, 4))
         for f in flags
     ]
 
@@ -86,28 +82,40 @@ def gist(flags):
 # ---------------------------------------------------------------- truth of the demonstration
 
 
-def missed(result, kind):
+FAINT = ("twitch of the forehead", "pop (settling)", "slow roving eyes")
+"""A twitch of 0.16 s, a pop that rises slowly and eyes that drift at a third of a hertz are
+seen in the demonstration by whoever knows where to look."""
+
+SMALL = ("gaze up", "gaze down")
+"""60 to 70 uV at the forehead: plainly there, but "sure" is meant to mark little."""
+
+
+def missed(flags, kind):
     """Events of a kind that no flag of that kind at one of their sites covers."""
     found = []
     for event in demo_truth():
         if event.kind == kind:
             names = {"reference" if site == "REF" else site for site in event.sites}
-            flags = over(result.flags, kind, event.onset, event.onset + event.duration)
-            if not any(names & set(flag.sites) for flag in flags):
+            near = over(flags, kind, event.onset, event.onset + event.duration)
+            if not any(names & set(flag.sites) for flag in near):
                 found.append(event)
-    return found
+    print(f"missed {kind}:", [(e.onset, e.what) for e in found])  # noqa: T201
+    return [event for event in found if event.what not in FAINT]
+
+
+@pytest.fixture(scope="module")
+def doubtful(demo):
+    return artifactlens.triage(demo.path, mark="doubtful")
 
 
 @pytest.mark.parametrize("kind", KIND_NAMES)
 def test_every_plain_artifact_of_the_demonstration_is_flagged_at_its_sites(result, kind):
-    lost = missed(result, kind)
-    print(f"missed {kind}:", [(event.onset, event.what) for event in lost])  # noqa: T201
-    assert [event for event in lost if event.what not in FAINT] == []
+    assert [event for event in missed(result.flags, kind) if event.what not in SMALL] == []
 
 
-FAINT = ("twitch of the forehead", "pop (settling)", "slow roving eyes")
-"""A twitch of 0.16 s, a pop that rises slowly and eyes that drift at a third of a hertz are
-seen in the demonstration by whoever knows where to look."""
+@pytest.mark.parametrize("kind", KIND_NAMES)
+def test_what_is_doubtful_in_the_demonstration_takes_in_the_small_ones(doubtful, kind):
+    assert missed(doubtful.flags, kind) == []
 
 
 def test_most_of_what_the_brain_does_in_the_demonstration_stays_unflagged(result):
@@ -188,10 +196,11 @@ def test_every_montage_flags_the_same_site(by_montage, montage, kind, onset, end
     assert result.recording.montage == montage
     flags = over(result.flags, kind, onset - 90, end - 90)
     assert flags, [gist([f])[0][:4] for f in result.flags]
-    strongest = max(flags, key=lambda flag: flag.probability)
-    assert strongest.strongest_site in sites
+    low, high = onset - 90, end - 90
+    main = max(flags, key=lambda flag: min(flag.end, high) - max(flag.onset, low))
+    assert main.strongest_site in sites
     if kind in ("pop", "mains"):
-        assert set(strongest.sites) == sites
+        assert set(main.sites) == sites
 
 
 # ---------------------------------------------------------------- invariants
@@ -237,9 +246,9 @@ def test_a_longer_name_of_the_sites_changes_nothing_but_the_spelling(signals, mi
     other = triage(recording_of(cut(signals, 100, 160), labels))
     renamed = [
         (kind, onset, length, frozenset(newer.get(site, site) for site in sites), p)
-        for kind, onset, length, sites, _, p in gist(triage(minute).flags)
+        for kind, onset, length, sites, p in gist(triage(minute).flags)
     ]
-    assert [(k, o, d, s, p) for k, o, d, s, _, p in gist(other.flags)] == renamed
+    assert gist(other.flags) == renamed
 
 
 def test_an_mne_raw_gives_the_flags_of_its_file(demo, result):
@@ -283,7 +292,8 @@ def test_missing_samples_are_missing_and_nothing_beside_them_is(signals):
     scores = result.scores
     c3 = scores.sites.index("C3")
     assert np.isnan(scores.probability[:, 20:25, c3]).all()
-    assert np.isfinite(np.delete(scores.probability, c3, axis=2)[:, 20:25]).all()
+    others = [k for k, site in enumerate(scores.sites) if site not in ("C3", "reference")]
+    assert np.isfinite(scores.probability[:, 20:25, others]).all()
     assert np.isfinite(scores.probability[:, :18, c3]).all()
     (site,) = [s for s in result.sites if s.site == "C3"]
     assert site.seconds_judged == 55.0
@@ -353,9 +363,10 @@ def test_scores_have_one_number_per_kind_second_and_site(demo, result):
         p = scores["probability"]
     assert p.shape == (4, 240, 21)
     assert p.dtype == np.float32
-    assert np.isfinite(p).all()
-    assert p.min() >= 0
-    assert p.max() <= 1
+    # The reference is judged only where it can be told from what its channels share.
+    assert np.isfinite(p[:, :, :-1]).all()
+    assert np.nanmin(p) >= 0
+    assert np.nanmax(p) <= 1
     np.testing.assert_array_equal(p, result.scores.probability)
 
 
@@ -481,3 +492,138 @@ def test_the_demonstration_gives_the_same_bytes_twice(invoke, demo, tmp_path):
     assert set(first) == set(second)
     assert len(first) == 9
     assert [str(name) for name in first if first[name] != second[name]] == []
+
+
+# ---------------------------------------------------------------- close-ups for the page
+
+
+@pytest.mark.parametrize(
+    ("hz", "gain"), [(1.0, 0.7071), (2.0, 0.9701), (10.0, 0.9997), (70.0, 0.7071)]
+)
+def test_the_display_filter_has_its_half_power_at_1_and_70_hz(hz, gain):
+    """By hand: 1/sqrt(1 + (1/f)^4) / sqrt(1 + (f/70)^4)."""
+    time = np.arange(round(60 * SFREQ)) / SFREQ
+    shown = display_filter(np.sin(2 * np.pi * hz * time)[None].astype(np.float32), SFREQ)
+    middle = shown[0, round(20 * SFREQ) : round(40 * SFREQ)]
+    assert np.sqrt(2) * middle.std() == pytest.approx(gain, abs=2e-3)
+
+
+def test_the_display_filter_moves_no_peak_in_time():
+    trace = np.zeros((1, 2048), dtype=np.float32)
+    trace[0, 1000:1020] = 100.0 * np.hanning(20)
+    assert abs(int(display_filter(trace, SFREQ)[0].argmax()) - 1009) <= 1
+
+
+@pytest.fixture(scope="module")
+def cuts(minute):
+    """Every flag of a minute with what the page shows beside it."""
+    measured = measure_recording(minute)
+    result = conclude(measured, load_model(), mark="sure", line_frequency=None)
+    return list(
+        zip(result.flags, closeups(minute, measured.frame, result.flags), strict=True)
+    )
+
+
+def test_every_close_up_shows_the_moment_of_its_flag_at_its_sites(cuts):
+    assert len(cuts) > 8
+    for flag, window in cuts:
+        assert window.flag == flag.number
+        length = window.data_uv.shape[1] / window.sampling_rate
+        assert window.onset <= flag.moment <= window.onset + length
+        assert length <= 10.01
+        assert window.data_uv.shape[0] == len(window.labels) == len(window.involved)
+        assert np.isfinite(window.data_uv).all()
+        involved = [
+            name
+            for name, is_one in zip(window.labels, window.involved, strict=True)
+            if is_one
+        ]
+        assert list(window.labels[: len(involved)]) == involved  # they stand first
+        assert flag.strongest_site in involved[0].split("-"), (
+            flag.strongest_site,
+            involved,
+        )
+        assert 1 <= len(involved) <= 10
+
+
+def test_a_close_up_holds_the_difference_of_its_two_sites(cuts, signals):
+    """Sites cancel their common reference: Fp1-F7 is that of the channels themselves."""
+    rows = {name: row for name, row in zip(DEMO_SITES, signals, strict=True)}
+    _, window = next((f, w) for f, w in cuts if "P3" in f.sites and f.kind == "pop")
+    label = window.labels[0]
+    first, second = (rows[name] for name in label.split("-"))
+    low = round((window.onset + 100) * SFREQ)
+    own = (first - second)[None, low - 1024 : low + window.data_uv.shape[1] + 1024]
+    expected = display_filter(own.astype(np.float32), SFREQ)[0, 1024:-1024]
+    # The cut has a margin of 2 s for the filter, this one of 4 s.
+    np.testing.assert_allclose(window.data_uv[0], expected, atol=0.05 * np.ptp(expected))
+    assert np.ptp(expected) > 50
+
+
+def test_the_order_of_the_channels_does_not_change_what_a_close_up_shows(signals, cuts):
+    order = np.arange(19)[::-1]
+    turned = recording_of(
+        cut(signals, 100, 160)[order], [f"{DEMO_SITES[k]}-REF" for k in order]
+    )
+    measured = measure_recording(turned)
+    others = closeups(turned, measured.frame, [flag for flag, _ in cuts])
+    for (flag, window), other in zip(cuts, others, strict=True):
+        assert set(other.labels) >= {
+            name
+            for name, is_one in zip(window.labels, window.involved, strict=True)
+            if is_one
+        }
+        assert flag.strongest_site in other.labels[0].split("-")
+
+
+def test_beside_a_gap_a_close_up_stays_on_its_side(signals):
+    data = cut(signals, 100, 160)
+    first = round(8 * SFREQ)
+    parts = [Segment(0, first, 0.0), Segment(first, data.shape[1] - first, 30.0)]
+    recording = from_array(data, SFREQ, [f"{n}-REF" for n in DEMO_SITES], segments=parts)
+    measured = measure_recording(recording)
+    result = conclude(measured, load_model(), mark="sure", line_frequency=None)
+    sides = set()
+    for window in closeups(recording, measured.frame, result.flags):
+        end = window.onset + window.data_uv.shape[1] / SFREQ
+        assert end <= 8.0 + 1e-6 or window.onset >= 30.0 - 1e-6
+        sides.add(end <= 8.0 + 1e-6)
+    assert sides == {True, False}
+
+
+def test_a_close_up_leaves_out_sites_without_a_signal(signals):
+    data = cut(signals, 100, 160)
+    data[DEMO_SITES.index("F7"), : round(20 * SFREQ)] = np.nan
+    recording = referential(data)
+    measured = measure_recording(recording)
+    result = conclude(measured, load_model(), mark="sure", line_frequency=None)
+    early = [flag for flag in result.flags if flag.end < 18]
+    assert early
+    windows = closeups(recording, measured.frame, early)
+    assert [window.flag for window in windows] == [flag.number for flag in early]
+    for window in windows:
+        assert not [label for label in window.labels if "F7" in label.split("-")]
+        assert np.isfinite(window.data_uv).all()
+
+
+def test_a_flag_outside_the_signal_has_no_close_up_and_stops_no_other(minute, cuts):
+    flags = [flag for flag, _ in cuts[:2]]
+    lost = dataclasses.replace(flags[0], onset=500.0, moment=500.5)
+    measured = measure_recording(minute)
+    windows = closeups(minute, measured.frame, [flags[0], lost, flags[1]])
+    assert [window.flag for window in windows] == [flag.number for flag in flags]
+
+
+def test_close_ups_of_one_recording_invert_its_incidence_once(minute, cuts, monkeypatch):
+    """With 64 sites an inversion takes as long as the rest of a close-up ten times over."""
+    frame = measure_recording(minute).frame
+    calls = []
+    whole = type(frame).matrix
+
+    def counted(self, available=None):
+        calls.append(available)
+        return whole(self, available)
+
+    monkeypatch.setattr(type(frame), "matrix", counted)
+    assert len(closeups(minute, frame, [flag for flag, _ in cuts])) == len(cuts)
+    assert len(calls) == 1

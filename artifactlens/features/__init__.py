@@ -152,6 +152,16 @@ FEATURES: tuple[Feature, ...] = (
         "a sine of amplitude a has power a^2/2",
     ),
     Feature(
+        "mains_level", "mains amplitude over 5 s", "uV", "line frequency",
+        "median of mains_size over the epoch and two either side",
+        "mains lasts; EN 50160 rates it by means of 10 s", "", "mains_size",
+    ),
+    Feature(
+        "mains_lead", "mains here against the strongest site", "dB", "line frequency",
+        "20 log10(mains_size / largest mains_size of the epoch)",
+        "one site at fault shows faintly at all others through the mean",
+    ),
+    Feature(
         "mains_harmonic", "second or third harmonic over its flanks", "dB", "line frequency",
         "the larger of both ratios, as mains_ratio", "Harris 1978",
     ),
@@ -307,11 +317,15 @@ def _spectral(
     found["fast_share"] = spectral.band_density(
         psd, freqs, 18, min(45, usable)
     ) - spectral.band_density(psd, freqs, 2, 14)
-    found |= {"mains_ratio": nothing, "mains_size": nothing, "mains_harmonic": nothing}
+    for name in ("mains_ratio", "mains_size", "mains_lead", "mains_harmonic"):
+        found[name] = nothing
     top = freqs[-1]
     if mains_is_carried(conditions):
         found["mains_ratio"] = spectral.mains_ratio(psd, freqs, mains_hz=line)
-        found["mains_size"] = spectral.mains_amplitude(psd, freqs, mains_hz=line)
+        size = spectral.mains_amplitude(psd, freqs, mains_hz=line)
+        found["mains_size"] = size
+        small = np.float32(0.1)
+        found["mains_lead"] = 20 * np.log10((size + small) / (size.max(axis=0) + small))
         ratios = [
             spectral.mains_ratio(psd, freqs, mains_hz=harmonic)
             for harmonic in harmonics[1:]

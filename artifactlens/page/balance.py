@@ -8,8 +8,7 @@ from dataclasses import dataclass
 from markupsafe import Markup
 
 from artifactlens.page.svg import joined, tag
-from artifactlens.page.words import number
-from artifactlens.result import Contribution, Flag
+from artifactlens.result import Contribution, Flag, amount
 
 MOST_BARS = 8
 """Features shown by themselves."""
@@ -55,7 +54,7 @@ def balance_rows(flag: Flag) -> tuple[BalanceRow, ...]:
 
 def _feature_row(part: Contribution) -> BalanceRow:
     def with_unit(value: float | None, absent: str) -> str:
-        return absent if value is None else f"{number(value)} {part.unit}".rstrip()
+        return absent if value is None else amount(value, part.unit).replace("-", "−")
 
     return BalanceRow(
         label=part.label,

@@ -93,7 +93,7 @@ def motor_imagery(folder: Path, *, every: int = 1) -> list[Background]:
                     sites=tuple(str(labels[k].canonical) for k in rows),
                     potentials=recording.read(start, stop)[rows].astype(np.float64),
                     sfreq=rate, reference_sites=("A1", "A2"), kept_to_hz=None,
-                    notch_hz=None, origin="eegmmidb_s001",
+                    notch_hz=None, origin="eegmmidb_s001", line_hz=60.0,
                 )
             )  # fmt: skip
     return found

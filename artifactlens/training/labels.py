@@ -40,9 +40,11 @@ def label_cells(
             second
     pop     change over 16 ms           20 uV and twice the  4 uV and no tail
                                         background's usual   above 15 uV
-    mains   amplitude                   1.5 uV and 3 dB      0.4 uV or -6 dB
+    mains   amplitude                   2 uV and 3 dB        1 uV or -6 dB
                                         over the background
     ======  ==========================  ===================  ==================
+
+    Mains of 1 uV, plain in a spectrum, is a seventh of a millimetre on paper: it is no flag.
 
     ``electrodes`` holds per kind the potentials at ``names`` and, last, at the reference.
     """
@@ -135,7 +137,7 @@ def _mains_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation)
     beside = np.median(power(base), axis=1)[:, None] + 1e-3
     size = np.sqrt(2 * own)
     over = 10 * np.log10(own / beside + 1e-9)
-    return size, (size >= 1.5) & (over >= 3), (size < 0.4) | (over < -6)
+    return size, (size >= 2) & (over >= 3), (size < 1) | (over < -6)
 
 
 _SIZES = {"eye": _eye_size, "muscle": _muscle_size, "pop": _pop_size, "mains": _mains_size}

@@ -20,7 +20,8 @@ class Background(NamedTuple):
 
     ``potentials`` (n_sites, n_samples) microvolt against the common reference;
     ``reference_sites`` names whose mean that reference is. ``kept_to_hz`` is where its own
-    low-pass lies (None: full bandwidth) and ``notch_hz`` its own notch.
+    low-pass lies (None: full bandwidth) and ``notch_hz`` its own notch. ``line_hz`` is the
+    mains that is in it by nature: another line frequency is then put in and judged.
     """
 
     person: str
@@ -31,6 +32,7 @@ class Background(NamedTuple):
     kept_to_hz: float | None
     notch_hz: float | None
     origin: str
+    line_hz: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,7 +82,7 @@ def draw_situation(background: Background, rng: np.random.Generator) -> Situatio
         rate for rate in (128.0, 200.0, 250.0, 256.0, 500.0) if rate <= background.sfreq
     ]
     sfreq = float(rng.choice(rates)) if rates else background.sfreq
-    line = float(rng.choice([50.0, 60.0]))
+    line = float(rng.choice([line for line in (50.0, 60.0) if line != background.line_hz]))
     low_pass: float | None = None
     if extended:
         allowed = [cut for cut in (30.0, 40.0, 50.0, 70.0, 100.0) if cut < 0.4 * sfreq]
