@@ -259,7 +259,7 @@ def _heart(rng: np.random.Generator) -> NDArray[np.float64]:
 def write_demo(folder: Path) -> Path:
     """Write the demonstration as EDF+ into ``folder``, which is made if need be.
 
-    Same bytes at every call. A file of that name is replaced.
+    Same bytes at every call. Another recording of that name is left alone.
 
     Parameters
     ----------
@@ -274,14 +274,23 @@ def write_demo(folder: Path) -> Path:
     Raises
     ------
     OutputError
-        If the file cannot be written there.
+        If the file cannot be written there, or another one has its name.
     """
     path = folder / DEMO_NAME
     part = folder / f"{DEMO_NAME}.part"
     try:
         folder.mkdir(parents=True, exist_ok=True)
         _recording().write(part)
+        if path.exists() and path.read_bytes() != part.read_bytes():
+            part.unlink()
+            raise OutputError(
+                f"The demonstration needs the name {DEMO_NAME} in {folder}, but another "
+                "file has it.",
+                "Move that file, or give another folder.",
+            )
         part.replace(path)
+    except OutputError:
+        raise
     except OSError as error:
         raise OutputError(
             f"The demonstration cannot be written to {folder}: {error.strerror}.",

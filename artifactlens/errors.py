@@ -42,3 +42,7 @@ class ResultError(ArtifactlensError, ValueError):
 
 class OutputError(ArtifactlensError, OSError):
     """An output cannot be written where it was asked for."""
+
+
+class OptionError(ArtifactlensError, ValueError):
+    """An option was given a value that it does not know."""

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import sys
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,16 +13,16 @@ from artifactlens import __version__
 from artifactlens.assessable import assess
 from artifactlens.curves import Model, load_model
 from artifactlens.epochs import BATCH_EPOCHS, EpochGrid, batches, epoch_grid
-from artifactlens.errors import ArtifactlensError, RecordingError
+from artifactlens.errors import OptionError, RecordingError
 from artifactlens.features import FeatureTable, feature_table, mains_is_carried, measure
 from artifactlens.features.spatial import EyeLeads, eye_leads
+from artifactlens.flagging import MARKS, judge, make_flags, touched_seconds
 from artifactlens.frames import Frame, build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores
 from artifactlens.sitecare import site_evidence
 from artifactlens.survey import LINE_FREQUENCIES, PLAUSIBLE_UV, Conditions, survey
-from artifactlens.triage import MARKS, judge, make_flags, touched_seconds
 
 if TYPE_CHECKING:
     import mne
@@ -33,10 +32,6 @@ Progress = Callable[[int, int], None]
 """Called with seconds done and seconds in all."""
 
 CLOSEUPS = 60
-
-
-class OptionError(ArtifactlensError, ValueError):
-    """An option was given a value that it does not know."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -259,11 +254,6 @@ def triage(
         _as_recording(source), line_frequency=line_frequency, progress=progress
     )
     return conclude(measured, model, mark=mark, line_frequency=line_frequency)
-
-
-# Importing the module artifactlens.triage puts it into the package under the name of this
-# function, which is the public one.
-vars(sys.modules["artifactlens"])["triage"] = triage
 
 
 def _check_options(mark: str, line_frequency: float | None) -> None:

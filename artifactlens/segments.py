@@ -165,14 +165,15 @@ def _merge(
     group = _groups(kind, runs, peak, p.shape, step_at)
     strength = p[peak, runs.column]
 
-    order = np.lexsort((runs.first, group))
+    # Of runs that begin or end together, the strongest tells the time, not the first channel.
+    order = np.lexsort((-strength, runs.first, group))
     starts = np.flatnonzero(np.diff(group[order], prepend=-1))
     first = np.minimum.reduceat(runs.first[order], starts)
     last = np.maximum.reduceat(runs.last[order], starts)
     members = np.split(order, starts[1:])
     sites = [tuple(sorted({int(runs.column[run]) for run in part})) for part in members]
     first_site = runs.column[order[starts]]
-    by_last = np.lexsort((-runs.last, group))
+    by_last = np.lexsort((-strength, -runs.last, group))
     last_site = runs.column[by_last[starts]]
     by_strength = np.lexsort((-strength, group))[starts]
 

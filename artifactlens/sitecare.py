@@ -14,8 +14,8 @@ from artifactlens.result import Assessment, Flag, SiteEvidence, finite_or_none
 if TYPE_CHECKING:
     from artifactlens.curves import Model
     from artifactlens.features import FeatureTable
+    from artifactlens.flagging import Judgement
     from artifactlens.frames import Frame
-    from artifactlens.triage import Judgement
 
 FAULT_SHARE = 0.02
 """A fault is named when it holds for more than this share of the recording."""

@@ -86,7 +86,7 @@ def test_the_ground_stands_on_nothing_but_errors(name, allowed):
     assert ARROWS[name] <= allowed
 
 
-@pytest.mark.parametrize("entry", ["pipeline", "triage", "closeups", "features"])
+@pytest.mark.parametrize("entry", ["pipeline", "flagging", "closeups", "features"])
 def test_the_pipeline_needs_neither_training_nor_simulation(entry):
     found = {
         name for name in reached_from(entry) if part_of(name, "training", "simulation")
@@ -118,7 +118,7 @@ def test_the_simulation_knows_nothing_of_what_judges_it():
         "features",
         "curves",
         "evidence",
-        "triage",
+        "flagging",
         "segments",
         "pipeline",
         "training",
@@ -128,7 +128,7 @@ def test_the_simulation_knows_nothing_of_what_judges_it():
             assert not [other for other in arrows if part_of(other, *judging)], name
 
 
-LATER = ("curves", "evidence", "triage", "result", "pipeline", "export", "page", "sitecare",
+LATER = ("curves", "evidence", "flagging", "result", "pipeline", "export", "page", "sitecare",
          "segments", "closeups", "assessable", "cli")  # fmt: skip
 
 
@@ -156,7 +156,7 @@ def test_outputs_read_only_the_result(package):
 
 
 def test_the_stages_follow_one_another():
-    order = ("recording", "frames", "epochs", "features", "curves", "evidence", "triage",
+    order = ("recording", "frames", "epochs", "features", "curves", "evidence", "flagging",
              "pipeline", "cli")  # fmt: skip
     for place, name in enumerate(order):
         behind = order[place + 1 :]

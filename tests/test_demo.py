@@ -204,3 +204,12 @@ def test_mains_is_at_its_site_while_the_lamp_is_on(sites_uv):
 def test_the_heart_beats_at_a_resting_rate(channels):
     peaks = np.flatnonzero(np.diff((channels["ECG"] > 500).astype(int)) == 1)
     assert 60 < 60 * len(peaks) / 240 < 72
+
+
+def test_another_recording_of_the_same_name_is_left_alone(tmp_path):
+    mine = tmp_path / demo.DEMO_NAME
+    mine.write_bytes(b"a real recording")
+    with pytest.raises(OutputError, match="another file has it"):
+        demo.write_demo(tmp_path)
+    assert mine.read_bytes() == b"a real recording"
+    assert list(tmp_path.iterdir()) == [mine]

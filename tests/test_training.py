@@ -48,7 +48,6 @@ from artifactlens.training.fit import (
     clean_seconds,
     fit_head,
     model_body,
-    row_weights,
 )
 from artifactlens.training.labels import label_cells
 from artifactlens.training.report import check_table, sensitivity_at
@@ -395,20 +394,6 @@ def test_thresholds_by_hand():
     assert _threshold(worst, 0.25, 0.5) == 0.5  # never below the least
     assert _threshold(np.full(5, 0.9999), 0.5, 0.5) == 0.999  # nor out of reach
     assert _threshold(np.zeros(0), 0.99, 0.2) == pytest.approx(0.5, abs=1e-5)
-
-
-def test_origins_count_by_the_square_root_of_their_rows():
-    origin = ["a", "b", "b", "b", "b", "c"]
-    truth = [0, 1, 0, 1, 0, -1]
-    rows = examples(truth, origin=origin)
-    known = np.array(truth) >= 0
-    # One row of a against four of b, so sqrt(4 / 1); c has no known row.
-    np.testing.assert_allclose(row_weights(rows, known), [2, 1, 1, 1, 1])
-    total = {name: row_weights(rows, known)[np.array(origin)[known] == name].sum()
-             for name in "ab"}  # fmt: skip
-    assert total["b"] / total["a"] == pytest.approx(math.sqrt(4 / 1))
-    alone = examples([0, 1], origin=["a", "a"])
-    np.testing.assert_array_equal(row_weights(alone, np.ones(2, bool)), [1, 1])
 
 
 # The check by hand ---------------------------------------------------------------------

@@ -20,6 +20,9 @@ from artifactlens.training.situation import Background
 CHUNK_SECONDS = 62
 EYE, MUSCLE = KIND_NAMES.index("eye"), KIND_NAMES.index("muscle")
 
+LEAST_PRESENT = {"eye": 30.0, "muscle": -np.inf}
+"""Microvolt and decibel; the limit of simulated eye movements holds for real ones too."""
+
 GESTURES: dict[str, tuple[str, ...]] = {
     "hardblink": ("eye",),
     "lookleft": ("eye",),
@@ -209,7 +212,7 @@ def gestures(folder: Path) -> list[Examples]:
         (MUSCLE, "muscle", "fast_power"),
     ):
         column = table.column(feature)
-        high = np.nanpercentile(column[neutral], 90, axis=0)
+        high = np.fmax(np.nanpercentile(column[neutral], 90, axis=0), LEAST_PRESENT[kind])
         middle = np.nanpercentile(column[neutral], 50, axis=0)
         for gesture, kinds in GESTURES.items():
             chosen = labels == gesture

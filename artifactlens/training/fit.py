@@ -41,9 +41,10 @@ HEAD_FEATURES: dict[str, tuple[str, ...]] = {
 RISING: dict[str, tuple[str, ...]] = {
     "eye": ("eye_reach", "eye_part", "eye_match"),
     "muscle": (
-        "slope", "slope_rise", "fast_share", "fast_rise", "fast_lead", "high_rise", "beta_rise",
+        "slope", "slope_rise", "fast_share", "fast_rise", "fast_alone", "fast_lead", "high_rise",
+        "beta_rise", "burst_rise",
     ),
-    "pop": ("step_rise", "step_crest", "step_alone"),
+    "pop": ("step", "step_rise", "step_crest", "step_alone"),
     "mains": ("mains_steady", "mains_level", "mains_lead", "mains_harmonic"),
 }  # fmt: skip
 """Features of which more can only speak for the kind: the curve must not fall."""
@@ -108,17 +109,8 @@ def fit_forest(
     forest.fit(
         examples.features[known][:, columns].astype(np.float64),
         truth[known],
-        sample_weight=row_weights(examples, known),
     )
     return forest, columns
-
-
-def row_weights(examples: Examples, known: NDArray[np.bool_]) -> NDArray[np.float64]:
-    """Every origin counts by the square root of its rows, so that none drowns another."""
-    origin = examples.origin[known]
-    names, place, count = np.unique(origin, return_inverse=True, return_counts=True)
-    weight = np.sqrt(count.max() / count)
-    return np.asarray(weight[place] if len(names) > 1 else np.ones(len(origin)))
 
 
 def fit_head(

@@ -14,6 +14,9 @@ from artifactlens.training.situation import Situation
 
 Array = NDArray[np.float64]
 
+BEHIND = ("P3", "Pz", "P4", "O1", "O2")
+"""Sites that the eyes hardly reach: what a reader sees of an eye movement is against them."""
+
 
 def label_cells(
     frame: Frame,
@@ -34,7 +37,8 @@ def label_cells(
     ======  ==========================  ===================  ==================
     kind    size                        present from         clean below
     ======  ==========================  ===================  ==================
-    eye     peak-to-peak                30 uV                10 uV
+    eye     peak-to-peak against the    30 uV                10 uV
+            sites behind
     muscle  rms above 15 Hz in the      1.25 times the       0.35 times
             strongest fifth of a        background there
             second
@@ -56,19 +60,20 @@ def label_cells(
     average = quiet_channels - quiet_channels.mean(axis=0)
     quiet = np.concatenate([average, -quiet_channels.mean(axis=0, keepdims=True)])
     lag = max(1, round(STEP_SECONDS * sfreq))
+    behind = [names.index(name) for name in BEHIND if name in names]
     for number, kind in enumerate(KIND_NAMES):
         if kind not in electrodes:
             continue
-        field = electrodes[kind][:, index]
+        field = electrodes[kind]
+        if kind == "eye" and behind:
+            field = field - field[behind].mean(axis=0)
+        field = field[:, index]
         base = quiet[:, index]
         size, present, clean = _SIZES[kind](field, base, sfreq, lag, situation)
         cell = np.where(present, PRESENT, np.where(clean, CLEAN, UNKNOWN)).astype(np.int8)
         known = rows >= 0
         truth[number][:, known] = cell[rows[known]].T
         strength[number][:, known] = size[rows[known]].T
-        if reference_row == "mix":
-            # The made-up reference shares in what its electrodes have: not a clean label.
-            truth[number][:, [role == "reference" for role in frame.roles]] = UNKNOWN
     return truth, strength
 
 

@@ -10,6 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.assessable import assess
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import measure_recording
 from artifactlens.simulation import electrode, eye, mains, muscle
@@ -17,7 +18,7 @@ from artifactlens.simulation.floor import extend_above
 from artifactlens.simulation.lookalikes import LOOK_ALIKES
 from artifactlens.simulation.scene import Scene, Simulated
 from artifactlens.sites import site_position
-from artifactlens.training.examples import Examples, from_table
+from artifactlens.training.examples import UNKNOWN, Examples, from_table
 from artifactlens.training.labels import label_cells
 from artifactlens.training.situation import (
     FEWER_SITES,
@@ -50,7 +51,7 @@ def simulate(
     if situation.n_sites < len(names):
         names = tuple(name for name in names if name in FEWER_SITES[situation.n_sites])
     rows = [background.sites.index(name) for name in names]
-    potentials = background.potentials[rows].astype(np.float64)
+    potentials = situation.gain * background.potentials[rows].astype(np.float64)
     sfreq = background.sfreq
     places = np.array([site_position(name) for name in names])
     reference = np.array([site_position(name) for name in background.reference_sites])
@@ -98,6 +99,21 @@ def simulate(
         situation,
         reference_row,
     )
+    judged = assess(
+        measured.frame,
+        measured.leads,
+        measured.conditions,
+        float(len(measured.grid)),
+        False,
+    )
+    for number, entry in enumerate(judged):
+        if entry.verdict == "no":
+            # What the tool will not judge is neither learnt nor checked.
+            truth[number] = UNKNOWN
+    if reference_row == "mix":
+        # A made-up reference shares in what its electrodes have: it has no truth of its own.
+        made_up = [role == "reference" for role in measured.frame.roles]
+        measured.table.values[:, :, made_up] = np.nan
     return from_table(
         measured.table,
         truth,

@@ -37,7 +37,10 @@ class Background(NamedTuple):
 
 @dataclass(frozen=True, slots=True)
 class Situation:
-    """One draw of recording conditions; None where a filter is absent."""
+    """One draw of recording conditions; None where a filter is absent.
+
+    ``gain`` multiplies the background: adults at rest are not the only people recorded.
+    """
 
     sfreq: float
     extended: bool
@@ -48,6 +51,7 @@ class Situation:
     montage: str
     n_sites: int
     header: bool
+    gain: float = 1.0
 
     def words(self) -> str:
         """For tables by condition."""
@@ -107,6 +111,7 @@ def draw_situation(background: Background, rng: np.random.Generator) -> Situatio
         montage=montage,
         n_sites=n_sites,
         header=bool(rng.random() < 0.5),
+        gain=float(np.exp(rng.uniform(np.log(0.7), np.log(2.0)))),
     )
 
 
