@@ -37,8 +37,8 @@ def closeups(
 ) -> list[TraceWindow]:
     """The traces around each flag; none where the recording has no signal.
 
-    The involved derivations come first, then a few of the rest. Long flags are shown
-    around their driving moment.
+    The involved derivations come first, then those of their neighbours and a few others.
+    Long flags are shown around their driving moment.
     """
     # Inverting the incidence takes longer than all the rest, and is nearly always the same.
     solved: dict[bytes, NDArray[np.float32]] = {}
@@ -144,7 +144,9 @@ def _derivations(
     chosen = chosen[:MOST_INVOLVED]
     n_involved = len(chosen)
     others = [pair for pair in pairs if pair not in chosen]
-    chosen += others[:: max(1, len(others) // MOST_OTHERS)][:MOST_OTHERS]
+    beside = frame.near[wanted].any(axis=0)
+    others.sort(key=lambda pair: not (beside[pair[0]] or beside[pair[1]]))
+    chosen += others[:MOST_OTHERS]
     if not others:
         rest = [i for i in range(len(frame.sites)) if solvable[i] and i not in wanted]
         chosen += [(index, None) for index in rest[:: max(1, len(rest) // MOST_OTHERS)]][

@@ -211,8 +211,8 @@ def _measures(
         return words
     if kind == "mains":
         return (
-            f"{amount(values['mains_size'], 'uV')} at {line_frequency:.4g} Hz at {site}, "
-            f"{amount(values['mains_ratio'], 'dB')} over its flanks"
+            f"{amount(values['mains_level'], 'uV')} at {line_frequency:.4g} Hz over 5 s at "
+            f"{site}, {amount(values['mains_steady'], 'dB')} over its flanks"
         )
     return (
         f"{amount(values['front_vertical'], 'uV', signed=True)} at the front, "

@@ -58,7 +58,7 @@ SIGNS: tuple[Sign, ...] = (
     Sign(
         "mains",
         "fast activity near the line frequency: it stands little above its flanks",
-        _below("mains_ratio", 4.0),
+        _below("mains_steady", 4.0),
     ),
 )
 

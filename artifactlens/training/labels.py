@@ -44,7 +44,7 @@ def label_cells(
             second
     pop     change over 16 ms           20 uV and twice the  4 uV and no tail
                                         background's usual   above 15 uV
-    mains   amplitude                   2 uV and 3 dB        1 uV or -6 dB
+    mains   amplitude                   1.5 uV and 3 dB      1 uV or -6 dB
                                         over the background
     ======  ==========================  ===================  ==================
 
@@ -142,7 +142,7 @@ def _mains_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation)
     beside = np.median(power(base), axis=1)[:, None] + 1e-3
     size = np.sqrt(2 * own)
     over = 10 * np.log10(own / beside + 1e-9)
-    return size, (size >= 2) & (over >= 3), (size < 1) | (over < -6)
+    return size, (size >= 1.5) & (over >= 3), (size < 1) | (over < -6)
 
 
 _SIZES = {"eye": _eye_size, "muscle": _muscle_size, "pop": _pop_size, "mains": _mains_size}
