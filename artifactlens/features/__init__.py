@@ -148,18 +148,13 @@ FEATURES: tuple[Feature, ...] = (
     ),
     Feature(
         "mains_size", "mains amplitude", "uV", "line frequency",
-        "sqrt(2 x power above the flanks), 0 if it stands less than 5 dB above them",
+        "sqrt(2 x power above the flanks) beyond the mean's share; 0 if under 5 dB above them",
         "a sine of amplitude a has power a^2/2",
     ),
     Feature(
         "mains_level", "mains amplitude over 5 s", "uV", "line frequency",
         "median of mains_size over the epoch and two either side",
         "mains lasts; EN 50160 rates it by means of 10 s", "", "mains_size",
-    ),
-    Feature(
-        "mains_lead", "mains here against the strongest site", "dB", "line frequency",
-        "20 log10(mains_size / largest mains_size of the epoch)",
-        "one site at fault shows faintly at all others through the mean",
     ),
     Feature(
         "mains_harmonic", "second or third harmonic over its flanks", "dB", "line frequency",
@@ -262,7 +257,7 @@ def measure(
     found["burst"] = steps.pace.max(axis=2)
 
     psd, freqs = spectral.epoch_spectra(batch)
-    found |= _spectral(psd, freqs, conditions)
+    found |= _spectral(psd, freqs, ok, conditions)
     found["fast_alone"] = found["fast_power"] - _neighbour_mean(
         found["fast_power"], ok, neighbours
     )
@@ -298,7 +293,10 @@ def measure(
 
 
 def _spectral(
-    psd: Array, freqs: NDArray[np.float64], conditions: Conditions
+    psd: Array,
+    freqs: NDArray[np.float64],
+    ok: NDArray[np.bool_],
+    conditions: Conditions,
 ) -> dict[str, Array]:
     usable = 0.95 * conditions.low_pass
     line = conditions.line_frequency
@@ -317,15 +315,13 @@ def _spectral(
     found["fast_share"] = spectral.band_density(
         psd, freqs, 18, min(45, usable)
     ) - spectral.band_density(psd, freqs, 2, 14)
-    for name in ("mains_ratio", "mains_size", "mains_lead", "mains_harmonic"):
+    for name in ("mains_ratio", "mains_size", "mains_harmonic"):
         found[name] = nothing
     top = freqs[-1]
     if mains_is_carried(conditions):
         found["mains_ratio"] = spectral.mains_ratio(psd, freqs, mains_hz=line)
         size = spectral.mains_amplitude(psd, freqs, mains_hz=line)
-        found["mains_size"] = size
-        small = np.float32(0.1)
-        found["mains_lead"] = 20 * np.log10((size + small) / (size.max(axis=0) + small))
+        found["mains_size"] = spectral.beyond_the_mean(size, ok)
         ratios = [
             spectral.mains_ratio(psd, freqs, mains_hz=harmonic)
             for harmonic in harmonics[1:]

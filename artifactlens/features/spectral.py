@@ -204,6 +204,22 @@ def mains_amplitude(psd: Array, freqs: NDArray[np.float64], *, mains_hz: float) 
     return np.sqrt(2 * np.maximum(np.where(stands_out, excess, 0), 0))
 
 
+def beyond_the_mean(size: Array, ok: NDArray[np.bool_]) -> Array:
+    """Amplitudes less what the mean of all sites carries over from the strongest one.
+
+    In a frame of mean zero over n sites, an amplitude A at one site alone shows as A / n at
+    every other. Taken off in power is 1.5 times that, since others may add to it.
+
+    Parameters
+    ----------
+    size : array, shape (n_sites, n_epochs), microvolt
+    ok : array, shape (n_sites, n_epochs), bool
+    """
+    live = np.where(ok, size, np.float32(0))
+    carried = 1.5 * live.max(axis=0) / np.maximum(ok.sum(axis=0), 1)
+    return np.sqrt(np.maximum(size**2 - carried.astype(np.float32) ** 2, 0))
+
+
 def _core_and_ring(freqs: NDArray[np.float64], mains_hz: float) -> tuple[Array, Array]:
     # The last bin of an odd window lies half a bin below Nyquist, the line up to 1 % off.
     if mains_hz + LINE_MARGIN_HZ > freqs[-1] + 1.2:

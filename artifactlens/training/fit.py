@@ -33,7 +33,7 @@ HEAD_FEATURES: dict[str, tuple[str, ...]] = {
         "slow_power", "slope", "fast_share", "spread", "isolation", "fast_rise",
     ),
     "mains": (
-        "mains_steady", "mains_level", "mains_lead", "mains_harmonic",
+        "mains_steady", "mains_level", "mains_harmonic",
     ),
 }  # fmt: skip
 """A head sees only what its kind acts on: what else differs in training is chance."""
@@ -45,7 +45,7 @@ RISING: dict[str, tuple[str, ...]] = {
         "beta_rise", "burst_rise",
     ),
     "pop": ("step", "step_rise", "step_crest", "step_alone"),
-    "mains": ("mains_steady", "mains_level", "mains_lead", "mains_harmonic"),
+    "mains": ("mains_steady", "mains_level", "mains_harmonic"),
 }  # fmt: skip
 """Features of which more can only speak for the kind: the curve must not fall."""
 
