@@ -144,7 +144,7 @@ def _derivations(
     chosen = chosen[:MOST_INVOLVED]
     n_involved = len(chosen)
     others = [pair for pair in pairs if pair not in chosen]
-    beside = frame.near[wanted].any(axis=0)
+    beside = np.asarray(frame.near[wanted].any(axis=0))
     others.sort(key=lambda pair: not (beside[pair[0]] or beside[pair[1]]))
     chosen += others[:MOST_OTHERS]
     if not others:
