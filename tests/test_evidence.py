@@ -12,7 +12,12 @@ from artifactlens.kinds import KIND_NAMES
 from artifactlens.lookalikes import SIGNS, look_alike
 from artifactlens.result import Contribution
 
-DRIVERS = {"eye": "front_vertical", "muscle": "slope", "pop": "step", "mains": "mains_level"}
+DRIVERS = {
+    "eye": "front_vertical",
+    "muscle": "slope",
+    "pop": "step",
+    "mains": "mains_level",
+}
 VALUES = dict.fromkeys(FEATURE_NAMES, 1.0) | {
     "front_vertical": 142.4,
     "front_lateral": -6.0,
@@ -143,9 +148,7 @@ def test_a_field_of_one_site_is_told_as_that_site_alone(count):
 
 def test_muscle():
     text = told("muscle", ("T3", "F7"), "T3")
-    assert text.startswith(
-        "T3, F7 - consistent with muscle activity: spectral slope 0.21 "
-    )
+    assert text.startswith("T3, F7 - consistent with muscle activity: spectral slope 0.21 ")
     assert "at T3, power at 30-45 Hz 12 dB above its usual. Spectral slope" in text
     assert "above its usual" not in told("muscle", fast_rise=0.9)
     assert "above its usual" not in told("muscle", fast_rise=None)

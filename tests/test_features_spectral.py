@@ -312,17 +312,33 @@ def test_mains_beyond_the_spectrum_is_refused_in_words(mains_hz):
 
 
 def test_mains_in_a_whole_recording_has_its_size_less_the_mean_of_the_frame():
-    # 5 uV at one of 20 potentials of mean zero: 19/20 there, 1/20 elsewhere.
+    # 5 uV at one of 20 potentials of mean zero: 19/20 there; the 1/20 elsewhere is carried
+    # over by the mean and taken off, and so is (1.5 x 4.75 / 20)^2 of the power there.
     data = ten_twenty(20, rms_uv=3.0, exponent=2)
     data[row("T8")] += sine(20 * 256, RATE, 60.0, 5.0)
     measured = measure_recording(referential(data))
     assert measured.conditions.line_frequency == 60.0
     table = measured.table
     size = np.median(table.column("mains_size"), axis=0)
-    assert size[row("T8")] == pytest.approx(4.75, abs=0.1)
-    np.testing.assert_allclose(np.delete(size, row("T8")), 0.25, atol=0.15)
+    own = np.sqrt(4.75**2 - (1.5 * 4.75 / 20) ** 2)
+    assert size[row("T8")] == pytest.approx(own, abs=0.1)
+    np.testing.assert_array_equal(np.delete(size, row("T8")), 0.0)
     ratio = np.median(table.column("mains_ratio"), axis=0)
     assert ratio.argmax() == row("T8")
+
+
+def test_what_a_mean_carries_over_is_that_of_the_own_chain():
+    # 8 uV at one of four sites shows as 2 uV at the other three of its chain: 3 uV are taken
+    # off there; the other chain has a site of 2 uV of its own: 2 x 1.5 / 3 = 1 uV.
+    size = np.array([[8.0], [2.0], [2.0], [4.0], [2.0], [0.5], [0.5]], dtype=np.float32)
+    chain = np.array([0, 0, 0, 0, 1, 1, 1])
+    found = spectral.beyond_the_mean(size, np.ones((7, 1), bool), chain)[:, 0]
+    expected = [np.sqrt(64 - 9), 0, 0, np.sqrt(16 - 9), np.sqrt(4 - 1), 0, 0]
+    np.testing.assert_allclose(found, expected, rtol=1e-6)
+    # Of a chain with two live sites the mean carries over half, not a quarter.
+    ok = np.array([[True], [True], [False], [False], [True], [True], [True]])
+    found = spectral.beyond_the_mean(size, ok, chain)[:2, 0]
+    np.testing.assert_allclose(found, [np.sqrt(64 - 36), 0], rtol=1e-6)
 
 
 def test_steady_mains_is_the_median_over_five_seconds():

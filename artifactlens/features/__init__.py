@@ -257,7 +257,7 @@ def measure(
     found["burst"] = steps.pace.max(axis=2)
 
     psd, freqs = spectral.epoch_spectra(batch)
-    found |= _spectral(psd, freqs, ok, conditions)
+    found |= _spectral(psd, freqs, ok, frame, conditions)
     found["fast_alone"] = found["fast_power"] - _neighbour_mean(
         found["fast_power"], ok, neighbours
     )
@@ -296,6 +296,7 @@ def _spectral(
     psd: Array,
     freqs: NDArray[np.float64],
     ok: NDArray[np.bool_],
+    frame: Frame,
     conditions: Conditions,
 ) -> dict[str, Array]:
     usable = 0.95 * conditions.low_pass
@@ -321,7 +322,7 @@ def _spectral(
     if mains_is_carried(conditions):
         found["mains_ratio"] = spectral.mains_ratio(psd, freqs, mains_hz=line)
         size = spectral.mains_amplitude(psd, freqs, mains_hz=line)
-        found["mains_size"] = spectral.beyond_the_mean(size, ok)
+        found["mains_size"] = spectral.beyond_the_mean(size, ok, frame.chain)
         ratios = [
             spectral.mains_ratio(psd, freqs, mains_hz=harmonic)
             for harmonic in harmonics[1:]

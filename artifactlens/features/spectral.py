@@ -204,20 +204,27 @@ def mains_amplitude(psd: Array, freqs: NDArray[np.float64], *, mains_hz: float) 
     return np.sqrt(2 * np.maximum(np.where(stands_out, excess, 0), 0))
 
 
-def beyond_the_mean(size: Array, ok: NDArray[np.bool_]) -> Array:
-    """Amplitudes less what the mean of all sites carries over from the strongest one.
+def beyond_the_mean(size: Array, ok: NDArray[np.bool_], chain: NDArray[np.intp]) -> Array:
+    """Amplitudes less what the mean of a chain carries over from its strongest site.
 
-    In a frame of mean zero over n sites, an amplitude A at one site alone shows as A / n at
+    In a chain of mean zero over n sites, an amplitude A at one site alone shows as A / n at
     every other. Taken off in power is 1.5 times that, since others may add to it.
 
     Parameters
     ----------
     size : array, shape (n_sites, n_epochs), microvolt
     ok : array, shape (n_sites, n_epochs), bool
+    chain : array, shape (n_sites,)
+        Connected component of each site.
     """
-    live = np.where(ok, size, np.float32(0))
-    carried = 1.5 * live.max(axis=0) / np.maximum(ok.sum(axis=0), 1)
-    return np.sqrt(np.maximum(size**2 - carried.astype(np.float32) ** 2, 0))
+    own = np.empty_like(size)
+    for number in np.unique(chain):
+        rows = chain == number
+        strongest = np.where(ok[rows], size[rows], np.float32(0)).max(axis=0)
+        carried = np.float32(1.5) * strongest / np.maximum(ok[rows].sum(axis=0), 1)
+        square = size[rows] ** 2 - carried.astype(np.float32) ** 2
+        own[rows] = np.sqrt(np.maximum(square, 0))
+    return own
 
 
 def _core_and_ring(freqs: NDArray[np.float64], mains_hz: float) -> tuple[Array, Array]:
