@@ -63,6 +63,10 @@ class Head:
     sure: float
     doubtful: float
 
+    def limit(self, mark: str) -> float:
+        """Probability from which a cell is marked: "sure" or "doubtful"."""
+        return self.sure if mark == "sure" else self.doubtful
+
 
 @dataclass(frozen=True, slots=True)
 class Model:

@@ -211,7 +211,7 @@ def _batch(
         clipped[rows, columns] = at_extreme > CLIPPED_SHARE
     if levels_uv is not None and len(levels_uv):
         data = data - levels_uv[:, None]
-    sites, ok = _solve(data, ~(missing | flat), starts, n, frame, solved)
+    sites, ok = _solve(data, ~(missing | flat), starts, frame, solved)
     core = slice(1, -1)
     return EpochBatch(
         first=int(chosen[0]),
@@ -239,7 +239,6 @@ def _solve(
     data: NDArray[np.float32],
     available: NDArray[np.bool_],
     starts: NDArray[np.int64],
-    n: int,
     frame: Frame,
     solved: dict[bytes, NDArray[np.float32]],
 ) -> tuple[NDArray[np.float32], NDArray[np.bool_]]:

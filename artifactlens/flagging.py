@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -10,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.curves import logistic
+from artifactlens.epochs import median_of_known
 from artifactlens.evidence import explain, quiet_values, sentence, values_at
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.lookalikes import look_alike
@@ -75,15 +77,13 @@ def _clear_reference(score: NDArray[np.float64], table: FeatureTable, frame: Fra
     if not len(rows):
         return
     sites = np.flatnonzero([role != "reference" for role in frame.roles])
-    for number, kind in enumerate(KIND_NAMES):
+    unplaced = rows[~np.isfinite(frame.positions[rows]).all(axis=1)]
+    score[KIND_NAMES.index("eye"), :, unplaced] = np.nan
+    for kind, feature in REFERENCE_SIZE.items():
+        size = table.column(feature)
+        highest = np.fmax.reduce(size[:, sites], axis=1)
         for row in rows:
-            if kind == "eye":
-                if not np.isfinite(frame.positions[row]).all():
-                    score[number, :, row] = np.nan
-                continue
-            size = table.column(REFERENCE_SIZE[kind])
-            highest = np.fmax.reduce(size[:, sites], axis=1)
-            score[number, ~(size[:, row] > highest), row] = np.nan
+            score[KIND_NAMES.index(kind), ~(size[:, row] > highest), row] = np.nan
 
 
 def make_flags(
@@ -105,21 +105,18 @@ def make_flags(
     end : float
         End of the recording, seconds: no flag reaches beyond.
     """
-    from artifactlens.epochs import median_of_known
-
     pace = table.pace.mean(axis=2, dtype=np.float32)
     quiet_pace = median_of_known(np.where(judgement.quiet, pace, np.float32("nan")))
     tau = 1 / (2 * math.pi * conditions.high_pass) if conditions.high_pass else 0.5
     tail = float(np.clip(3 * tau, *POP_TAIL_SECONDS))
     flags: list[Flag] = []
     for row, head in enumerate(model.heads):
-        enter = head.sure if mark == "sure" else head.doubtful
         events = find_segments(
             head.kind,
             judgement.probability[row],
             grid,
             table.step_at,
-            enter=enter,
+            enter=head.limit(mark),
             stay=head.doubtful,
         )
         times = refine(head.kind, events, grid, table, quiet_pace, tail)
@@ -127,13 +124,10 @@ def make_flags(
             _flags_of(model, row, events, times, judgement, table, frame, conditions, end)
         )
     flags.sort(key=lambda flag: (flag.onset, KIND_NAMES.index(flag.kind), flag.sites))
-    return tuple(_numbered(flag, number) for number, flag in enumerate(flags, start=1))
-
-
-def _numbered(flag: Flag, number: int) -> Flag:
-    import dataclasses
-
-    return dataclasses.replace(flag, number=number)
+    return tuple(
+        dataclasses.replace(flag, number=number)
+        for number, flag in enumerate(flags, start=1)
+    )
 
 
 def _flags_of(

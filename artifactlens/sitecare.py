@@ -45,8 +45,7 @@ def site_evidence(
     minutes = np.maximum(seconds, 1) / 60
     shares = {}
     for row, (head, entry) in enumerate(zip(model.heads, assessable, strict=True)):
-        limit = head.sure if mark == "sure" else head.doubtful
-        marked = (judgement.probability[row] >= limit).sum(axis=0)
+        marked = (judgement.probability[row] >= head.limit(mark)).sum(axis=0)
         shares[head.kind] = (
             None if entry.verdict == "no" else marked / np.maximum(seconds, 1)
         )

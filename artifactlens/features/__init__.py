@@ -318,7 +318,6 @@ def _spectral(
     ) - spectral.band_density(psd, freqs, 2, 14)
     for name in ("mains_ratio", "mains_size", "mains_harmonic"):
         found[name] = nothing
-    top = freqs[-1]
     if mains_is_carried(conditions):
         found["mains_ratio"] = spectral.mains_ratio(psd, freqs, mains_hz=line)
         size = spectral.mains_amplitude(psd, freqs, mains_hz=line)
@@ -326,7 +325,7 @@ def _spectral(
         ratios = [
             spectral.mains_ratio(psd, freqs, mains_hz=harmonic)
             for harmonic in harmonics[1:]
-            if harmonic + 6 <= min(top, usable)
+            if harmonic + spectral.LINE_MARGIN_HZ <= min(freqs[-1], usable)
         ]
         if ratios:
             found["mains_harmonic"] = np.fmax.reduce(ratios)

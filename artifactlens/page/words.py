@@ -9,8 +9,6 @@ from collections.abc import Sequence
 LONGEST_NAME = 24
 """Characters of a name shown in running text; files may hold names of any length."""
 
-LONGEST_SENTENCE = 400
-
 _BLANK = re.compile("[\t\n\r\x0b\x0c\u2028\u2029]+")
 # Controls, lone surrogates and marks that turn the direction of writing: shown as U+FFFD,
 # so that a name can neither break the file nor reorder the words beside it.
