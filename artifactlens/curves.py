@@ -1,15 +1,15 @@
-"""The shipped model: one step curve per feature and kind, as plain numbers.
+"""The shipped model: step curves of features and a few pairs of them, as plain numbers.
 
-A boosted forest whose trees each use one feature *is* a sum of step functions of single
-features, so it is stored as such: edges, the value of every step, and one value for a
-missing measurement. Nothing in the file is executable.
+A boosted forest in which no branch uses more than two features *is* a sum of step functions
+of one feature and of two, so it is stored as such: edges, the value of every step, and
+values for a missing measurement. Nothing in the file is executable.
 """
 
 from __future__ import annotations
 
 import hashlib
 import json
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from importlib import resources
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -24,8 +24,19 @@ from artifactlens.kinds import KIND_NAMES
 if TYPE_CHECKING:
     from artifactlens.features import FeatureTable
 
-MODEL_VERSION = 1
+MODEL_VERSION = 2
 SHIPPED = "scalp-1.json"
+
+
+def step_of(edges: NDArray[np.float64], x: NDArray[np.floating]) -> NDArray[np.intp]:
+    """Number of the step on which measurements of any shape lie.
+
+    Step ``k`` is ``edges[k - 1] < x <= edges[k]``; the missing have a step of their own
+    after the last one, ``len(edges) + 1``.
+    """
+    exact = np.asarray(x, dtype=np.float64)
+    step = np.searchsorted(edges, exact, side="left")
+    return np.where(np.isnan(exact), len(edges) + 1, step)
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,18 +54,36 @@ class Curve:
 
     def __call__(self, x: NDArray[np.floating]) -> NDArray[np.float64]:
         """What measurements of any shape add to the score."""
-        flat = np.asarray(x, dtype=np.float64)
-        step = self.values[
-            np.searchsorted(self.edges, flat, side="left").clip(max=len(self.edges))
-        ]
-        return np.where(np.isnan(flat), self.missing, step)
+        return np.append(self.values, self.missing)[step_of(self.edges, x)]
+
+
+@dataclass(frozen=True, slots=True)
+class Table:
+    """A step function of two features: what they say together beyond each alone.
+
+    ``values[j, k]`` holds on step ``j`` of the first feature, with edges ``rows``, and
+    step ``k`` of the second, with edges ``columns``, both as in :class:`Curve`; shape
+    (n_rows + 2, n_columns + 2), the last row and the last column for what could not be
+    measured. Log-odds, calibrated.
+    """
+
+    rows: NDArray[np.float64]
+    columns: NDArray[np.float64]
+    values: NDArray[np.float64]
+
+    def __call__(
+        self, x: NDArray[np.floating], y: NDArray[np.floating]
+    ) -> NDArray[np.float64]:
+        """What measurements of both, of one shape, add to the score."""
+        return self.values[step_of(self.rows, x), step_of(self.columns, y)]
 
 
 @dataclass(frozen=True, slots=True)
 class Head:
-    """The score of one kind: base rate plus one curve per feature, in log-odds.
+    """The score of one kind: base, one curve per feature, a table per pair, in log-odds.
 
-    ``sure`` and ``doubtful`` are the two operating points, as probabilities.
+    ``sure`` and ``doubtful`` are the two operating points, as probabilities. A pair stands
+    once, in one of both orders.
     """
 
     kind: str
@@ -62,6 +91,7 @@ class Head:
     curves: dict[str, Curve]
     sure: float
     doubtful: float
+    pairs: dict[tuple[str, str], Table] = field(default_factory=dict)
 
     def limit(self, mark: str) -> float:
         """Probability from which a cell is marked: "sure" or "doubtful"."""
@@ -91,14 +121,15 @@ class Model:
             ]
             if not users:
                 continue
-            column = table.column(name)
             # One search over the edges of all kinds serves all of them.
             edges = np.unique(np.concatenate([curve.edges for _, curve in users]))
-            place = np.searchsorted(edges, column.astype(np.float64), side="left")
-            place[np.isnan(column)] = len(edges) + 1
-            probes = np.append(edges, np.inf)
+            step = step_of(edges, table.column(name))
+            probes = np.concatenate([edges, [np.inf, np.nan]])
             for row, curve in users:
-                scores[row] += np.append(curve(probes), curve.missing)[place]
+                scores[row] += curve(probes)[step]
+        for row, head in enumerate(self.heads):
+            for (first, second), pair in head.pairs.items():
+                scores[row] += pair(table.column(first), table.column(second))
         return scores
 
 
@@ -179,7 +210,8 @@ def _model_from(body: dict[str, Any], sha256: str) -> Model:
         base = offset + slope * float(entry["base"])
         if not np.isfinite(base) or not slope > 0:
             raise ValueError(f"calibration of {kind} is not finite and rising")
-        heads.append(Head(kind, base, curves, sure, doubtful))
+        pairs = _pairs_from(entry["pairs"], slope)
+        heads.append(Head(kind, base, curves, sure, doubtful, pairs))
     return Model(str(body["name"]), sha256, tuple(heads), body["training"])
 
 
@@ -197,3 +229,39 @@ def _curve_from(name: str, entry: dict[str, Any], slope: float) -> Curve:
     ):
         raise ValueError(f"the curve of {name} holds a number that is not finite")
     return Curve(edges, slope * values, slope * missing)
+
+
+def _pairs_from(
+    entries: list[dict[str, Any]], slope: float
+) -> dict[tuple[str, str], Table]:
+    if not isinstance(entries, list):
+        raise TypeError("pairs are not a list")
+    pairs: dict[tuple[str, str], Table] = {}
+    for entry in entries:
+        first, second = entry["features"]
+        for name in (first, second):
+            if name not in FEATURE_NAMES:
+                raise ValueError(f"a pair of the unknown feature {name!r}")
+        if first == second:
+            raise ValueError(f"{first} is paired with itself")
+        if (first, second) in pairs or (second, first) in pairs:
+            raise ValueError(f"the pair of {first} and {second} stands twice")
+        pairs[first, second] = _table_from(f"{first} and {second}", entry, slope)
+    return pairs
+
+
+def _table_from(names: str, entry: dict[str, Any], slope: float) -> Table:
+    rows, columns = (np.array(edges, dtype=np.float64) for edges in entry["edges"])
+    values = np.array(entry["values"], dtype=np.float64)
+    fitting = rows.ndim == columns.ndim == 1 and values.shape == (
+        len(rows) + 2,
+        len(columns) + 2,
+    )
+    if not fitting or np.any(np.diff(rows) <= 0) or np.any(np.diff(columns) <= 0):
+        raise ValueError(
+            f"the table of {names} needs rising edges, and two rows and two columns more "
+            "than edges"
+        )
+    if not all(np.isfinite(numbers).all() for numbers in (rows, columns, values)):
+        raise ValueError(f"the table of {names} holds a number that is not finite")
+    return Table(rows, columns, slope * values)

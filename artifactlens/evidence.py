@@ -10,9 +10,11 @@ from numpy.typing import NDArray
 from artifactlens.epochs import median_of_known
 from artifactlens.features import BY_NAME, FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.result import Contribution, amount, finite_or_none
+from artifactlens.result import Contribution, Measure, amount, driver_of, finite_or_none
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from artifactlens.curves import Model
     from artifactlens.features import FeatureTable
 
@@ -37,7 +39,7 @@ def explain(
 ) -> list[tuple[Contribution, ...]]:
     """Contributions at single cells, largest absolute log-odds first.
 
-    All features that the kind's head looks at are listed; the others add nothing to it.
+    All features and pairs that the kind's head looks at are listed; nothing else adds to it.
 
     Parameters
     ----------
@@ -50,23 +52,28 @@ def explain(
     sites : array of int, shape (n_cells,)
         The site of each cell.
     """
-    curves = model.heads[KIND_NAMES.index(kind)].curves
-    names = [name for name in FEATURE_NAMES if name in curves]
-    if not names:
+    head = model.heads[KIND_NAMES.index(kind)]
+    sources: list[tuple[tuple[str, ...], Callable[..., NDArray[np.float64]]]] = [
+        *(((name,), head.curves[name]) for name in FEATURE_NAMES if name in head.curves),
+        *head.pairs.items(),
+    ]
+    if not sources:
         return [()] * len(sites)
-    parts = np.stack([curves[name](measured[name]) for name in names])
+    parts = np.stack([step(*(measured[name] for name in names)) for names, step in sources])
     order = np.argsort(-np.abs(parts), axis=0, kind="stable")
 
-    def part(row: int, cell: int) -> Contribution:
-        feature = BY_NAME[names[row]]
-        return Contribution(
-            feature=feature.name,
-            label=feature.label,
-            unit=feature.unit,
-            value=finite_or_none(measured[feature.name][cell]),
-            usual=finite_or_none(usual[feature.name][sites[cell]]),
-            log_odds=float(parts[row, cell]),
+    def measure(name: str, cell: int) -> Measure:
+        return Measure(
+            feature=name,
+            label=BY_NAME[name].label,
+            unit=BY_NAME[name].unit,
+            value=finite_or_none(measured[name][cell]),
+            usual=finite_or_none(usual[name][sites[cell]]),
         )
+
+    def part(row: int, cell: int) -> Contribution:
+        measures = tuple(measure(name, cell) for name in sources[row][0])
+        return Contribution.of(measures, float(parts[row, cell]))
 
     return [
         tuple(part(int(row), cell) for row in order[:, cell]) for cell in range(len(sites))
@@ -143,16 +150,30 @@ def sentence(
             "mains": f"mains interference at {line_frequency:.3g} Hz",
         }[kind]
         body = _measures(kind, site, values, line_frequency, field_count)
-    driver = max(parts, key=lambda part: part.log_odds)
+    driver = driver_of(parts)
     speaks_for = sum(part.log_odds for part in parts if part.log_odds > 0)
     share = f"{driver.log_odds:+.1f} of {speaks_for:+.1f}"
-    reason = f"{_capital(driver.label)} drove this mark ({share})"
-    signed = driver.feature.startswith("front_") and driver.unit == "uV"
-    if driver.value is not None:
-        reason += f": {amount(driver.value, driver.unit, signed=signed)}"
-        if driver.usual is not None and not BY_NAME[driver.feature].usual_of:
-            reason += f", usually {amount(driver.usual, driver.unit, signed=signed)} here"
+    reason = f"{_capital(driver.label)} drove this mark ({share}){_driver_words(driver)}"
     return f"{where} - consistent with {what}: {body}. {reason}."
+
+
+def _driver_words(driver: Contribution) -> str:
+    """The measures of the driver and their usual values, as far as known."""
+
+    def words(measure: Measure, value: float | None) -> str:
+        signed = measure.feature.startswith("front_") and measure.unit == "uV"
+        return amount(value, measure.unit, signed=signed)
+
+    measures = driver.measures
+    if all(measure.value is None for measure in measures):
+        return ""
+    text = ": " + " and ".join(words(measure, measure.value) for measure in measures)
+    # What is itself measured against usual needs no usual value.
+    plain = any(not BY_NAME[measure.feature].usual_of for measure in measures)
+    if plain and all(None not in (measure.value, measure.usual) for measure in measures):
+        usual = " and ".join(words(measure, measure.usual) for measure in measures)
+        text += f", usually {usual} here"
+    return text
 
 
 def _site_words(sites: tuple[str, ...]) -> str:

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-RESULT_VERSION = 1
+RESULT_VERSION = 2
 
 CAUTION = (
     "artifactlens is a research and technical aid, not a medical device. A flag does not "
@@ -24,8 +24,8 @@ CAUTION = (
 
 
 @dataclass(frozen=True, slots=True)
-class Contribution:
-    """What one feature adds to a flag's score.
+class Measure:
+    """What was measured of one feature.
 
     ``value`` and ``usual`` are in ``unit``; ``usual`` is the median over the quiet epochs
     of this recording. Both are None where the feature could not be measured.
@@ -36,7 +36,57 @@ class Contribution:
     unit: str
     value: float | None
     usual: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class Contribution:
+    """What one feature, or two of them together, add to a flag's score.
+
+    For one feature the fields are those of :class:`Measure`, and ``pair`` is empty. For
+    two, ``log_odds`` is what they say together beyond each alone, ``pair`` holds both
+    measures, ``feature`` joins their names by "+" and ``label`` their labels in words;
+    ``unit`` is empty then, ``value`` and ``usual`` are None.
+    """
+
+    feature: str
+    label: str
+    unit: str
+    value: float | None
+    usual: float | None
     log_odds: float
+    pair: tuple[Measure, ...] = ()
+
+    @classmethod
+    def of(cls, measures: tuple[Measure, ...], log_odds: float) -> Contribution:
+        """What one measure, or two together, add to the score."""
+        if len(measures) == 1:
+            (one,) = measures
+            return cls(one.feature, one.label, one.unit, one.value, one.usual, log_odds)
+        return cls(
+            feature="+".join(measure.feature for measure in measures),
+            label=" together with ".join(measure.label for measure in measures),
+            unit="",
+            value=None,
+            usual=None,
+            log_odds=log_odds,
+            pair=measures,
+        )
+
+    @property
+    def measures(self) -> tuple[Measure, ...]:
+        """The one measure, or both of a pair."""
+        return self.pair or (
+            Measure(self.feature, self.label, self.unit, self.value, self.usual),
+        )
+
+
+def driver_of(parts: tuple[Contribution, ...]) -> Contribution:
+    """The contribution that speaks for the kind most strongly.
+
+    Single features come first, for a reader can look at one number: a pair drives only
+    where no single feature speaks for the kind.
+    """
+    return max(parts, key=lambda part: (not part.pair and part.log_odds > 0, part.log_odds))
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,8 +120,8 @@ class Flag:
 
     @property
     def driver(self) -> Contribution:
-        """The feature that speaks for the kind most strongly."""
-        return max(self.contributions, key=lambda part: part.log_odds)
+        """The single feature that speaks for the kind most strongly; a pair only if none does."""
+        return driver_of(self.contributions)
 
 
 @dataclass(frozen=True, slots=True)
@@ -242,7 +292,7 @@ def _result_from(body: dict[str, Any]) -> Result:
                 **flag,
                 "sites": tuple(flag["sites"]),
                 "contributions": tuple(
-                    Contribution(**part) for part in flag["contributions"]
+                    _contribution_from(part) for part in flag["contributions"]
                 ),
             }
         )
@@ -268,6 +318,11 @@ def _result_from(body: dict[str, Any]) -> Result:
         flags=flags,
         sites=sites,
     )
+
+
+def _contribution_from(part: dict[str, Any]) -> Contribution:
+    pair = tuple(Measure(**measure) for measure in part["pair"])
+    return Contribution(**{**part, "pair": pair})
 
 
 def finite_or_none(value: float) -> float | None:

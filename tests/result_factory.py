@@ -11,6 +11,7 @@ from artifactlens.result import (
     Assessment,
     Contribution,
     Flag,
+    Measure,
     RecordingFacts,
     Result,
     Scores,
@@ -124,6 +125,16 @@ _REASONS = {
     "pop": ("yes", "All 19 sites have neighbours."),
     "mains": ("no", "A 50 Hz notch filter was applied when the recording was written."),
 }
+
+
+PAIR = Contribution.of(
+    (
+        Measure("burst", "highest pace within a tenth of a second", "uV", 12.31, 4.0),
+        Measure("high_power", "power at 55-95 Hz", "dB", -2.96, None),
+    ),
+    5.0,
+)
+"""Two features together, heavier than any single one below."""
 
 
 def _flag(number: int, names: dict[str, str]) -> Flag:

@@ -1,4 +1,4 @@
-"""The model as step curves: what an edge belongs to, exact sums, and refusing damage."""
+"""The model as steps of features and pairs: edges, exact sums, and refusing damage."""
 
 import copy
 import hashlib
@@ -10,7 +10,15 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from artifactlens.curves import MODEL_VERSION, Curve, Head, Model, load_model, logistic
+from artifactlens.curves import (
+    MODEL_VERSION,
+    Curve,
+    Head,
+    Model,
+    Table,
+    load_model,
+    logistic,
+)
 from artifactlens.errors import ModelError
 from artifactlens.evidence import explain, values_at
 from artifactlens.features import (
@@ -23,7 +31,7 @@ from artifactlens.kinds import KIND_NAMES
 
 
 def body():
-    """A small model: three curves per kind."""
+    """A small model: three curves and a pair per kind."""
     rng = np.random.default_rng(4)
     heads = {}
     for kind in KIND_NAMES:
@@ -38,6 +46,13 @@ def body():
         heads[kind] = {
             "base": -2.0,
             "curves": curves,
+            "pairs": [
+                {
+                    "features": ["slope", "step"],
+                    "edges": [[-1.5], [10.5, 20.5]],
+                    "values": rng.normal(size=(3, 4)).round(3).tolist(),
+                }
+            ],
             "calibration": {"slope": 1.5, "offset": 0.5},
             "sure": 0.9,
             "doubtful": 0.4,
@@ -100,6 +115,30 @@ def test_float32_measurements_meet_float64_edges_as_the_numbers_they_are():
     assert curve(np.array([0.1]))[0] == 0.0
 
 
+# A pair --------------------------------------------------------------------------------
+
+
+def test_a_pair_is_read_from_its_table_worked_out_by_hand():
+    nan, just = np.nan, np.nextafter
+    #                        second <= 5, beyond, missing
+    values = np.array([[1.0, 2.0, 3.0], [4.0, 5.0, 6.0], [7.0, 8.0, 9.0]])
+    table = Table(np.array([0.0]), np.array([5.0]), values)
+    for first, second, expected in (
+        (-1.0, 0.0, 1), (0.0, 5.0, 1), (-1.0, 6.0, 2), (0.0, just(5.0, 6), 2), (-1.0, nan, 3),
+        (1.0, 5.0, 4), (just(0.0, 1), 0.0, 4), (1.0, 6.0, 5), (np.inf, np.inf, 5), (9.0, nan, 6),
+        (nan, 4.0, 7), (nan, -np.inf, 7), (nan, 6.0, 8), (nan, nan, 9),
+    ):  # fmt: skip
+        assert table(np.array(first), np.array(second)) == expected
+
+
+def test_a_pair_takes_measurements_of_any_shape_and_may_have_no_edges():
+    table = Table(np.zeros(0), np.array([1.0, 2.0]), np.arange(8.0).reshape(2, 4))
+    x = np.array([[3.0, np.nan, -3.0], [np.nan, 0.0, 0.0]], dtype=np.float32)
+    y = np.array([[1.0, 1.5, 2.0], [np.nan, np.nan, 2.5]], dtype=np.float32)
+    np.testing.assert_array_equal(table(x, y), [[0, 5, 1], [7, 3, 2]])
+    assert table(np.zeros((0, 3)), np.zeros((0, 3))).shape == (0, 3)
+
+
 # The model -----------------------------------------------------------------------------
 
 VALUES = st.sampled_from([-3.0, -1.0, 0.0, 0.5, 1.0, 2.5, float("nan"), float("inf")])
@@ -107,6 +146,7 @@ EDGES = st.lists(
     st.sampled_from([-3.0, -1.0, 0.0, 0.5, 0.75, 2.5]), unique=True, max_size=5
 ).map(sorted)
 NAMES = ("swing", "swing_rise", "step", "slope", "spread")
+PAIRS = (("swing", "step"), ("slope", "swing_rise"), ("spread", "slope"))
 
 
 @st.composite
@@ -119,13 +159,20 @@ def models(draw):
             steps = st.floats(-5, 5, allow_nan=False)
             values = draw(st.lists(steps, min_size=len(edges) + 1, max_size=len(edges) + 1))
             curves[name] = Curve(np.array(edges, float), np.array(values), draw(steps))
-        heads.append(Head(kind, draw(st.floats(-5, 5)), curves, 0.9, 0.5))
+        pairs = {}
+        for pair in draw(st.sets(st.sampled_from(PAIRS), max_size=2)):
+            rows, columns = (np.array(draw(EDGES), float) for _ in pair)
+            shape = len(rows) + 2, len(columns) + 2
+            seed = draw(st.integers(0, 99))
+            values = np.random.default_rng(seed).normal(size=shape, scale=3)
+            pairs[pair] = Table(rows, columns, values)
+        heads.append(Head(kind, draw(st.floats(-5, 5)), curves, 0.9, 0.5, pairs))
     return Model("drawn", "", tuple(heads), {})
 
 
 @settings(max_examples=80, deadline=None)
 @given(model=models(), data=st.data())
-def test_scores_are_the_base_plus_all_curves_and_contributions_add_up_to_them(model, data):
+def test_scores_are_the_base_plus_curves_and_pairs_and_contributions_add_up(model, data):
     n_epochs, n_sites = data.draw(st.integers(1, 4)), data.draw(st.integers(1, 3))
     values = np.zeros((len(MEASURED), n_epochs, n_sites), dtype=np.float32)
     for name in set(NAMES) & set(MEASURED):
@@ -149,6 +196,15 @@ def test_scores_are_the_base_plus_all_curves_and_contributions_add_up_to_them(mo
                     expected[epoch, site] += (
                         curve.missing if math.isnan(x) else curve.values[step]
                     )
+        for names, pair in head.pairs.items():
+            for cell in np.ndindex(n_epochs, n_sites):
+                steps = []
+                for name, edges in zip(names, (pair.rows, pair.columns), strict=True):
+                    x = float(table.column(name)[cell])
+                    steps.append(
+                        len(edges) + 1 if math.isnan(x) else sum(e < x for e in edges)
+                    )
+                expected[cell] += pair.values[*steps]
         np.testing.assert_allclose(scores[row], expected, atol=1e-9)
         epochs, sites = (cell.ravel() for cell in np.indices((n_epochs, n_sites)))
         explained = explain(
@@ -157,7 +213,9 @@ def test_scores_are_the_base_plus_all_curves_and_contributions_add_up_to_them(mo
         total = [head.base + sum(part.log_odds for part in parts) for parts in explained]
         np.testing.assert_allclose(total, scores[row].ravel(), atol=1e-9)
         for parts in explained:
-            assert sorted(part.feature for part in parts) == sorted(head.curves)
+            assert sorted(part.feature for part in parts) == sorted(
+                [*head.curves, *map("+".join, head.pairs)]
+            )
 
 
 def no_usual(n_sites):
@@ -209,6 +267,22 @@ def test_a_model_is_loaded_with_its_calibration_worked_in(tmp_path):
                 curve.values, 1.5 * np.array(entry["curves"][name]["values"])
             )
             assert curve.missing == 1.5 * -0.25
+        ((names, pair),) = head.pairs.items()
+        assert names == ("slope", "step")
+        (written_pair,) = entry["pairs"]
+        np.testing.assert_array_equal(pair.rows, written_pair["edges"][0])
+        np.testing.assert_array_equal(pair.columns, written_pair["edges"][1])
+        np.testing.assert_array_equal(pair.values, 1.5 * np.array(written_pair["values"]))
+
+
+def test_a_head_may_have_no_pair(tmp_path):
+    raw = changed(("heads", "pop", "pairs"), [])
+    assert [len(head.pairs) for head in load_model(written(tmp_path, raw)).heads] == [
+        1,
+        1,
+        0,
+        1,
+    ]
 
 
 def test_calibrated_scores_are_slope_times_raw_scores_plus_offset(tmp_path):
@@ -238,13 +312,18 @@ def changed(path, value):
 
 
 SWING = ("heads", "eye", "curves", "swing")
+PAIR = ("heads", "eye", "pairs", 0)
+
+
+def a_pair(*features):
+    return {"features": list(features), "edges": [[], []], "values": [[0, 0], [0, 0]]}
 
 
 @pytest.mark.parametrize(
     ("path", "value", "words"),
     [
-        (("model_version",), 2, "reads models of version 1; the file has version 2"),
-        (("model_version",), "1", "the file has version '1'"),
+        (("model_version",), 1, "reads models of version 2; the file has version 1"),
+        (("model_version",), "2", "the file has version '2'"),
         (("feature_table_sha256",), "0" * 64, "another feature table"),
         (("feature_table_sha256",), None, "another feature table"),
         ((*SWING, "edges"), [1, 2, 2, 3], "swing needs rising edges"),
@@ -262,6 +341,32 @@ SWING = ("heads", "eye", "curves", "swing")
         ((*SWING, "values"), "abc", "damaged"),
         ((*SWING, "values"), [1, 2, "x", 4, 5], "damaged"),
         ((*SWING, "values"), [1, 2, 10**400, 4, 5], "damaged"),
+        ((*PAIR, "edges"), [[1], [2, 2]], "slope and step needs rising edges"),
+        ((*PAIR, "edges"), [[float("inf")], [1, 2]], "slope and step holds a number that is not"),
+        ((*PAIR, "edges"), [[1], [1, float("nan")]], "slope and step holds a number that is not"),
+        ((*PAIR, "edges"), [[2, 1], [1]], "slope and step needs rising edges"),
+        ((*PAIR, "edges"), [[1, 2], [1]], "two rows and two columns more"),
+        ((*PAIR, "edges"), [[[1]], [1, 2]], "slope and step needs rising edges"),
+        ((*PAIR, "edges"), [[1]], "damaged"),
+        ((*PAIR, "edges"), [[1], [1, 2], [3]], "damaged"),
+        ((*PAIR, "values"), [[0] * 4] * 2, "two rows and two columns more"),
+        ((*PAIR, "values"), [[0] * 3] * 3, "two rows and two columns more"),
+        ((*PAIR, "values"), [0] * 12, "two rows and two columns more"),
+        ((*PAIR, "values"), [[0] * 4, [0] * 3, [0] * 4], "damaged"),
+        ((*PAIR, "values"), [[0] * 4] * 2 + [[0, 0, 0, None]], "holds a number that is not"),
+        ((*PAIR, "values"), [[0] * 4] * 2 + [[0, 0, 0, float("inf")]], "number that is not"),
+        ((*PAIR, "values"), KeyError, "damaged: 'values'"),
+        ((*PAIR, "features"), ["slope"], "damaged"),
+        ((*PAIR, "features"), ["slope", "step", "swing"], "damaged"),
+        ((*PAIR, "features"), ["slope", "sneeze"], "unknown feature 'sneeze'"),
+        ((*PAIR, "features"), [["slope"], "step"], "unknown feature"),
+        ((*PAIR, "features"), ["slope", "slope"], "slope is paired with itself"),
+        (("heads", "eye", "pairs"), [a_pair("step", "swing")] * 2, "step and swing stands twice"),
+        (("heads", "eye", "pairs"), [a_pair("step", "swing"), a_pair("swing", "step")],
+         "swing and step stands twice"),
+        (("heads", "eye", "pairs"), {}, "pairs are not a list"),
+        (("heads", "eye", "pairs"), [1], "damaged"),
+        (("heads", "eye", "pairs"), KeyError, "damaged: 'pairs'"),
         (("heads", "pop"), KeyError, "damaged: 'pop'"),
         (("heads",), KeyError, "damaged: 'heads'"),
         (("heads",), [], "damaged"),

@@ -5,12 +5,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from artifactlens.curves import Curve, Head, Model
+from artifactlens.curves import Curve, Head, Model, Table
 from artifactlens.evidence import amount, explain, quiet_values, sentence, values_at
 from artifactlens.features import BY_NAME, FEATURE_NAMES, MEASURED, FeatureTable
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.lookalikes import SIGNS, look_alike
-from artifactlens.result import Contribution
+from artifactlens.result import Contribution, Measure
 
 DRIVERS = {
     "eye": "front_vertical",
@@ -36,6 +36,14 @@ def part(feature, log_odds, value=None, usual=None):
     entry = BY_NAME[feature]
     shown = VALUES[feature] if value is None else value
     return Contribution(feature, entry.label, entry.unit, shown, usual, log_odds)
+
+
+def pair_of(first, second, log_odds, values=(12.0, 3.0), usual=(None, None)):
+    measures = tuple(
+        Measure(name, BY_NAME[name].label, BY_NAME[name].unit, value, as_usual)
+        for name, value, as_usual in zip((first, second), values, usual, strict=True)
+    )
+    return Contribution.of(measures, log_odds)
 
 
 def told(kind, sites=("Fp1", "Fp2"), site="Fp1", parts=None, *, reference=False, field=7,
@@ -225,6 +233,38 @@ def test_the_driver_is_what_speaks_most_for_the_kind_even_if_more_speaks_against
     )
 
 
+def test_a_pair_counts_in_the_sum_but_does_not_drive_beside_a_feature_that_speaks_for():
+    parts = (pair_of("step", "spread", 4.0), part("step", 2.5), part("swing", 1.0))
+    text = told("pop", parts=parts)
+    assert text.endswith("Fastest step drove this mark (+2.5 of +7.5): 183 uV.")
+
+
+def test_a_pair_drives_where_no_single_feature_speaks_for_the_kind():
+    parts = (part("step", -2.5), pair_of("burst", "high_power", 1.2), part("swing", -0.3))
+    assert told("muscle", parts=parts).endswith(
+        ". Highest pace within a tenth of a second together with power at 55-95 Hz drove "
+        "this mark (+1.2 of +1.2): 12 uV and 3.0 dB."
+    )
+
+
+@pytest.mark.parametrize(
+    ("names", "values", "usual", "words"),
+    [
+        (("burst", "high_power"), (12.0, 3.0), (4.0, -2.0),
+         ": 12 uV and 3.0 dB, usually 4 uV and -2.0 dB here."),
+        (("burst", "high_power"), (12.0, 3.0), (4.0, None), ": 12 uV and 3.0 dB."),
+        (("burst", "high_power"), (12.0, None), (4.0, -2.0), ": 12 uV and not measurable."),
+        (("burst", "high_power"), (None, None), (4.0, -2.0), "(+1.2 of +1.2)."),
+        (("burst_rise", "high_rise"), (12.0, 3.0), (0.1, 0.2), ": 12.0 dB and 3.0 dB."),
+        (("front_lateral", "spread"), (12.0, 0.5), (-3.0, 0.2),
+         ": +12 uV and 0.50, usually -3 uV and 0.20 here."),
+    ],
+)  # fmt: skip
+def test_a_pair_that_drives_tells_both_of_its_measures(names, values, usual, words):
+    text = told("muscle", parts=(pair_of(*names, 1.2, values, usual),))
+    assert text.endswith(words)
+
+
 def test_the_usual_value_stands_beside_the_value():
     parts = (part("step", 2.5, usual=11.4),)
     assert told("pop", parts=parts).endswith(": 183 uV, usually 11.4 uV here.")
@@ -296,6 +336,46 @@ def test_contributions_come_largest_first_with_value_unit_and_usual():
     assert [(p.feature, p.log_odds) for p in parts] == [("slope", -4.0), ("step", 2.0)]
     assert (parts[1].value, parts[1].unit, parts[1].usual) == (80.0, "uV", 2.0)
     assert parts[1].label == "fastest step"
+
+
+def test_a_pair_is_one_contribution_with_both_measures():
+    table = Table(np.array([0.0]), np.array([50.0]), np.arange(9.0).reshape(3, 3))
+    single = small_model().heads[0].curves
+    heads = tuple(
+        Head(k, -1.0, single, 0.9, 0.5, {("slope", "step"): table}) for k in KIND_NAMES
+    )
+    measured = {name: np.zeros(2) for name in FEATURE_NAMES} | {
+        "slope": np.array([0.5, np.nan]),
+        "step": np.array([80.0, 20.0]),
+    }
+    usual = {name: np.arange(3, dtype=np.float32) for name in FEATURE_NAMES}
+    first, second = explain(
+        Model("pair", "", heads, {}), "pop", measured, usual, np.array([2, 1])
+    )
+    assert [(p.feature, p.log_odds) for p in first] == [
+        ("slope", -4.0),
+        ("slope+step", 4.0),  # beyond both edges: row 1, column 1
+        ("step", 2.0),
+    ]
+    assert [(p.feature, p.log_odds) for p in second] == [
+        ("slope+step", 6.0),  # the first missing, the second below its edge
+        ("step", -1.0),
+        ("slope", 0.5),
+    ]
+    pair = first[1]
+    assert pair.label == "spectral slope, 14-42 Hz together with fastest step"
+    assert (pair.unit, pair.value, pair.usual) == ("", None, None)
+    assert (
+        pair.pair
+        == pair.measures
+        == (
+            Measure("slope", "spectral slope, 14-42 Hz", "", 0.5, 2.0),
+            Measure("step", "fastest step", "uV", 80.0, 2.0),
+        )
+    )
+    assert second[0].pair[0].value is None
+    assert second[1].pair == ()
+    assert second[1].measures == (Measure("step", "fastest step", "uV", 20.0, 1.0),)
 
 
 def test_contributions_of_a_cell_add_up_to_its_score_and_the_missing_is_none():

@@ -20,7 +20,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from result_factory import make_result
+from result_factory import PAIR, make_result
 
 from artifactlens.errors import OutputError, ResultError
 from artifactlens.export.atomic import probe_folder, write_atomically, write_together
@@ -109,6 +109,15 @@ def test_flags_tsv_drives_on_the_strongest_evidence_for_the_kind_not_against_it(
     row = _rows(flags_tsv(_with_flag(contributions=(against, *flag.contributions))))[1]
     assert row[6] == "front_vertical"
     assert row[10] == "+3.100"
+
+
+def test_flags_tsv_drives_on_a_pair_only_where_no_single_feature_speaks_for_the_kind():
+    flag = make_result(1).flags[0]
+    beside = _rows(flags_tsv(_with_flag(contributions=(PAIR, *flag.contributions))))[1]
+    assert beside[6:11] == ["front_vertical", "142.3", "uV", "3.5", "+3.100"]
+    against = dataclasses.replace(flag.contributions[0], log_odds=-0.1)
+    alone = _rows(flags_tsv(_with_flag(contributions=(PAIR, against))))[1]
+    assert alone[6:11] == ["burst+high_power", "n/a", "n/a", "n/a", "+5.000"]
 
 
 def test_flags_tsv_without_flags_is_the_header_alone():
@@ -725,6 +734,23 @@ def test_the_written_result_reads_back_equal(tmp_path, hostile):
     result = make_result(5, hostile=hostile)
     paths = write_all(result, tmp_path, start=None, report_html="")
     assert Result.from_json(paths["result"].read_text("utf-8")) == result
+
+
+def test_a_pair_of_measures_reads_back_equal():
+    result = _with_flag(contributions=(PAIR, make_result(1).flags[0].contributions[0]))
+    text = result.to_json()
+    assert Result.from_json(text) == result
+    (pair, single) = json.loads(text)["flags"][0]["contributions"]
+    assert [measure["feature"] for measure in pair["pair"]] == ["burst", "high_power"]
+    assert single["pair"] == []
+
+
+@pytest.mark.parametrize("pair", [None, [{"feature": "burst"}], [1]])
+def test_a_damaged_pair_is_refused_in_words(pair):
+    body = json.loads(make_result(1).to_json())
+    body["flags"][0]["contributions"][0]["pair"] = pair
+    with pytest.raises(ResultError, match="damaged"):
+        Result.from_json(json.dumps(body))
 
 
 def test_a_site_name_with_a_damaged_character_reads_back_equal(tmp_path):

@@ -16,8 +16,9 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from result_factory import make_result
+from result_factory import PAIR, make_result
 
+from artifactlens.features import FEATURES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.page.balance import HALF, MOST_BARS, balance_rows, bar_svg, reach
 from artifactlens.page.headmap import CENTRE, RADIUS, head_svg, place, rim_degrees, unplaced
@@ -41,7 +42,7 @@ from artifactlens.page.traces import (
     y_units,
 )
 from artifactlens.page.words import clean, clock, cut, names, number, per_hundred, span
-from artifactlens.result import CAUTION, Contribution
+from artifactlens.result import CAUTION, Contribution, Measure
 
 VOID = {"meta", "input", "br", "hr", "img", "link"}
 
@@ -625,14 +626,60 @@ def test_bars_name_value_unit_and_usual_value():
     rows = balance_rows(make_result(1).flags[0])
     assert (rows[0].label, rows[0].measured, rows[0].usual) == (
         "frontal polarity",
-        "142 uV",
-        "3.5 uV",
+        "142\u00a0uV",
+        "3.5\u00a0uV",
     )
     missing = dataclasses.replace(
         make_result(1).flags[0],
         contributions=(Contribution("x", "a label", "dB", None, None, 1.0),),
     )
     assert balance_rows(missing)[0].measured == "not measured"
+
+
+def with_pair(flag):
+    return dataclasses.replace(
+        flag,
+        contributions=(PAIR, *flag.contributions),
+        score=flag.score + PAIR.log_odds,
+    )
+
+
+def test_the_bar_of_a_pair_names_both_features_and_measures():
+    flag = with_pair(make_result(2).flags[1])
+    row = balance_rows(flag)[0]
+    assert row.label == (
+        "highest pace within a tenth of a second together with power at 55-95 Hz"
+    )
+    assert (row.measured, row.usual) == (
+        "12.3\u00a0uV and −3.0\u00a0dB",
+        "4\u00a0uV and not known",
+    )
+    assert row.log_odds == PAIR.log_odds
+    result = dataclasses.replace(make_result(2), flags=(flag,))
+    text = Reader(report_html(result)).text
+    told = f"{row.label} {row.measured} {row.usual}"
+    assert " ".join(told.split()) in text
+
+
+def test_bars_with_a_pair_add_up_to_the_score():
+    flag = with_pair(make_result(1).flags[0])
+    rows = balance_rows(flag)
+    assert len(rows) == len(make_result(1).flags[0].contributions) + 2
+    assert math.fsum(row.log_odds for row in rows) == pytest.approx(flag.score, abs=1e-9)
+
+
+@pytest.mark.parametrize("one", FEATURES)
+def test_no_label_of_a_pair_is_cut(one):
+    other = max(FEATURES, key=lambda feature: len(feature.label))
+    measures = tuple(
+        Measure(feature.name, feature.label, feature.unit, None, None)
+        for feature in (one, other)
+    )
+    flag = dataclasses.replace(
+        make_result(1).flags[0], contributions=(Contribution.of(measures, 1.0),)
+    )
+    text = Reader(report_html(dataclasses.replace(make_result(1), flags=(flag,)))).text
+    assert f"{one.label} together with {other.label} not measured and not measured" in text
 
 
 def test_what_speaks_for_lies_right_and_what_speaks_against_left():

@@ -431,7 +431,10 @@ def test_flags_tsv_has_its_columns_and_the_flags(demo):
         assert row["kind"] == flag["kind"]
         assert row["sites"].split("|") == flag["sites"]
         assert row["sentence"] == flag["sentence"]
-        driver = max(flag["contributions"], key=lambda part: part["log_odds"])
+        driver = max(
+            flag["contributions"],
+            key=lambda part: (not part["pair"] and part["log_odds"] > 0, part["log_odds"]),
+        )
         assert row["driver"] == driver["feature"]
         assert float(row["evidence"]) == pytest.approx(driver["log_odds"], abs=5e-4)
 

@@ -64,24 +64,25 @@ COLUMNS: tuple[Column[Flag], ...] = (
     Column(
         "driver",
         lambda flag: text_cell(flag.driver.feature),
-        "Feature that speaks for the kind most strongly.",
+        "Single feature that speaks for the kind most strongly. If none does: the two features "
+        "that do so together, joined by '+'; the measures of such a pair stand in result.json.",
     ),
     Column(
         "driver_value",
         lambda flag: number_cell(flag.driver.value, ".4g"),
         "Value of that feature at the strongest second and site, in driver_unit; n/a if "
-        "it could not be measured.",
+        "it could not be measured, and for a pair.",
     ),
     Column(
         "driver_unit",
         lambda flag: text_cell(flag.driver.unit),
-        "Unit of that feature; n/a for a pure number.",
+        "Unit of that feature; n/a for a pure number, and for a pair.",
     ),
     Column(
         "driver_usual",
         lambda flag: number_cell(flag.driver.usual, ".4g"),
         "Median of that feature over the quiet seconds of this recording, in driver_unit; "
-        "n/a if there is none.",
+        "n/a if there is none, and for a pair.",
     ),
     Column(
         "evidence",

@@ -11,10 +11,10 @@ from artifactlens.page.svg import joined, tag
 from artifactlens.result import Contribution, Flag, amount
 
 MOST_BARS = 8
-"""Features shown by themselves."""
+"""Features and pairs shown by themselves."""
 
 SMALL = 0.1
-"""Log-odds below which a feature goes into "the rest": it moves no probability by 0.03."""
+"""Log-odds below which a feature or pair goes into "the rest": it moves no probability by 0.03."""
 
 HALF = 100.0
 """Half the width of the scale, in units of the picture."""
@@ -53,13 +53,21 @@ def balance_rows(flag: Flag) -> tuple[BalanceRow, ...]:
 
 
 def _feature_row(part: Contribution) -> BalanceRow:
-    def with_unit(value: float | None, absent: str) -> str:
-        return absent if value is None else amount(value, part.unit).replace("-", "−")
+    def with_unit(value: float | None, unit: str, absent: str) -> str:
+        if value is None:
+            return absent
+        # A line may break between two measures, not between a number and its unit.
+        return amount(value, unit).replace("-", "−").replace(" ", "\u00a0")
 
     return BalanceRow(
         label=part.label,
-        measured=with_unit(part.value, "not measured"),
-        usual=with_unit(part.usual, "not known"),
+        measured=" and ".join(
+            with_unit(measure.value, measure.unit, "not measured")
+            for measure in part.measures
+        ),
+        usual=" and ".join(
+            with_unit(measure.usual, measure.unit, "not known") for measure in part.measures
+        ),
         log_odds=part.log_odds,
         role="feature",
     )

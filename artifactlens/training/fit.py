@@ -47,7 +47,15 @@ RISING: dict[str, tuple[str, ...]] = {
     "pop": ("step", "step_rise", "step_crest", "step_alone"),
     "mains": ("mains_steady", "mains_level", "mains_harmonic"),
 }  # fmt: skip
-"""Features of which more can only speak for the kind: the curve must not fall."""
+"""Features of which more can only speak for the kind: the score must not fall with them."""
+
+PAIRS: dict[str, tuple[tuple[str, str], ...]] = {
+    "eye": (),
+    "muscle": (),
+    "pop": (),
+    "mains": (),
+}
+"""Features of one head that may act together beyond what each says alone."""
 
 SURE_SPECIFICITY = {"eye": 0.99, "muscle": 0.99, "pop": 0.998, "mains": 0.995}
 DOUBTFUL_SPECIFICITY = {"eye": 0.97, "muscle": 0.97, "pop": 0.99, "mains": 0.99}
@@ -60,7 +68,7 @@ LEAST_SURE, LEAST_DOUBTFUL = 0.5, 0.2
 
 @dataclass(frozen=True, slots=True)
 class FittedHead:
-    """One head before it is written: curves, calibration and operating points."""
+    """One head before it is written: curves, pairs, calibration and operating points."""
 
     kind: str
     compiled: Compiled
@@ -86,12 +94,18 @@ def fit_forest(
 ) -> tuple[HistGradientBoostingClassifier, NDArray[np.intp]]:
     """Boosted forest of one kind; returns it with the columns that it sees.
 
-    ``interactions`` lets a tree use several features: the comparison, never shipped.
+    ``interactions`` lets a tree use any features: the comparison, never shipped. Else a
+    branch uses one feature, or two of ``PAIRS``.
     """
     from sklearn.ensemble import HistGradientBoostingClassifier
 
     names = [name for name in HEAD_FEATURES[kind] if name not in leave_out]
     columns = np.array([FEATURE_NAMES.index(name) for name in names])
+    together = [[k] for k in range(len(names))] + [
+        [names.index(first), names.index(second)]
+        for first, second in PAIRS[kind]
+        if leave_out.isdisjoint((first, second))
+    ]
     truth = examples.truth[:, KIND_NAMES.index(kind)]
     known = truth >= 0
     forest = HistGradientBoostingClassifier(
@@ -103,7 +117,7 @@ def fit_forest(
         max_bins=128,
         early_stopping=False,
         random_state=seed,
-        interaction_cst=None if interactions else "no_interactions",
+        interaction_cst=None if interactions else together,
         monotonic_cst=[int(name in RISING[kind]) for name in names],
     )
     forest.fit(
@@ -119,10 +133,7 @@ def fit_head(
     """Fit on training people, calibrate and set operating points on validation people."""
     forest, columns = fit_forest(kind, training, seed=seed)
     check = np.concatenate([training.features[::7], validation.features[::7]])[:, columns]
-    compiled = compile_forest(forest, _with_missing(check))
-    compiled = Compiled(
-        compiled.base, {int(columns[k]): curve for k, curve in compiled.curves.items()}
-    )
+    compiled = compile_forest(forest, _with_missing(check)).on_columns(columns)
     truth = validation.truth[:, KIND_NAMES.index(kind)]
     decision = compiled.decision(validation.features)
     slope, offset = calibrate(decision[truth >= 0], truth[truth >= 0])
@@ -213,6 +224,14 @@ def model_body(
                     }
                     for column, curve in head.compiled.curves.items()
                 },
+                "pairs": [
+                    {
+                        "features": [FEATURE_NAMES[first], FEATURE_NAMES[second]],
+                        "edges": [table.rows.tolist(), table.columns.tolist()],
+                        "values": table.values.tolist(),
+                    }
+                    for (first, second), table in head.compiled.pairs.items()
+                ],
             }
             for head in heads
         },
