@@ -46,3 +46,7 @@ class OutputError(ArtifactlensError, OSError):
 
 class OptionError(ArtifactlensError, ValueError):
     """An option was given a value that it does not know."""
+
+
+class LabelsError(ArtifactlensError, ValueError):
+    """A file of labels is missing, malformed or does not fit its recording."""

@@ -23,7 +23,10 @@ from artifactlens import __version__
 from artifactlens.errors import ArtifactlensError
 from artifactlens.export.atomic import write_atomically
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.training import corpora
+from artifactlens.training.corpora.backgrounds import mental_arithmetic, motor_imagery
+from artifactlens.training.corpora.labelled import need_folder
+from artifactlens.training.corpora.readers import READERS
+from artifactlens.training.corpora.truth import examples_of
 from artifactlens.training.examples import CLEAN, PRESENT, Examples, join
 from artifactlens.training.fit import fit_forest, fit_head, model_body
 from artifactlens.training.report import check_table
@@ -50,22 +53,24 @@ def copies(
 
 def gather(root: Path, jobs: int) -> tuple[Examples, Examples]:
     """Training and validation examples."""
-    eegmat = corpora.need_folder(root / "eegmat", "eegmat")
-    imagery = corpora.need_folder(root / "eegmmidb_s001", "eegmmidb_s001")
-    faces = corpora.need_folder(root / "gestures_one_person", "gestures_one_person")
+    eegmat = need_folder(root / "eegmat", "eegmat")
+    imagery = need_folder(root / "eegmmidb_s001", "eegmmidb_s001")
     training = [
         copies(
-            corpora.mental_arithmetic(eegmat, TRAINING_PEOPLE), TRAINING_COPIES, 1_000_000, jobs
+            mental_arithmetic(eegmat, TRAINING_PEOPLE), TRAINING_COPIES, 1_000_000, jobs
         ),
         copies(
-            corpora.motor_imagery(imagery), IMAGERY_COPIES, 2_000_000, jobs,
+            motor_imagery(imagery), IMAGERY_COPIES, 2_000_000, jobs,
             kinds=("pop", "mains"),
         ),
-        *corpora.motor_imagery_readings(imagery),
-        *corpora.gestures(faces),
+        *(
+            examples_of(one)
+            for name in ("eegmmidb_s001", "gestures_one_person")
+            for one in READERS[name](root / name)
+        ),
     ]  # fmt: skip
     validation = copies(
-        corpora.mental_arithmetic(eegmat, VALIDATION_PEOPLE),
+        mental_arithmetic(eegmat, VALIDATION_PEOPLE),
         VALIDATION_COPIES,
         3_000_000,
         jobs,

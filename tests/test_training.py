@@ -16,7 +16,7 @@ from signals import SITES, bump, noise, row, sine, step, ten_twenty
 from sklearn.ensemble import HistGradientBoostingClassifier
 from threadpoolctl import threadpool_limits
 
-from artifactlens.curves import Curve, Head, Model, load_model, logistic
+from artifactlens.curves import Curve, Head, Model, Table, load_model, logistic
 from artifactlens.epochs import epoch_grid
 from artifactlens.errors import ModelError, RecordingError
 from artifactlens.features import FEATURE_NAMES, MEASURED, FeatureTable
@@ -26,9 +26,10 @@ from artifactlens.recording import from_array
 from artifactlens.simulation import brain, eye
 from artifactlens.simulation.scene import Scene
 from artifactlens.sites import site_position
-from artifactlens.training import corpora as read_corpora
+from artifactlens.training import fit as fitting
 from artifactlens.training import simulated
 from artifactlens.training.compilation import compile_forest
+from artifactlens.training.corpora import backgrounds as read_corpora
 from artifactlens.training.examples import (
     CLEAN,
     PRESENT,
@@ -46,10 +47,12 @@ from artifactlens.training.fit import (
     _threshold,
     calibrate,
     clean_seconds,
+    fit_forest,
     fit_head,
     model_body,
 )
 from artifactlens.training.labels import label_cells
+from artifactlens.training.purification import purify
 from artifactlens.training.report import check_table, sensitivity_at
 from artifactlens.training.situation import (
     Background,
@@ -118,7 +121,7 @@ def table_of(values):
     )
 
 
-# The forest as curves ------------------------------------------------------------------
+# The forest as curves and pairs ---------------------------------------------------------
 
 
 def forest_on(x, y, **options):
@@ -146,30 +149,169 @@ def awkward(seed, n=900):
     x[rng.random(n) < 0.2, 4] = np.nan
     score = x[:, 0] + x[:, 1] ** 2 - 1 + np.where(np.isnan(x[:, 3]), 1.0, np.sign(x[:, 3]))
     score += np.where(np.isnan(x[:, 4]), 2.0, 0.0)
+    # What no sum of single features gives: a product, and a product with a missing one.
+    score += x[:, 0] * x[:, 1] + np.where(np.isnan(x[:, 3]), x[:, 1], 0.0)
     return x, (score + rng.normal(size=n) > 0.5).astype(int)
 
 
+SINGLE = [[k] for k in range(5)]
+OVERLAPPING = [[0, 1], [1, 3], [3, 4]]
+
+
+def around(edges):
+    """Every edge, next to it on both sides, beyond all of them, and missing."""
+    return np.concatenate(
+        [
+            edges,
+            np.nextafter(edges, np.inf),
+            np.nextafter(edges, -np.inf),
+            [np.inf, -np.inf, np.nan],
+        ]
+    )
+
+
+@pytest.mark.parametrize("pairs", [[], OVERLAPPING])
 @pytest.mark.parametrize("seed", range(3))
-def test_curves_give_the_decision_of_the_forest(seed):
+def test_curves_and_pairs_give_the_decision_of_the_forest(seed, pairs):
     x, y = awkward(seed)
     monotone = [1, 0, 0, 1, 0] if seed == 1 else None
-    forest = forest_on(x, y, monotonic_cst=monotone)
+    forest = forest_on(x, y, monotonic_cst=monotone, interaction_cst=SINGLE + pairs)
     compiled = compile_forest(forest, x)
+    assert set(compiled.pairs) == set(map(tuple, pairs))
 
-    # On every edge, next to it on both sides, and where nothing or everything is missing.
     hard = [x, np.full((1, 5), np.nan), np.full((1, 5), np.inf), np.full((1, 5), -np.inf)]
     for column, curve in compiled.curves.items():
-        edges = curve.edges
-        places = np.concatenate(
-            [edges, np.nextafter(edges, np.inf), np.nextafter(edges, -np.inf)]
-        )
-        rows = np.repeat(x[:1], len(places), axis=0)
-        rows[:, column] = places
+        rows = np.repeat(x[:1], len(around(curve.edges)), axis=0)
+        rows[:, column] = around(curve.edges)
+        hard.append(rows)
+    for (first, second), table in compiled.pairs.items():
+        places = np.meshgrid(around(table.rows), around(table.columns))
+        rows = np.repeat(x[1:2], places[0].size, axis=0)
+        rows[:, first], rows[:, second] = places[0].ravel(), places[1].ravel()
         hard.append(rows)
     rows = np.concatenate(hard)
     np.testing.assert_allclose(
         compiled.decision(rows), forest.decision_function(rows), rtol=0, atol=1e-9
     )
+
+
+def test_a_tree_of_three_features_compiles_if_its_branches_use_two():
+    rng = np.random.default_rng(8)
+    x = rng.normal(size=(1200, 3))
+    score = 3 * np.sign(x[:, 1]) + 3 * np.where(x[:, 1] > 0, x[:, 0], x[:, 2])
+    y = (score + rng.normal(size=1200) > 0).astype(int)
+    pairs = [[0], [1], [2], [0, 1], [1, 2]]
+    forest = forest_on(x, y, interaction_cst=pairs)
+    used = [
+        set(tree.nodes["feature_idx"][tree.nodes["is_leaf"] == 0])
+        for (tree,) in forest._predictors
+    ]
+    assert {0, 1, 2} in used
+    compiled = compile_forest(forest, x)
+    assert set(compiled.pairs) == {(0, 1), (1, 2)}
+    fresh = rng.normal(size=(5000, 3))
+    np.testing.assert_allclose(
+        compiled.decision(fresh), forest.decision_function(fresh), rtol=0, atol=1e-9
+    )
+
+
+def test_a_forest_of_one_pair_is_the_table_worked_out_by_hand():
+    """Two trees by hand: f = 1 where a > 0 and b > 0, and b > 2 alone adds 4."""
+    kinds = [("feature_idx", int), ("num_threshold", float), ("missing_go_to_left", bool),
+             ("left", int), ("right", int), ("is_leaf", bool), ("value", float)]  # fmt: skip
+    both = np.array([(0, 0.0, True, 1, 2, False, 0), (0, 0, 0, 0, 0, True, 0.0),
+                     (1, 0.0, False, 3, 4, False, 0), (0, 0, 0, 0, 0, True, 0.0),
+                     (0, 0, 0, 0, 0, True, 1.0)], dtype=kinds)  # fmt: skip
+    alone = np.array([(1, 2.0, True, 1, 2, False, 0), (0, 0, 0, 0, 0, True, 0.0),
+                      (0, 0, 0, 0, 0, True, 4.0)], dtype=kinds)  # fmt: skip
+    # Each sign of a with each sign of b, equally often: only the 2 x 2 table is met.
+    x = np.array([[-1, -1], [-1, 1], [1, -1], [1, 1]] * 10_000, dtype=float)
+    by_hand = SimpleNamespace(
+        _baseline_prediction=np.array([[-3.0]]),
+        _predictors=[(SimpleNamespace(nodes=both),), (SimpleNamespace(nodes=alone),)],
+        decision_function=lambda rows: -3.0 + (rows > 0).all(axis=1) + 4 * (rows[:, 1] > 2),
+    )
+    compiled = compile_forest(by_hand, x)
+    table = compiled.pairs[0, 1]
+    np.testing.assert_array_equal((table.rows, table.columns), [[0.0], [0.0]])
+    # The mean of 0 0 / 0 1 is 1/4, its rows lie 1/4 below and above, and so do its columns.
+    np.testing.assert_allclose(
+        table.values[:2, :2], [[0.25, -0.25], [-0.25, 0.25]], atol=1e-4
+    )
+    assert compiled.base == pytest.approx(-3 + 0.25, abs=1e-4)
+    np.testing.assert_allclose(compiled.curves[0].values, [-0.25, 0.25], atol=1e-4)
+    np.testing.assert_array_equal(compiled.curves[1].edges, [0.0, 2.0])
+    np.testing.assert_allclose(compiled.curves[1].values, [-0.25, 0.25, 4.25], atol=1e-4)
+    # Missing: a goes to the left of 0, b to the right of it.
+    nan = np.nan
+    rows = np.array([[nan, 1], [1, nan], [nan, nan], [-1, nan], [1, 3.0]])
+    np.testing.assert_allclose(compiled.decision(rows), [-3, -2, -3, -3, 2], atol=1e-12)
+
+
+def test_a_pair_holds_nothing_that_one_of_its_features_says_alone():
+    x, y = awkward(2)
+    forest = forest_on(x, y, interaction_cst=SINGLE + OVERLAPPING)
+    compiled = compile_forest(forest, x)
+    for (first, second), table in compiled.pairs.items():
+        found = table(x[:, first], x[:, second])
+        assert np.abs(found).max() > 0.1
+        for axis, (column, edges) in enumerate(
+            ((first, table.rows), (second, table.columns))
+        ):
+            step = np.searchsorted(edges, x[:, column])
+            step[np.isnan(x[:, column])] = len(edges) + 1
+            total = np.bincount(step, found, minlength=len(edges) + 2)
+            # Every cell has the weight of one row, shared by all cells, besides its own.
+            total += table.values.sum(axis=1 - axis) / table.values.size
+            np.testing.assert_allclose(total, 0, atol=1e-9)
+
+
+@pytest.mark.parametrize("met", ["all", "diagonal", "two blocks", "none"])
+def test_purified_rows_and_columns_have_mean_zero_and_the_sum_stays(met):
+    rng = np.random.default_rng(5)
+    values = rng.normal(size=(40, 30)) + np.arange(40)[:, None] - np.arange(30) / 3 + 2
+    counts = rng.poisson(20, values.shape)
+    if met == "diagonal":  # both features nearly the same
+        counts[np.abs(np.subtract.outer(np.arange(40), np.arange(30))) > 1] = 0
+    elif met == "two blocks":  # nothing but cells never met joins them
+        counts[:20, 15:] = counts[20:, :15] = 0
+    elif met == "none":
+        counts[:] = 0
+    parts = purify(values, counts)
+    weight = counts + 1 / counts.size
+    size = np.abs(parts.pure).max()
+    for axis in (0, 1):
+        means = np.average(parts.pure, axis=axis, weights=weight)
+        assert np.abs(means).max() < 1e-9 * size
+    of_row, of_column = weight.sum(axis=1), weight.sum(axis=0)
+    assert abs(np.average(parts.rows, weights=of_row)) < 1e-9
+    assert abs(np.average(parts.columns, weights=of_column)) < 1e-9
+    again = parts.pure + parts.rows[:, None] + parts.columns + parts.mean
+    np.testing.assert_allclose(again, values, rtol=0, atol=1e-10)
+
+
+def test_what_is_a_sum_of_both_features_leaves_no_pair():
+    rows, columns = np.arange(6.0), np.array([3.0, -1.0, 2.0, 7.0])
+    parts = purify(rows[:, None] + columns, np.arange(24).reshape(6, 4))
+    np.testing.assert_allclose(parts.pure, 0, atol=1e-12)
+    np.testing.assert_allclose(np.diff(parts.rows), np.diff(rows), atol=1e-12)
+    np.testing.assert_allclose(np.diff(parts.columns), np.diff(columns), atol=1e-12)
+
+
+def test_a_score_that_must_not_fall_does_not_though_a_curve_of_a_pair_may():
+    rng = np.random.default_rng(6)
+    x = rng.normal(size=(1500, 2))
+    x[:, 1] -= x[:, 0]  # going together, so that what each says alone is hard to part
+    score = np.where(x[:, 1] > 0, 3.0, 0.2) * x[:, 0]
+    y = (score + rng.normal(size=1500) > 0).astype(int)
+    forest = forest_on(x, y, monotonic_cst=[1, 0], interaction_cst=[[0], [1], [0, 1]])
+    compiled = compile_forest(forest, x)
+    table = compiled.pairs[0, 1]
+    rising = np.unique(np.concatenate([table.rows, compiled.curves[0].edges, [9.0]]))
+    assert np.diff(compiled.curves[0].values).min() < 0
+    for partner in (*table.columns, np.inf, np.nan):
+        rows = np.stack([rising, np.full(len(rising), partner)], axis=1)
+        assert np.diff(compiled.decision(rows)).min() > -1e-9
 
 
 def test_a_split_on_missing_or_not_has_no_finite_edge():
@@ -183,6 +325,11 @@ def test_a_split_on_missing_or_not_has_no_finite_edge():
     assert curve.edges.shape == (0,)
     assert curve.missing > curve.values[0] + 1  # missing speaks for it, by construction
 
+    paired = forest_on(x, y, interaction_cst=[*SINGLE, [3, 4]])
+    table = compile_forest(paired, x).pairs[3, 4]
+    assert table.columns.shape == (0,)
+    assert table.values.shape == (len(table.rows) + 2, 2)
+
 
 def test_a_constant_feature_makes_no_curve():
     x, y = awkward(0)
@@ -193,15 +340,15 @@ def test_trees_without_a_split_go_into_the_base():
     x = np.zeros((40, 2))
     y = np.array([0, 0, 0, 1] * 10)
     compiled = compile_forest(forest_on(x, y), x)
-    assert compiled.curves == {}
+    assert compiled.curves == compiled.pairs == {}
     assert compiled.base == pytest.approx(math.log(1 / 3), abs=1e-6)
 
 
-def test_a_forest_with_interactions_is_refused():
+def test_a_forest_with_interactions_of_three_is_refused():
     rng = np.random.default_rng(3)
-    x = rng.normal(size=(600, 2))
-    y = (x[:, 0] * x[:, 1] > 0).astype(int)
-    with pytest.raises(ModelError, match="one uses 2"):
+    x = rng.normal(size=(600, 3))
+    y = (x[:, 0] * x[:, 1] * x[:, 2] > 0).astype(int)
+    with pytest.raises(ModelError, match="one uses 3"):
         compile_forest(forest_on(x, y, interaction_cst=None), x)
 
 
@@ -220,13 +367,17 @@ def test_curves_that_differ_from_the_forest_are_refused():
 # A model from rows to file -------------------------------------------------------------
 
 
-def learnable(n=1500, seed=0, kind=EYE):
-    """Rows on which the kind follows from two of the features that its head sees."""
+def learnable(n=1500, seed=0, kind=EYE, together=0.0):
+    """Rows on which the kind follows from two of the features that its head sees.
+
+    ``together`` weighs what only both of them tell.
+    """
     rng = np.random.default_rng(seed)
     features = rng.normal(size=(n, len(FEATURE_NAMES))).astype(np.float32)
     features[rng.random(features.shape) < 0.05] = np.nan
     seen = [FEATURE_NAMES.index(name) for name in HEAD_FEATURES[KIND_NAMES[kind]][:2]]
-    score = np.nan_to_num(features[:, seen]).sum(axis=1) * 2 - 1
+    known = np.nan_to_num(features[:, seen])
+    score = known.sum(axis=1) * 2 - 1 + together * known.prod(axis=1)
     truth = (rng.random(n) < logistic(score.astype(float))).astype(np.int8)
     return examples(truth, kind=kind, features=features, second=np.arange(n) // 3)
 
@@ -234,6 +385,39 @@ def learnable(n=1500, seed=0, kind=EYE):
 @pytest.fixture(scope="module")
 def head():
     return fit_head("eye", learnable(), learnable(seed=1))
+
+
+EYE_PAIR = HEAD_FEATURES["eye"][:2]
+
+
+@pytest.fixture(scope="module")
+def paired_head():
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setitem(fitting.PAIRS, "eye", (EYE_PAIR,))
+        return fit_head("eye", learnable(together=3.0), learnable(seed=1, together=3.0))
+
+
+def test_a_head_without_pairs_has_none(head):
+    assert head.compiled.pairs == {}
+
+
+def test_a_pair_that_is_asked_for_finds_what_only_both_tell(head, paired_head):
+    (pair,) = paired_head.compiled.pairs
+    assert sorted(FEATURE_NAMES[column] for column in pair) == sorted(EYE_PAIR)
+    columns = {FEATURE_NAMES[column] for column in paired_head.compiled.curves}
+    assert set(EYE_PAIR) <= columns <= set(HEAD_FEATURES["eye"])
+    # True table: 3 a b; both far on one side speak for it, on opposite sides against it.
+    table = paired_head.compiled.pairs[pair]
+    ends = np.array([1.5, -1.5])
+    assert (table(ends, ends) > 0.5).all()
+    assert (table(ends, -ends) < -0.5).all()
+
+
+def test_a_pair_of_a_feature_left_out_is_left_out(monkeypatch):
+    monkeypatch.setitem(fitting.PAIRS, "eye", (EYE_PAIR,))
+    rows = learnable(together=3.0)
+    forest, columns = fit_forest("eye", rows, leave_out=frozenset(EYE_PAIR[:1]))
+    assert compile_forest(forest, rows.features[:, columns]).pairs == {}
 
 
 def test_a_head_uses_only_the_features_of_its_kind(head):
@@ -265,16 +449,18 @@ def test_held_out_probabilities_are_calibrated(head):
         assert abs(p[inside].mean() - truth[inside].mean()) < 0.06
 
 
-def test_a_model_written_and_read_scores_bit_for_bit_alike(head, tmp_path):
+def test_a_model_written_and_read_scores_bit_for_bit_alike(head, paired_head, tmp_path):
     rng = np.random.default_rng(7)
     heads = [
         dataclasses.replace(
-            head,
+            chosen,
             kind=kind,
-            slope=head.slope * (1 + number / 7),
-            offset=head.offset - number / 3,
+            slope=chosen.slope * (1 + number / 7),
+            offset=chosen.offset - number / 3,
         )
-        for number, kind in enumerate(KIND_NAMES)
+        for number, (kind, chosen) in enumerate(
+            zip(KIND_NAMES, (head, paired_head) * 2, strict=True)
+        )
     ]
     path = tmp_path / "model.json"
     path.write_text(json.dumps(model_body(heads, "small", {}), allow_nan=False))
@@ -288,6 +474,14 @@ def test_a_model_written_and_read_scores_bit_for_bit_alike(head, tmp_path):
             for column, curve in entry.compiled.curves.items()
         }
 
+    def scaled_pairs(entry):
+        return {
+            tuple(FEATURE_NAMES[column] for column in columns): Table(
+                table.rows, table.columns, entry.slope * table.values
+            )
+            for columns, table in entry.compiled.pairs.items()
+        }
+
     direct = Model(
         "small",
         "",
@@ -298,6 +492,7 @@ def test_a_model_written_and_read_scores_bit_for_bit_alike(head, tmp_path):
                 scaled(entry),
                 entry.sure,
                 entry.doubtful,
+                scaled_pairs(entry),
             )
             for entry in heads
         ),
@@ -310,12 +505,22 @@ def test_a_model_written_and_read_scores_bit_for_bit_alike(head, tmp_path):
             assert curve.edges.tobytes() == other.curves[name].edges.tobytes()
             assert curve.values.tobytes() == other.curves[name].values.tobytes()
             assert curve.missing == other.curves[name].missing
+        assert list(one.pairs) == list(other.pairs)
+        for names, pair in one.pairs.items():
+            for array in ("rows", "columns", "values"):
+                assert (
+                    getattr(pair, array).tobytes()
+                    == getattr(other.pairs[names], array).tobytes()
+                )
+    assert [len(one.pairs) for one in read.heads] == [0, 1, 0, 1]
     values = rng.normal(size=(len(MEASURED), 50, 6))
     values[rng.random(values.shape) < 0.05] = np.nan
     table = table_of(values)
     scores = read.scores(table)
     assert scores.tobytes() == direct.scores(table).tobytes()
-    assert [(h.sure, h.doubtful) for h in read.heads] == [(head.sure, head.doubtful)] * 4
+    assert [(h.sure, h.doubtful) for h in read.heads] == [
+        (entry.sure, entry.doubtful) for entry in heads
+    ]
 
     # And the score is that of training, rows in another order of summation.
     truth = np.zeros((4, 50, 6), np.int8)
@@ -890,8 +1095,7 @@ def corpora_without_signal(tmp_path):
 
 def gathered(train, monkeypatch, root, opened):
     monkeypatch.setattr(read_corpora, "open_recording", opened)
-    monkeypatch.setattr(read_corpora, "motor_imagery_readings", lambda folder: [])
-    monkeypatch.setattr(read_corpora, "gestures", lambda folder: [])
+    monkeypatch.setattr(train, "READERS", dict.fromkeys(train.READERS, lambda folder: []))
     monkeypatch.setattr(train, "simulate", stub_simulate)
     return train.gather(root, 1)
 
@@ -923,8 +1127,7 @@ def test_seeds_of_training_and_validation_copies_differ(
         return stub_simulate(background, seed)
 
     monkeypatch.setattr(read_corpora, "open_recording", Opened())
-    monkeypatch.setattr(read_corpora, "motor_imagery_readings", lambda folder: [])
-    monkeypatch.setattr(read_corpora, "gestures", lambda folder: [])
+    monkeypatch.setattr(train, "READERS", dict.fromkeys(train.READERS, lambda folder: []))
     monkeypatch.setattr(train, "simulate", simulate)
     train.gather(corpora_without_signal, 1)
     assert len(seeds) == len(set(seeds))
@@ -933,48 +1136,6 @@ def test_seeds_of_training_and_validation_copies_differ(
 def test_an_absent_corpus_is_named(train, tmp_path):
     with pytest.raises(RecordingError, match="eegmat"):
         train.gather(tmp_path, 1)
-
-
-# Readings of two readers ---------------------------------------------------------------
-
-READINGS = """\
-recording reader kind onset end sites confidence comment
-S001R01.edf first page 0.0 10.0 - - -
-S001R01.edf second page 0.0 8.0 - - -
-S001R01.edf first eye 1.2 1.6 Fp1|Fp2 sure -
-S001R01.edf second eye 1.3 2.1 Fp1 probable -
-S001R01.edf first eye 4.0 4.5 Fp1 doubtful -
-S001R01.edf second eye 4.0 4.5 Fp1 sure -
-S001R01.edf first muscle 5.0 7.0 T3|F7 sure -
-S001R01.edf second muscle 6.0 7.0 T3 sure -
-"""
-
-
-def test_readings_are_called_only_where_both_readers_are_sure(tmp_path, monkeypatch):
-    lines = [line.replace(" ", "\t").replace("-", "") for line in READINGS.splitlines()]
-    (tmp_path / "readings.tsv").write_text("\n".join(lines) + "\n", encoding="utf-8")
-    (tmp_path / "S001R01.edf").touch()
-    (tmp_path / "S001R02.edf").touch()  # no page of it was read
-    labels = ["Fp1.", "F7..", "T7..", "O1.."]
-    recording = from_array(noise(4, 1600, 160.0), 160.0, labels)
-    monkeypatch.setattr(read_corpora, "open_recording", lambda path: recording)
-    (found,) = read_corpora.motor_imagery_readings(tmp_path)
-    truth = found.truth.reshape(10, 5, 4)  # seconds, four sites and the reference, kinds
-    told = {
-        (kind, value): {
-            (int(second), int(site))
-            for second, site in zip(*np.nonzero(truth[:, :, kind] == value), strict=True)
-        }
-        for kind in (EYE, MUSCLE)
-        for value in (CLEAN, PRESENT)
-    }
-    scalp = range(4)
-    # Both mark second 1; second 2 one alone; second 4 one doubts; both pages end at 8 s.
-    assert told[EYE, PRESENT] == {(1, 0)}
-    assert told[EYE, CLEAN] == {(s, site) for s in (0, 3, 5, 6, 7) for site in scalp}
-    assert told[MUSCLE, PRESENT] == {(6, 2)}
-    assert told[MUSCLE, CLEAN] == {(s, site) for s in (0, 1, 2, 3, 4, 7) for site in scalp}
-    assert (truth[:, :, [POP, MAINS]] == UNKNOWN).all()
 
 
 # With the recordings -------------------------------------------------------------------
