@@ -1,0 +1,1 @@
+"""How good the scores are: measures, intervals, comparisons, tables and figures."""
