@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.errors import ModelError
-from artifactlens.features import FEATURE_NAMES, feature_table_sha256
+from artifactlens.features.catalogue import FEATURE_NAMES, feature_table_sha256
 from artifactlens.kinds import KIND_NAMES
 
 if TYPE_CHECKING:
@@ -157,7 +157,7 @@ def load_model(path: Path | None = None) -> Model:
         ) from error
     try:
         body = json.loads(raw)
-        return _model_from(body, hashlib.sha256(raw).hexdigest())
+        return model_from(body, hashlib.sha256(raw).hexdigest())
     except ModelError:
         raise
     except (
@@ -182,7 +182,16 @@ def _shipped_path() -> Path:
     return Path(str(resources.files("artifactlens"))).parent / "models" / SHIPPED
 
 
-def _model_from(body: dict[str, Any], sha256: str) -> Model:
+def model_from(body: dict[str, Any], sha256: str) -> Model:
+    """The model that a file's body describes, checked.
+
+    Raises
+    ------
+    ModelError
+        If it is of another version or for another feature table.
+    ValueError, KeyError, TypeError
+        If it is damaged; :func:`load_model` turns these into a :class:`ModelError`.
+    """
     if body["model_version"] != MODEL_VERSION:
         raise ModelError(
             f"This artifactlens reads models of version {MODEL_VERSION}; the file has "

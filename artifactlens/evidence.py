@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.features import BY_NAME, FEATURE_NAMES
+from artifactlens.features.catalogue import BY_NAME, FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import Contribution, Measure, amount, driver_of, finite_or_none
 

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     import mne
 
 __all__ = [
+    "READABLE_SUFFIXES",
     "Filters",
     "Recording",
     "Segment",
@@ -49,6 +50,9 @@ _MNE_FORMATS = {
     ".eeg": "EEG",
     ".data": "DATA",
 }
+READABLE_SUFFIXES = frozenset({*_EDF_SUFFIXES, *_MNE_FORMATS})
+"""Endings of the files that :func:`open_recording` takes, in small letters."""
+
 # Files that accompany another one, which is the one to give.
 _COMPANIONS = {".eeg": ".vhdr", ".vmrk": ".vhdr", ".dat": ".vhdr", ".fdt": ".set"}
 

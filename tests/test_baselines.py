@@ -7,7 +7,7 @@ from signals import SITES, bump, referential, ten_twenty
 from threadpoolctl import threadpool_limits
 
 from artifactlens.epochs import epoch_grid
-from artifactlens.features import FEATURE_NAMES, FEATURES
+from artifactlens.features.catalogue import FEATURE_NAMES, FEATURES
 from artifactlens.recording import Filters, Segment, from_array
 from artifactlens.training.evaluation import baselines
 from artifactlens.training.evaluation.ablation import FAMILIES, ablate, features_of

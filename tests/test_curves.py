@@ -21,12 +21,8 @@ from artifactlens.curves import (
 )
 from artifactlens.errors import ModelError
 from artifactlens.evidence import explain, values_at
-from artifactlens.features import (
-    FEATURE_NAMES,
-    MEASURED,
-    FeatureTable,
-    feature_table_sha256,
-)
+from artifactlens.features import FeatureTable
+from artifactlens.features.catalogue import FEATURE_NAMES, MEASURED, feature_table_sha256
 from artifactlens.kinds import KIND_NAMES
 
 

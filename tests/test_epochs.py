@@ -13,7 +13,7 @@ from artifactlens.epochs import (
     median_of_known,
     windows_of,
 )
-from artifactlens.features import MEASURED
+from artifactlens.features.catalogue import MEASURED
 from artifactlens.frames import build_frame
 from artifactlens.pipeline import measure_recording
 from artifactlens.recording import Segment, from_array

@@ -12,7 +12,7 @@ from sklearn.metrics import average_precision_score, brier_score_loss, roc_auc_s
 
 import artifactlens
 from artifactlens.errors import OptionError
-from artifactlens.features import FEATURE_NAMES
+from artifactlens.features.catalogue import FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.training.evaluation import conditions, figures, tables
 from artifactlens.training.evaluation.ablation import Ablation

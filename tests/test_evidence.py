@@ -7,7 +7,8 @@ from hypothesis import strategies as st
 
 from artifactlens.curves import Curve, Head, Model, Table
 from artifactlens.evidence import amount, explain, quiet_values, sentence, values_at
-from artifactlens.features import BY_NAME, FEATURE_NAMES, MEASURED, FeatureTable
+from artifactlens.features import FeatureTable
+from artifactlens.features.catalogue import BY_NAME, FEATURE_NAMES, MEASURED
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.lookalikes import SIGNS, look_alike
 from artifactlens.result import Contribution, Measure

@@ -7,7 +7,8 @@ import pytest
 from signals import batch_of, noise, referential, row, sine, ten_twenty
 
 from artifactlens.errors import SamplingRateError
-from artifactlens.features import MEASURED, FeatureTable, mains_is_carried, spectral
+from artifactlens.features import FeatureTable, mains_is_carried, spectral
+from artifactlens.features.catalogue import MEASURED
 from artifactlens.pipeline import measure_recording
 from artifactlens.prefilter import Filters
 from artifactlens.recording import Segment

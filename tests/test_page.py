@@ -18,7 +18,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from result_factory import PAIR, make_result
 
-from artifactlens.features import FEATURES
+from artifactlens.features.catalogue import FEATURES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.page.balance import HALF, MOST_BARS, balance_rows, bar_svg, reach
 from artifactlens.page.headmap import CENTRE, RADIUS, head_svg, place, rim_degrees, unplaced

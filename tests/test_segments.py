@@ -7,7 +7,8 @@ from hypothesis import strategies as st
 from signals import SITES, noise, referential, row, step, ten_twenty
 
 from artifactlens.epochs import EpochGrid
-from artifactlens.features import MEASURED, FeatureTable
+from artifactlens.features import FeatureTable
+from artifactlens.features.catalogue import MEASURED
 from artifactlens.pipeline import measure_recording
 from artifactlens.segments import find_segments, refine, union_seconds
 

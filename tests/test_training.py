@@ -19,7 +19,8 @@ from threadpoolctl import threadpool_limits
 from artifactlens.curves import Curve, Head, Model, Table, load_model, logistic
 from artifactlens.epochs import epoch_grid
 from artifactlens.errors import ModelError, RecordingError
-from artifactlens.features import FEATURE_NAMES, MEASURED, FeatureTable
+from artifactlens.features import FeatureTable
+from artifactlens.features.catalogue import FEATURE_NAMES, MEASURED
 from artifactlens.frames import build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import from_array

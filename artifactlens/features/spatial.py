@@ -22,6 +22,12 @@ SLOW_RATE = 50
 SPREAD_SHARE = 0.3
 """A site takes part in a field if it follows with at least this share of its size."""
 
+FOLLOW_SECONDS = 0.4
+"""A site is compared with the frontal deflection so far to either side: a blink's length."""
+
+LEAST_UV = np.float32(0.05)
+"""Deflections of this size and below agree with nothing."""
+
 EYE_POSITION_M = np.array([[-0.032, 0.078, -0.035], [0.032, 0.078, -0.035]])
 """Centres of the eyes, origin at the centre of the head sphere (anatomical, rounded)."""
 
@@ -32,12 +38,16 @@ HEAD_RADIUS_M = 0.095
 class EyeLeads:
     """Which sites see the eyes, from real positions.
 
-    ``front``, ``behind``, ``left`` and ``right`` are boolean masks (n_sites,);
+    ``front``, ``row``, ``behind``, ``left`` and ``right`` are boolean masks (n_sites,):
+    the frontal poles, the sites next behind them, the back of the head, both temples;
+    ``near`` (n_sites,) the front half, where the eyes are seen.
     ``maps`` (2, n_sites) is the field of a vertical and of a lateral turn of the eyes,
     NaN without position. ``front_row`` says in words which frontal sites serve.
     """
 
     front: NDArray[np.bool_]
+    row: NDArray[np.bool_]
+    near: NDArray[np.bool_]
     behind: NDArray[np.bool_]
     left: NDArray[np.bool_]
     right: NDArray[np.bool_]
@@ -57,19 +67,25 @@ def eye_leads(frame: Frame) -> EyeLeads:
         x, y, _ = (frame.positions / distance[:, None]).T
         scalp = np.isfinite(distance) & (np.array(frame.roles) != "reference")
         poles = scalp & (y >= 0.75)
-        row = "frontal poles"
+        words = "frontal poles"
         if not poles.any():
-            poles, row = scalp & (y >= 0.5), "frontal sites"
+            poles, words = scalp & (y >= 0.5), "frontal sites"
         behind = scalp & (y <= -0.3)
         if not behind.any():
             behind = scalp & (y <= 0.1) & (np.abs(x) < 0.9)
+        near = scalp & (y > 0.1)
+        if near.sum() < 4:
+            near = scalp
+        middle = scalp & ~poles & (y >= 0.3) & (np.abs(x) < 0.6)
+        if not middle.any():
+            middle = behind
         left, right = scalp & (x <= -0.6) & (y >= 0.3), scalp & (x >= 0.6) & (y >= 0.3)
     where = frame.positions / distance[:, None] * HEAD_RADIUS_M
     away = where[None] - EYE_POSITION_M[:, None]
     cube = np.linalg.norm(away, axis=2) ** 3
     moments = np.array([[0.0, 0.5, 0.87], [1.0, 0.0, 0.0]])
     maps = np.einsum("mk,esk->ms", moments, away / cube[:, :, None])
-    return EyeLeads(poles, behind, left, right, maps / 1000, row)
+    return EyeLeads(poles, middle, near, behind, left, right, maps / 1000, words)
 
 
 def slow_traces(batch: EpochBatch) -> Array:
@@ -145,9 +161,16 @@ class FrontalPolarity:
     the epoch, of the frontal poles from the sites behind, and of the right from the left
     temple, from their median over three seconds. ``at`` (n_epochs,) its place within the
     epoch, 0..1. ``rhythm`` (n_epochs,) the highest autocorrelation between 0.3 and 0.6 s.
-    ``reach`` (n_sites, n_epochs) microvolt: how far the site moves at that moment against
-    the sites behind. ``match`` (n_epochs,) 0..1: share of the field at that moment that the
-    two eye maps explain.
+    ``reach`` (n_sites, n_epochs) microvolt: how far the site moves with that deflection,
+    against the sites behind. ``match`` (n_epochs,) 0..1: share of this field that the two
+    eye maps explain; ``span`` (n_epochs,) the same over the whole second. ``part``
+    (n_sites, n_epochs) microvolt: what they predict at the site, and
+    ``agree`` (n_sites, n_epochs) -1..1 how that agrees with what is there: 1 if it is the
+    same, 0 if one of both is far larger, negative if they are opposite. ``swing`` (n_sites,
+    n_epochs) microvolt: how far what the eye maps predict there, fitted in the front half of
+    the head, moves within the second; ``front_swing`` and ``side_swing`` (n_epochs,)
+    microvolt: how far the poles move against the row behind them, and the temples against
+    each other.
     """
 
     vertical: Array
@@ -156,7 +179,12 @@ class FrontalPolarity:
     rhythm: Array
     reach: Array
     match: Array
+    span: Array
     part: Array
+    agree: Array
+    swing: Array
+    front_swing: Array
+    side_swing: Array
 
 
 def frontal_polarity(
@@ -185,19 +213,37 @@ def frontal_polarity(
 
     against = slow - np.where(np.isfinite(behind), behind, 0)
     three = _three_seconds(against)
-    usual = np.median(three, axis=2)
-    epochs = np.arange(slow.shape[1] - 2)
-    departure = against[:, epochs + 1, at] - usual
+    away = three - np.median(three, axis=2, keepdims=True)
+    traces = _three_seconds(np.stack([vertical, lateral]))
+    traces -= median_of_known(traces.transpose(2, 0, 1))[:, :, None]
+    lead = np.where(sideways[:, None], traces[1], traces[0])
+    departure = _following(away, lead, at)
     departure = np.where(ok[:, 1:-1], departure, np.float32(np.nan))
-    match, part = _map_fit(departure, leads)
+    everywhere = np.ones(len(slow), dtype=bool)
+    explained, power, predicted = _map_fit(departure[:, :, None], leads, everywhere)
+    predicted = predicted[:, :, 0]
+    larger = np.maximum(np.abs(departure), np.abs(predicted)) ** 2 + LEAST_UV**2
+    n = slow.shape[2]
+    second = np.where(ok[:, 1:-1, None], away[:, :, n : 2 * n], np.float32(np.nan))
+    over, total, _ = _map_fit(second, leads, everywhere)
+    _, _, trace = _map_fit(second, leads, leads.near)
+    local = _group_mean(slow, ok, leads.front) - _group_mean(slow, ok, leads.row)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        match = np.clip(explained[:, 0] / power[:, 0], 0, 1)
+        span = np.clip(over.sum(axis=1) / total.sum(axis=1), 0, 1)
     return FrontalPolarity(
         vertical=v_size,
         lateral=h_size,
         at=(at / np.float32(slow.shape[2])).astype(np.float32),
         rhythm=_rhythm(_three_seconds(vertical[None])[0]),
         reach=np.abs(departure),
-        match=match,
-        part=part,
+        match=match.astype(np.float32),
+        span=span.astype(np.float32),
+        part=np.abs(predicted),
+        agree=departure * predicted / larger,
+        swing=np.ptp(trace, axis=2),
+        front_swing=np.ptp(local[1:-1], axis=1),
+        side_swing=np.ptp(lateral[1:-1], axis=1),
     )
 
 
@@ -211,6 +257,24 @@ def _group_mean(slow: Array, ok: NDArray[np.bool_], group: NDArray[np.bool_]) ->
 def _three_seconds(signal: Array) -> Array:
     """(rows, n_epochs + 2, m) to (rows, n_epochs, 3 m): each epoch with its neighbours."""
     return np.concatenate([signal[:, :-2], signal[:, 1:-1], signal[:, 2:]], axis=2)
+
+
+def _following(away: Array, lead: Array, at: NDArray[np.intp]) -> Array:
+    """How far each site moves with the frontal deflection, (n_sites, n_epochs), microvolt.
+
+    Regression of the site on the deflection within 0.4 s of its largest moment, times the
+    deflection at that moment: what does not follow it, rhythms and muscle, averages out.
+    """
+    n = lead.shape[1] // 3
+    reach = np.arange(-round(FOLLOW_SECONDS * n), round(FOLLOW_SECONDS * n) + 1)
+    near = (at + n)[:, None] + reach
+    course = np.nan_to_num(np.take_along_axis(lead, near, axis=1))
+    sites = np.take_along_axis(away, near[None], axis=2)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        share = np.einsum("et,set->se", course, sites) / np.einsum(
+            "et,et->e", course, course
+        )
+    return share * lead[np.arange(len(at)), at + n]
 
 
 def _departure(trace: Array) -> tuple[Array, NDArray[np.intp]]:
@@ -238,41 +302,60 @@ def _rhythm(three: Array) -> Array:
     return np.where(power > 0, best, np.float32(np.nan)).astype(np.float32)
 
 
-def _map_fit(departure: Array, leads: EyeLeads) -> tuple[Array, Array]:
-    """Least squares of the field on two eye maps.
+def _map_fit(
+    departure: Array, leads: EyeLeads, where: NDArray[np.bool_]
+) -> tuple[Array, Array, Array]:
+    """Least squares of the field on two eye maps at every moment.
 
-    Returns the share of the field's variance over the sites that they explain,
-    (n_epochs,), and the potential they predict at each site against the sites behind,
-    (n_sites, n_epochs), microvolt.
+    Parameters
+    ----------
+    departure : array, shape (n_sites, n_epochs, n_slow), microvolt, NaN where lost
+    leads : EyeLeads
+    where : array, shape (n_sites,), bool
+        Sites on which the maps are fitted.
+
+    Returns
+    -------
+    explained, power : arrays, shape (n_epochs, n_slow)
+        What the maps explain of the field's sum of squares over the sites, and all of it;
+        NaN where fewer than four sites with a place are there.
+    predicted : array, shape (n_sites, n_epochs, n_slow), microvolt
+        What they predict at each site against the sites behind.
     """
-    known = np.isfinite(leads.maps).all(axis=0)
-    n_sites, n_epochs = departure.shape
-    part = np.full((n_sites, n_epochs), np.nan, dtype=np.float32)
+    placed = np.isfinite(leads.maps).all(axis=0)
+    known = placed & where
+    _, n_epochs, n_slow = departure.shape
+    predicted = np.full(departure.shape, np.nan, dtype=np.float32)
+    nothing = np.full((n_epochs, n_slow), np.nan, dtype=np.float32)
     if known.sum() < 4:
-        return np.full(n_epochs, np.nan, dtype=np.float32), part
+        return nothing, nothing, predicted
     maps = leads.maps[:, known]
-    field = departure[known].T.astype(np.float64)
-    there = np.isfinite(field)
-    field = np.where(there, field, 0)
-    count = np.maximum(there.sum(axis=1, keepdims=True), 1)
-    field = np.where(there, field - field.sum(axis=1, keepdims=True) / count, 0)
+    there = np.isfinite(departure[known, :, 0]).T
+    count = np.maximum(there.sum(axis=1), 1)[:, None, None]
+    seen = there[:, :, None]
+    field = np.where(seen, departure[known].transpose(1, 0, 2), 0).astype(np.float64)
+    field = np.where(seen, field - field.sum(axis=1, keepdims=True) / count, 0)
     templates = maps[None] * there[:, None]
     templates = np.where(
-        there[:, None],
-        templates - templates.sum(axis=2, keepdims=True) / count[:, :, None],
-        0,
+        there[:, None], templates - templates.sum(axis=2, keepdims=True) / count, 0
     )
     gram = templates @ templates.transpose(0, 2, 1)
     ridge = 1e-9 * np.trace(gram, axis1=1, axis2=2) + 1e-30
     gram += ridge[:, None, None] * np.eye(2)
-    moment = np.einsum("ems,es->em", templates, field)
-    fitted = np.linalg.solve(gram, moment[:, :, None])[:, :, 0]
-    power = np.einsum("es,es->e", field, field)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        share = np.einsum("em,em->e", fitted, moment) / power
-    enough = (there.sum(axis=1) >= 4) & (power > 0)
-    behind = leads.behind[known]
-    far = maps[:, behind].mean(axis=1) if behind.any() else maps.min(axis=1)
-    predicted = np.abs(fitted @ (maps - far[:, None]))
-    part[known] = np.where(enough[:, None], predicted, np.nan).T
-    return np.where(enough, np.clip(share, 0, 1), np.nan).astype(np.float32), part
+    moment = templates @ field
+    fitted = np.linalg.solve(gram, moment)
+    power = np.einsum("est,est->et", field, field)
+    explained = np.einsum("emt,emt->et", fitted, moment)
+    enough = (there.sum(axis=1) >= 4)[:, None] & (power > 0)
+    behind = leads.behind & placed
+    far = leads.maps[:, behind].mean(axis=1) if behind.any() else maps.min(axis=1)
+    against = leads.maps[:, placed] - far[:, None]
+    at_sites = np.einsum("emt,ms->set", fitted, against)
+    predicted[placed] = np.where(enough[None], at_sites, np.nan)
+    # A site that is lost has no prediction either.
+    predicted[~np.isfinite(departure)] = np.nan
+    return (
+        np.where(enough, explained, np.nan).astype(np.float32),
+        np.where(enough, power, np.nan).astype(np.float32),
+        predicted,
+    )

@@ -1,4 +1,4 @@
-"""Electrode pops, a loose lead, and the recorder's filters that shape them.
+"""Electrode pops, a loose lead, a swaying site, and the recorder's filters that shape them.
 
 A pop is a step of the potential between one electrode and the skin. It reaches one row
 only (the reference's row, if that electrode pops, and so every channel that is measured
@@ -121,12 +121,13 @@ def _one_row(
     wave: NDArray[np.float64],
     spans: list[tuple[str, float, float]],
     high_pass_hz: float | None,
+    kind: str = "pop",
 ) -> Simulated:
     field = np.zeros((scene.n_sites, scene.n_samples), dtype=np.float32)
     if high_pass_hz is not None:
         wave = high_pass_first_order(wave, high_pass_hz, scene.sfreq)
     field[row] = wave
-    return scene.simulated("pop", field, spans)
+    return scene.simulated(kind, field, spans)
 
 
 def unstable_run(
@@ -183,3 +184,41 @@ def loose_lead(
     wave = offsets[state] + (state % 2) * wave
     wave = low_pass(wave, 0.45 * scene.sfreq, scene.sfreq)
     return _one_row(scene, row, wave, [("loose lead", onset, duration)], high_pass_hz)
+
+
+def sway(
+    scene: Scene,
+    rng: np.random.Generator,
+    row: int,
+    onset: float,
+    duration: float,
+    size_uv: float,
+    *,
+    high_pass_hz: float | None = None,
+) -> Simulated:
+    """One electrode that wanders slowly, as with sweat or a drying site; not a pop.
+
+    0.1 to 0.5 Hz (common practice), of kind "other".
+
+    Parameters
+    ----------
+    scene : Scene
+        Electrodes and time.
+    rng : numpy Generator
+        Where chance comes from.
+    row : int
+        The electrode.
+    onset, duration : float
+        Seconds.
+    size_uv : float
+        Largest absolute value, microvolt; before the filter, as ``high_pass_hz`` in
+        :func:`pops`.
+    """
+    rates = rng.uniform(0.1, 0.5, size=(4, 1))
+    phases = rng.uniform(0, 2 * np.pi, size=(4, 1))
+    sizes = rng.uniform(0.3, 1.0, size=4) / np.sqrt(rates[:, 0])
+    wave = sizes @ np.sin(2 * np.pi * rates * scene.time + phases)
+    wave *= scene.gate(onset, duration, min(2.0, duration / 3))
+    wave *= size_uv / max(float(np.abs(wave).max()), 1e-12)
+    spans = [("slow sway", onset, duration)]
+    return _one_row(scene, row, wave, spans, high_pass_hz, kind="other")

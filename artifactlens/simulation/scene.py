@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
@@ -20,7 +21,8 @@ if TYPE_CHECKING:
 class Happening:
     """One thing that was put into a recording.
 
-    ``kind`` is one of the four kinds or "brain"; ``what`` says it in a few words;
+    ``kind`` is one of the four kinds, "brain", or "other" for what comes neither from the
+    brain nor is one of the four kinds; ``what`` says it in a few words;
     ``onset`` and ``duration`` are in seconds; ``strength_uv`` (n_sites,) float32 is the
     largest absolute potential at each site while it lasts, in microvolt, before any
     reference or filter.
@@ -89,6 +91,10 @@ class Scene:
         since = self.time - onset
         return ease(np.minimum(since, duration - since) / ramp)
 
+    def stretch(self, onset: float, duration: float) -> Stretch:
+        """The samples from ``onset`` for ``duration`` seconds, as far as they exist."""
+        return Stretch(self, float(onset), float(duration))
+
     def simulated(
         self, kind: str, potentials: ArrayLike, spans: Sequence[tuple[str, float, float]]
     ) -> Simulated:
@@ -102,9 +108,61 @@ class Scene:
             start, stop = max(onset, 0.0), min(onset + duration, self.length)
             first, last = int(start * self.sfreq), int(np.ceil(stop * self.sfreq))
             if first < last:
-                peak = np.abs(field[:, first:last]).max(axis=1)
+                shown = field[:, first:last]
+                peak = np.maximum(shown.max(axis=1), -shown.min(axis=1))
                 truth.append(Happening(kind, what, start, stop - start, peak))
         return Simulated(field, tuple(truth))
+
+
+@dataclass(frozen=True, eq=False)
+class Stretch:
+    """The samples of a scene in which one thing happens: all that need be computed.
+
+    ``onset`` and ``duration`` in seconds. Recordings are long and most events short.
+    """
+
+    scene: Scene
+    onset: float
+    duration: float
+
+    @cached_property
+    def samples(self) -> slice:
+        """Its samples in the scene; empty if it lies outside."""
+        rate, n_samples = self.scene.sfreq, self.scene.n_samples
+        first = min(max(math.ceil(self.onset * rate - 1e-6), 0), n_samples)
+        last = math.floor((self.onset + self.duration) * rate + 1e-6) + 1
+        return slice(first, min(max(last, first), n_samples))
+
+    @property
+    def n_samples(self) -> int:
+        """Number of its samples."""
+        return int(self.samples.stop - self.samples.start)
+
+    @cached_property
+    def time(self) -> NDArray[np.float64]:
+        """Seconds since its onset at each sample, shape (n_samples,)."""
+        return self.scene.time[self.samples] - self.onset
+
+    def gate(self, ramp: float) -> NDArray[np.float64]:
+        """0 at both its ends, 1 between, with smooth ramps of ``ramp`` seconds."""
+        return ease(np.minimum(self.time, self.duration - self.time) / ramp)
+
+    def simulated(
+        self,
+        kind: str,
+        potentials: ArrayLike,
+        spans: str | Sequence[tuple[str, float, float]],
+    ) -> Simulated:
+        """Potentials (n_sites, n_samples) put into a silent scene.
+
+        ``spans`` as in :meth:`Scene.simulated`, or what it is, if it is one thing that
+        lasts for the whole stretch.
+        """
+        field = np.zeros((self.scene.n_sites, self.scene.n_samples), dtype=np.float32)
+        field[:, self.samples] = potentials
+        if isinstance(spans, str):
+            spans = [(spans, self.onset, self.duration)]
+        return self.scene.simulated(kind, field, spans)
 
 
 def ease(x: ArrayLike) -> NDArray[np.float64]:

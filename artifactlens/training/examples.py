@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from artifactlens.features import FEATURE_NAMES
+from artifactlens.features.catalogue import FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
 
 if TYPE_CHECKING:

@@ -37,11 +37,11 @@ def label_cells(
     ======  ==========================  ===================  ==================
     kind    size                        present from         clean below
     ======  ==========================  ===================  ==================
-    eye     peak-to-peak against the    30 uV                10 uV
-            sites behind
-    muscle  rms above 15 Hz in the      1.25 times the       0.35 times
-            strongest fifth of a        background there
-            second
+    eye     peak-to-peak against the    30 uV and the slow   10 uV
+            sites behind                background's usual
+    muscle  rms above 15 Hz in the      2 uV and 1.5 times   0.35 times
+            strongest fifth of a        the background
+            second                      there
     pop     change over 16 ms           20 uV and twice the  4 uV and no tail
                                         background's usual   above 15 uV
     mains   amplitude                   1.5 uV and 3 dB      1 uV or -6 dB
@@ -97,7 +97,11 @@ Sized = tuple[Array, NDArray[np.bool_], NDArray[np.bool_]]
 
 def _eye_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
     size = np.ptp(field, axis=2)
-    return size, size >= 30, size < 10
+    # What is as slow as an eye movement: means over a tenth of a second, alpha averages out.
+    n = base.shape[2] // 10
+    slow = base[:, :, : 10 * n].reshape(*base.shape[:2], 10, n).mean(axis=3)
+    usual = np.median(np.ptp(slow, axis=2), axis=1)[:, None]
+    return size, (size >= 30) & (size >= usual), size < 10
 
 
 def _muscle_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation) -> Sized:
@@ -106,7 +110,7 @@ def _muscle_size(field: Array, base: Array, sfreq: float, lag: int, s: Situation
     parts = fast[:, :, : 5 * n].reshape(*fast.shape[:2], 5, n)
     size = np.sqrt((parts**2).mean(axis=3)).max(axis=2)
     beside = np.sqrt(np.median((usual**2).mean(axis=2), axis=1))[:, None] + 0.3
-    return size, size >= 1.25 * beside, size < 0.35 * beside
+    return size, (size >= 1.5 * beside) & (size >= 2), size < 0.35 * beside
 
 
 def _above_15(x: Array, sfreq: float) -> Array:

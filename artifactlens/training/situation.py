@@ -40,6 +40,8 @@ class Situation:
     """One draw of recording conditions; None where a filter is absent.
 
     ``gain`` multiplies the background: adults at rest are not the only people recorded.
+    ``noise_uv`` is white noise of amplifier and electrodes, rms at the background's sampling
+    rate, microvolt: from a good amplifier's to that of poor electrodes.
     """
 
     sfreq: float
@@ -52,6 +54,7 @@ class Situation:
     n_sites: int
     header: bool
     gain: float = 1.0
+    noise_uv: float = 0.5
 
     def words(self) -> str:
         """For tables by condition."""
@@ -81,7 +84,7 @@ CHAINS = (
 
 def draw_situation(background: Background, rng: np.random.Generator) -> Situation:
     """Recording conditions that the background allows."""
-    extended = background.kept_to_hz is None or rng.random() < 0.65
+    extended = background.kept_to_hz is None or rng.random() < 0.75
     rates = [
         rate for rate in (128.0, 200.0, 250.0, 256.0, 500.0) if rate <= background.sfreq
     ]
@@ -90,7 +93,7 @@ def draw_situation(background: Background, rng: np.random.Generator) -> Situatio
     low_pass: float | None = None
     if extended:
         allowed = [cut for cut in (30.0, 40.0, 50.0, 70.0, 100.0) if cut < 0.4 * sfreq]
-        low_pass = float(rng.choice(allowed)) if rng.random() < 0.45 else None
+        low_pass = float(rng.choice(allowed)) if rng.random() < 0.4 else None
     notch = line if rng.random() < 0.3 else None
     n_channels = len(background.sites)
     montage = str(
@@ -99,7 +102,7 @@ def draw_situation(background: Background, rng: np.random.Generator) -> Situatio
         )
     )
     n_sites = n_channels
-    if montage != "bipolar" and rng.random() < 0.3:
+    if montage not in ("bipolar", "Cz") and rng.random() < 0.3:
         n_sites = int(rng.choice(list(FEWER_SITES)))
     return Situation(
         sfreq=sfreq,
@@ -111,7 +114,8 @@ def draw_situation(background: Background, rng: np.random.Generator) -> Situatio
         montage=montage,
         n_sites=n_sites,
         header=bool(rng.random() < 0.5),
-        gain=float(np.exp(rng.uniform(np.log(0.7), np.log(2.0)))),
+        gain=float(np.exp(rng.uniform(np.log(0.6), np.log(3.0)))),
+        noise_uv=float(np.exp(rng.uniform(np.log(0.3), np.log(4.0)))),
     )
 
 
@@ -140,12 +144,9 @@ class Recorder:
         low = s.low_pass
         if low is not None:
             gain /= np.sqrt(1 + (freqs / low) ** 8)
-        notch = s.notch
-        if not own:
-            if self.own_low is not None:
-                gain /= np.sqrt(1 + (freqs / (0.97 * self.own_low)) ** 40)
-            notch = notch or self.own_notch
-        if notch is not None:
+        if not own and self.own_low is not None:
+            gain /= np.sqrt(1 + (freqs / (0.97 * self.own_low)) ** 40)
+        for notch in {s.notch, None if own else self.own_notch} - {None}:
             gain *= 1 - np.exp(-0.5 * ((freqs - notch) / 1.2) ** 2)
         field = irfft(rfft(field, padded, axis=1) * gain, padded, axis=1)[:, :n]
         if s.sfreq != self.sfreq:
@@ -174,7 +175,10 @@ def in_montage(
         return channels - channels.mean(axis=0), [f"{name}-AVG" for name in names], None
     if situation.montage == "system":
         # A reference somewhere on the midline that has no channel of its own.
-        middle = [row for row, name in enumerate(names) if name.endswith("z")] or [0]
+        # With few sites it is halfway between the central ones.
+        middle = [row for row, name in enumerate(names) if name.endswith("z")] or [
+            names.index(name) for name in ("C3", "C4")
+        ]
         weights = rng.dirichlet(np.ones(len(middle)))
         return (
             channels - weights @ channels[middle],

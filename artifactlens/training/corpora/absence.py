@@ -7,11 +7,10 @@ occurred somewhere in the seconds before it, not that it fills them.
 
 from __future__ import annotations
 
-import csv
+from collections.abc import Sequence
 from functools import partial
 from pathlib import Path
 
-from artifactlens.errors import LabelsError
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import open_recording
 from artifactlens.training.corpora.labelled import (
@@ -20,46 +19,37 @@ from artifactlens.training.corpora.labelled import (
     Label,
     LabelledRecording,
     need_folder,
-    read_text,
+    rows_in,
     seconds_in,
 )
+from artifactlens.training.corpora.spans import Span
 
 CORPUS = "clinical_absence"
 
-LATE_SECONDS = 10.0
-"""How long before its note a pattern is looked for (our own choice)."""
-
-SEIZURE_LATE_SECONDS = 2.0
-"""The three bursts of more than 500 microvolt at Fz start up to 1 s before "SZ START"; they
-end before "SZ END" (measured on the recording)."""
+Note = tuple[float, str]
+"""Seconds from the start, text."""
 
 CALIBRATION_SECONDS = 60.0
+"""The start of the recording is calibration and impedance check."""
+
+LATE_SECONDS, AFTER_SECONDS = 10.0, 1.0
+"""A note is typed after what it tells of: it stands for the 10 s before it and 1 s more."""
 
 PHOTIC_SECONDS = 10.0
 """From one flash rate to the next in the notes, and so of the last."""
 
-SPIKES = "spikes or sharp waves"
-MOMENTS = {
-    "vertex-waves": "vertex waves",
-    "spindles": "sleep spindles",
-    "sleep spindles": "sleep spindles",
-    "sharps": SPIKES,
-    "spike": SPIKES,
-    "spikes": SPIKES,
-    "R spike": SPIKES,
-    "O1>O2 spike": SPIKES,
-    "EFD": SPIKES,
-    "L EFD": SPIKES,
-    "L>R EFD": SPIKES,
-}
-"""Notes of a moment and their pattern. EFD stands for epileptiform discharge (from memory).
-Notes of a lone site, a question mark or a letter are not read into anything."""
-
-STRETCHES = (
-    ("SZ START", "SZ END", "spike-wave seizure", SEIZURE_LATE_SECONDS),
-    ("HV START", "HV END", "hyperventilation slowing", 0.0),
-)
-"""Notes of a start and an end; the slowing builds up from the start on and was noted once."""
+SEIZURES = "spike-wave seizures"
+SEIZURE = ("SZ START", "SZ END")
+SLOWING = ("HV slowing", "HV END")
+NOTED: dict[str, tuple[str, ...]] = {
+    "sleep spindles": ("spindles", "sleep spindles"),
+    "vertex waves": ("vertex-waves",),
+    "spikes": (
+        "R spike", "sharps", "spikes", "O1>O2 spike", "spike", "EFD", "L>R EFD", "L EFD",
+    ),
+}  # fmt: skip
+"""Texts of the notes that name a pattern; "EFD" is read as epileptiform discharge (from
+memory). Texts that leave open what was meant ("?", "p", "L") stand for nothing."""
 
 
 def read(folder: Path) -> list[LabelledRecording]:
@@ -83,7 +73,7 @@ def read(folder: Path) -> list[LabelledRecording]:
     ]
 
 
-def notes(path: Path) -> list[tuple[float, str]]:
+def notes(path: Path) -> list[Note]:
     """Onset in seconds and text of each note, blanks made single.
 
     Raises
@@ -91,59 +81,76 @@ def notes(path: Path) -> list[tuple[float, str]]:
     LabelsError
         If the file is missing or a row is malformed.
     """
+    return [
+        (seconds_in(onset, "onset_s", where), " ".join(text.split()))
+        for where, (onset, text) in rows_in(path, ("onset_s", "text"))
+    ]
+
+
+def documented_windows(noted: Sequence[Note]) -> dict[str, list[Span]]:
+    """Windows in which the notes document a pattern, in seconds.
+
+    - seizures: from SZ START to the next SZ END, as noted (on the traces the notes stand at
+      the discharge itself);
+    - spindles, vertex waves, spikes and discharges: 10 s before the note to 1 s after;
+    - slowing by hyperventilation: from 10 s before "HV slowing" to the next HV END.
+
+    A second may lie in windows of more than one pattern. Windows begin after the first 60 s,
+    which are calibration.
+    """
+    windows = {
+        SEIZURES: _between(noted, *SEIZURE, before=0.0),
+        "hyperventilation slowing": _between(noted, *SLOWING, before=LATE_SECONDS),
+        **{
+            pattern: [
+                (onset - LATE_SECONDS, onset + AFTER_SECONDS)
+                for onset, text in noted
+                if text in texts
+            ]
+            for pattern, texts in NOTED.items()
+        },
+    }
+    return {
+        pattern: [
+            (max(begin, CALIBRATION_SECONDS), end)
+            for begin, end in found
+            if end > CALIBRATION_SECONDS
+        ]
+        for pattern, found in windows.items()
+    }
+
+
+def _between(
+    noted: Sequence[Note], opening: str, closing: str, *, before: float
+) -> list[Span]:
+    ends = [onset for onset, text in noted if text == closing]
     found = []
-    for number, cells in enumerate(
-        csv.reader(read_text(path).splitlines(), delimiter="\t"), start=1
-    ):
-        if number == 1 and cells == ["onset_s", "text"]:
-            continue
-        where = f"{path.name}, line {number}"
-        if number == 1 or len(cells) != 2:
-            raise LabelsError(
-                f"{where}: a header onset_s, text and two cells a line are needed; given were "
-                f"{len(cells)} cells.",
-                "Take the file as it comes with the corpus.",
-            )
-        found.append((seconds_in(cells[0], "onset_s", where), " ".join(cells[1].split())))
+    for begin, text in noted:
+        later = [end for end in ends if end >= begin]
+        if text == opening and later:
+            found.append((begin - before, min(later)))
     return found
 
 
-def labels_of(noted: list[tuple[float, str]]) -> tuple[Label, ...]:
-    """Patterns of kind "brain" in intervals around their notes; the first minute is unknown.
+def labels_of(noted: Sequence[Note]) -> tuple[Label, ...]:
+    """Documented patterns of kind "brain"; the first minute is unknown.
 
     Photic stimulation is of state "unknown": it may drive a response, none was noted.
-
-    Raises
-    ------
-    LabelsError
-        If a start has no end.
     """
-    found = [
-        Label(kind, 0.0, CALIBRATION_SECONDS, (), UNKNOWN, "calibration")
-        for kind in (*KIND_NAMES, "brain")
-    ]
-    noted = [note for note in noted if note[0] >= CALIBRATION_SECONDS]
-    for at, text in noted:
-        if text in MOMENTS:
-            start = max(at - LATE_SECONDS, CALIBRATION_SECONDS)
-            found.append(Label("brain", start, at, (), PRESENT, MOMENTS[text]))
-        if text.startswith("PHOTO"):
-            end = at + PHOTIC_SECONDS
-            found.append(Label("brain", at, end, (), UNKNOWN, "photic stimulation"))
-    for first, last, pattern, late in STRETCHES:
-        starts, ends = (
-            [at for at, text in noted if text == word] for word in (first, last)
-        )
-        if len(starts) != len(ends) or any(
-            end < start for start, end in zip(starts, ends, strict=True)
-        ):
-            raise LabelsError(
-                f"Each note {first!r} needs one {last!r} after it; there are {len(starts)} and "
-                f"{len(ends)}.",
-                "Take the notes as they come with the corpus.",
-            )
-        found += [
-            Label("brain", start - late, end, (), PRESENT, pattern)
-            for start, end in zip(starts, ends, strict=True)
-        ]
-    return tuple(found)
+    return (
+        *(
+            Label(kind, 0.0, CALIBRATION_SECONDS, (), UNKNOWN, "calibration")
+            for kind in (*KIND_NAMES, "brain")
+        ),
+        *(
+            Label("brain", at, at + PHOTIC_SECONDS, (), UNKNOWN, "photic stimulation")
+            for at, text in noted
+            if text.startswith("PHOTO")
+        ),
+        # The seizures last: a second of one is named by it, whatever else surrounds it.
+        *(
+            Label("brain", begin, end, (), PRESENT, pattern)
+            for pattern, spans in reversed(documented_windows(noted).items())
+            for begin, end in spans
+        ),
+    )

@@ -8,9 +8,7 @@ from pathlib import Path
 
 from artifactlens.errors import LabelsError
 from artifactlens.kinds import KIND_NAMES
-
-# What can be opened is told nowhere else.
-from artifactlens.recording import _EDF_SUFFIXES, _MNE_FORMATS, open_recording
+from artifactlens.recording import READABLE_SUFFIXES, open_recording
 from artifactlens.sites import parse_label
 from artifactlens.training.corpora.labelled import (
     CLEAN,
@@ -21,11 +19,12 @@ from artifactlens.training.corpora.labelled import (
     need_labelled,
     read_text,
     seconds_in,
+    split,
 )
 
 CORPUS = "bids"
 
-SUFFIXES = frozenset({".edf", ".bdf", ".vhdr", ".set"}) & {*_EDF_SUFFIXES, *_MNE_FORMATS}
+SUFFIXES = frozenset({".edf", ".bdf", ".vhdr", ".set"}) & READABLE_SUFFIXES
 """Formats that BIDS allows for EEG and that can be opened."""
 
 COLUMNS = ("onset", "duration", "trial_type")
@@ -125,16 +124,15 @@ def read(folder: Path) -> list[LabelledRecording]:
         If a line is malformed, or there is nothing to read.
     """
     root = need_folder(folder, CORPUS).resolve()
-    found = [
-        _read_one(path, root.name) for path in _recordings(root) if _events(path).is_file()
-    ]
+    labelled, bare = split(_recordings(root), _events)
     needed = "recordings sub-*/[ses-*/]eeg/*_eeg.* with an *_events.tsv beside each"
-    return need_labelled(found, CORPUS, needed, unlabelled(root))
+    found = [_read_one(path, root.name) for path in labelled]
+    return need_labelled(found, CORPUS, needed, bare)
 
 
 def unlabelled(folder: Path) -> list[str]:
     """Names of the recordings that are skipped because no events lie beside them."""
-    return [path.name for path in _recordings(folder) if not _events(path).is_file()]
+    return split(_recordings(folder), _events)[1]
 
 
 def _recordings(folder: Path) -> list[Path]:

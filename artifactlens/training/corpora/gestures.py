@@ -213,15 +213,9 @@ def labels_of(session: Session) -> tuple[Label, ...]:
     return tuple(found)
 
 
-def gesture_chunks(folder: Path) -> Chunks:
-    """Which chunk each epoch of the recording is.
-
-    Raises
-    ------
-    LabelsError, RecordingError
-        If the corpus is not there.
-    """
-    chunks = load(need_folder(folder, CORPUS)).chunks
+def gesture_chunks(session: Session) -> Chunks:
+    """Which chunk each epoch of the recording is."""
+    chunks = session.chunks
     blocks, total = {}, 0
     for name in GESTURES:
         blocks[name] = _blocks(chunks[name]) + total

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import csv
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import NamedTuple
@@ -107,6 +108,34 @@ def need_labelled(
     )
 
 
+def split(
+    paths: Sequence[Path], table_of: Callable[[Path], Path]
+) -> tuple[list[Path], list[str]]:
+    """Recordings with their table of labels beside them, and the names of those without."""
+    labelled = [path for path in paths if table_of(path).is_file()]
+    return labelled, [path.name for path in paths if not table_of(path).is_file()]
+
+
+def edf_with(suffix: str, folder: Path) -> tuple[list[Path], list[str]]:
+    """As :func:`split`: EDF files at any depth, their tables of the same name beside them."""
+    return split(sorted(folder.rglob("*.edf")), lambda path: path.with_suffix(suffix))
+
+
+def read_edf_with(
+    suffix: str, folder: Path, corpus: str, read_one: Callable[[Path], LabelledRecording]
+) -> list[LabelledRecording]:
+    """Read every EDF file that has a table of this suffix beside it.
+
+    Raises
+    ------
+    RecordingError, LabelsError
+        If the folder is not there or holds nothing to read, and what ``read_one`` raises.
+    """
+    labelled, bare = edf_with(suffix, need_folder(folder, corpus))
+    needed = f"EDF files with a {suffix} file of the same name beside them"
+    return need_labelled([read_one(path) for path in labelled], corpus, needed, bare)
+
+
 def read_text(path: Path) -> str:
     """A file of labels as text.
 
@@ -126,6 +155,33 @@ def read_text(path: Path) -> str:
         raise LabelsError(
             f"{path.name} needs to be UTF-8 text; it is not.", "Save it as UTF-8."
         ) from None
+
+
+def rows_in(path: Path, columns: Sequence[str]) -> Iterator[tuple[str, list[str]]]:
+    """Rows of a table whose first line names its columns, cells separated by tabs.
+
+    Yields
+    ------
+    where : str
+        File and line, for messages.
+    cells : list of str, one per column
+
+    Raises
+    ------
+    LabelsError
+        If the file is missing, or a line has other columns.
+    """
+    lines = csv.reader(read_text(path).splitlines() or [""], delimiter="\t")
+    for number, cells in enumerate(lines, start=1):
+        where = f"{path.name}, line {number}"
+        if len(cells) != len(columns) or (number == 1 and cells != list(columns)):
+            raise LabelsError(
+                f"{where}: {len(columns)} cells are needed, the first line with the columns "
+                f"{', '.join(columns)}; given were {len(cells)} cells.",
+                "Take the file as it comes with the corpus.",
+            )
+        if number > 1:
+            yield where, cells
 
 
 def seconds_in(cell: str, what: str, where: str) -> float:

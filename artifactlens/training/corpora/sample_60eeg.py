@@ -16,6 +16,7 @@ from artifactlens.training.corpora.labelled import (
     LabelledRecording,
     need_folder,
 )
+from artifactlens.training.corpora.spans import runs
 
 CORPUS = "sample_60eeg"
 FILE = "sample_eeg_raw.fif"
@@ -78,9 +79,8 @@ def deflections(trace: NDArray[np.float64], sfreq: float) -> list[tuple[float, f
 
     kept = sosfiltfilt(butter(2, BELOW_HZ, "low", fs=sfreq, output="sos"), trace)
     away = np.abs(kept - np.median(kept))
-    edges = np.flatnonzero(np.diff(np.r_[False, away > EDGE_UV, False]))
     return [
-        (float(start / sfreq), float(stop / sfreq))
-        for start, stop in zip(edges[::2], edges[1::2], strict=True)
+        (start / sfreq, stop / sfreq)
+        for start, stop in runs(away > EDGE_UV)
         if away[start:stop].max() > BLINK_UV
     ]

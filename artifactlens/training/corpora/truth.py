@@ -24,6 +24,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.assessable import assess
 from artifactlens.errors import LabelsError
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import Measured, measure_recording
@@ -291,6 +292,7 @@ def seconds_of(
 def examples_of(labelled: LabelledRecording) -> Examples:
     """Open and measure a recording; its cells with their truth.
 
+    Kinds that the recording does not let one judge are neither learnt nor checked: unknown.
     ``look_alike`` names the cerebral pattern labelled in the second, by the corpus's own word.
 
     Raises
@@ -300,6 +302,7 @@ def examples_of(labelled: LabelledRecording) -> Examples:
     """
     measured = measure_recording(labelled.open(), line_frequency=labelled.line_frequency)
     truth = truth_of(labelled.labels, measured, labelled.montage)
+    truth[~judged_kinds(measured)] = UNKNOWN
     return from_table(
         measured.table,
         truth,
@@ -308,6 +311,14 @@ def examples_of(labelled: LabelledRecording) -> Examples:
         origin=f"real: {labelled.corpus}",
         look_alike=_patterns(labelled.labels, measured.grid.onset),
     )
+
+
+def judged_kinds(measured: Measured) -> Bools:
+    """Which kinds the recording lets one judge at all, shape (n_kinds,)."""
+    frame, leads, conditions = measured.frame, measured.leads, measured.conditions
+    # Implausible units would limit a verdict, never deny it: they need not be known here.
+    found = assess(frame, leads, conditions, float(len(measured.grid)), False)
+    return np.array([entry.verdict != "no" for entry in found])
 
 
 def _patterns(labels: Sequence[Label], onset: Seconds) -> NDArray[np.str_]:

@@ -20,8 +20,8 @@ from artifactlens.training.corpora.labelled import (
     Label,
     LabelledRecording,
     check_order,
-    need_folder,
-    need_labelled,
+    edf_with,
+    read_edf_with,
     read_text,
     seconds_in,
 )
@@ -139,20 +139,12 @@ def read(folder: Path) -> list[LabelledRecording]:
     LabelsError
         If a CSV is malformed, a file name tells no person, or there is nothing to read.
     """
-    paths = sorted(need_folder(folder, CORPUS).rglob("*.edf"))
-    found = [_read_one(path) for path in paths if path.with_suffix(".csv").is_file()]
-    return need_labelled(
-        found,
-        CORPUS,
-        "EDF files with a CSV of the same name beside them",
-        unlabelled(folder),
-    )
+    return read_edf_with(".csv", folder, CORPUS, _read_one)
 
 
 def unlabelled(folder: Path) -> list[str]:
     """Names of the EDF files that are skipped because no CSV lies beside them."""
-    paths = sorted(folder.rglob("*.edf"))
-    return [path.name for path in paths if not path.with_suffix(".csv").is_file()]
+    return edf_with(".csv", folder)[1]
 
 
 def _read_one(path: Path) -> LabelledRecording:

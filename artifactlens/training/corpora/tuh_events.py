@@ -19,8 +19,8 @@ from artifactlens.training.corpora.labelled import (
     Label,
     LabelledRecording,
     check_order,
-    need_folder,
-    need_labelled,
+    edf_with,
+    read_edf_with,
     read_text,
     seconds_in,
 )
@@ -114,20 +114,12 @@ def read(folder: Path) -> list[LabelledRecording]:
     LabelsError
         If a ``.rec`` is malformed, or there is nothing to read.
     """
-    paths = sorted(need_folder(folder, CORPUS).rglob("*.edf"))
-    found = [_read_one(path) for path in paths if path.with_suffix(".rec").is_file()]
-    return need_labelled(
-        found,
-        CORPUS,
-        "EDF files with a .rec of the same name beside them",
-        unlabelled(folder),
-    )
+    return read_edf_with(".rec", folder, CORPUS, _read_one)
 
 
 def unlabelled(folder: Path) -> list[str]:
     """Names of the EDF files that are skipped because no ``.rec`` lies beside them."""
-    paths = sorted(folder.rglob("*.edf"))
-    return [path.name for path in paths if not path.with_suffix(".rec").is_file()]
+    return edf_with(".rec", folder)[1]
 
 
 def _read_one(path: Path) -> LabelledRecording:

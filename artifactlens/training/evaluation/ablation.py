@@ -6,7 +6,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from artifactlens.features import FEATURES
+from artifactlens.features.catalogue import FEATURES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.training.evaluation.metrics import rank_scores
 from artifactlens.training.examples import Examples

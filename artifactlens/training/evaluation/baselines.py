@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import FLAT_UV, EpochGrid, epoch_grid
-from artifactlens.features import FEATURE_NAMES
+from artifactlens.features.catalogue import FEATURE_NAMES
 from artifactlens.frames import build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.sites import parse_label

@@ -9,8 +9,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from artifactlens.errors import OptionError
-from artifactlens.features import FEATURE_NAMES
 from artifactlens.features.amplitude import SMALL_UV
+from artifactlens.features.catalogue import FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.training.examples import CLEAN, PRESENT, UNKNOWN, Examples
 

@@ -6,9 +6,8 @@ shows. So a chunk in which the gesture did not reach the sites counts against th
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +15,8 @@ from numpy.typing import NDArray
 from artifactlens.curves import Model
 from artifactlens.flagging import MARKS
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.pipeline import Measured, measure_recording
-from artifactlens.recording import Segment, from_array
+from artifactlens.pipeline import Measured
+from artifactlens.training.corpora.gestures import GESTURES, NEUTRAL, Chunks
 from artifactlens.training.realchecks.agreement import (
     NO,
     NOT_CALLED,
@@ -29,35 +28,12 @@ from artifactlens.training.realchecks.agreement import (
 )
 from artifactlens.training.realchecks.judged import judge_recording
 
-INSTRUCTED: dict[str, tuple[str, ...]] = {
-    "eye": ("hardblink", "lookleft", "lookright"),
-    "muscle": ("smile", "bitelowerlip", "eyebrows", "scrunch"),
+INSTRUCTED = {
+    kind: tuple(name for name, kinds in GESTURES.items() if kind in kinds)
+    for kind in ("eye", "muscle")
 }
-REST = "neutral"
-NEITHER = "tongue"
-REST_COPIES = 5
-"""Neutral chunks are laid in so often that a usual second of the recording is one of rest."""
-
-BLOCK = 10
-APART_SECONDS = 10.0
-"""Chunks lie this far apart, so that none is beside another."""
 
 CAUTION = "One person, one session: nothing is said of people in general."
-
-
-@dataclass(frozen=True, slots=True)
-class Chunks:
-    """Chunks of all gestures in one measured recording, one second each.
-
-    ``gesture`` (n,) names the instruction; ``counted`` (n,) is False for repeated copies of
-    rest, which only set what is usual; ``block`` (n,) numbers runs of 10 neighbouring chunks
-    of a gesture (neighbours overlap in time: folds need to keep a block together).
-    """
-
-    measured: Measured
-    gesture: NDArray[np.str_]
-    counted: NDArray[np.bool_]
-    block: NDArray[np.int64]
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,85 +72,50 @@ def instructed_truth(kind: str, gesture: NDArray[np.str_]) -> NDArray[np.int8]:
     """YES for gestures that hold the kind, NO for rest, else NOT_CALLED; shape (n,)."""
     truth = np.full(len(gesture), NOT_CALLED, dtype=np.int8)
     truth[np.isin(gesture, INSTRUCTED[kind])] = YES
-    truth[gesture == REST] = NO
+    truth[gesture == NEUTRAL] = NO
     return truth
 
 
-def block_numbers(gesture: NDArray[np.str_], size: int = BLOCK) -> NDArray[np.int64]:
-    """Number runs of ``size`` neighbouring chunks of one gesture, shape (n,).
-
-    Chunks of a gesture stand together and in order; the last block may be shorter.
-    """
-    starts = np.flatnonzero(np.append(True, gesture[1:] != gesture[:-1]))
-    lengths = np.diff(np.append(starts, len(gesture)))
-    within = np.arange(len(gesture)) - np.repeat(starts, lengths)
-    is_new = within % size == 0
-    return np.cumsum(is_new) - 1
-
-
-def load_chunks(path: Path) -> tuple[dict[str, NDArray[np.float64]], list[str], float]:
-    """Chunks of ``session1.npz`` by gesture (n, samples, sites), site names and rate."""
-    with np.load(path) as stored:
-        names = [str(name) for name in stored["ch_names"]]
-        every = (*INSTRUCTED["eye"], *INSTRUCTED["muscle"], REST, NEITHER)
-        chunks = {gesture: stored[gesture].astype(np.float64) for gesture in every}
-        return chunks, names, float(stored["sfreq"])
-
-
-def lay_out(
-    chunks: Mapping[str, NDArray[np.float64]], names: list[str], rate: float
-) -> Chunks:
-    """Measure all chunks as stretches of one recording, rest laid in five times.
+def gestures_check(model: Model, measured: Measured, chunks: Chunks) -> GesturesCheck:
+    """Score a model against the instructions; a chunk scores as its highest site.
 
     Parameters
     ----------
-    chunks : mapping to arrays, shape (n, n_samples, n_sites), microvolt
-        At least one second long and shorter than two; ``neutral`` among them.
-    names : list of str, length n_sites
-    rate : float, hertz
+    model : Model
+    measured : Measured
+        Of the recording of all chunks (``gestures.as_recording``).
+    chunks : Chunks
+        Of the same session; copies of rest only set what is usual and are not counted.
     """
-    order = [*chunks, *[REST] * (REST_COPIES - 1)]
-    sizes = [len(chunks[gesture]) for gesture in order]
-    data = np.concatenate([chunks[gesture] for gesture in order])
-    data = data - data.mean(axis=1, keepdims=True)
-    n_chunks, n_samples, n_sites = data.shape
-    recording = from_array(
-        data.transpose(2, 0, 1).reshape(n_sites, -1).astype(np.float32),
-        rate,
-        [f"EEG {name}-REF" for name in names],
-        segments=[
-            Segment(k * n_samples, n_samples, k * APART_SECONDS) for k in range(n_chunks)
-        ],
-        name="gestures",
-    )
-    gesture = np.repeat(np.array(order), sizes)
-    n_counted = sum(sizes[: len(chunks)])
-    blocks = block_numbers(gesture[:n_counted])
-    copies = np.tile(blocks[gesture[:n_counted] == REST], REST_COPIES - 1)
-    return Chunks(
-        measure_recording(recording),
-        gesture,
-        np.arange(n_chunks) < n_counted,
-        np.concatenate([blocks, copies]),
-    )
+    return grouped_check(lambda _: model, measured, chunks, folds=1)
 
 
-def gestures_check(model: Model, chunks: Chunks) -> GesturesCheck:
-    """Score a model against the instructions; a chunk scores as its highest site."""
-    seen = judge_recording(chunks.measured, model)
-    kept = chunks.counted
-    gesture = chunks.gesture[kept]
+def grouped_check(
+    model_of: Callable[[int], Model], measured: Measured, chunks: Chunks, folds: int
+) -> GesturesCheck:
+    """As :func:`gestures_check`, every chunk scored by a model of its own fold.
+
+    ``model_of(fold)`` gives a model that saw no chunk whose block, modulo ``folds``, is the
+    fold: neighbouring chunks overlap in time, blocks do not.
+    """
+    kept = ~chunks.is_copy
+    gesture = chunks.name[kept]
+    score = {kind: np.full(len(gesture), np.nan) for kind in INSTRUCTED}
     flagged = {
-        kind: {mark: seen.flagged(mark, kind)[kept] for mark in MARKS}
+        kind: {mark: np.zeros(len(gesture), dtype=bool) for mark in MARKS}
         for kind in KIND_NAMES
     }
+    for fold in range(folds):
+        seen = judge_recording(measured, model_of(fold))
+        theirs = chunks.block[kept] % folds == fold
+        for kind in INSTRUCTED:
+            score[kind][theirs] = seen.second_score(kind)[kept][theirs]
+        for kind, by_mark in flagged.items():
+            for mark, hit in by_mark.items():
+                hit[theirs] = seen.flagged(mark, kind)[kept][theirs]
     return GesturesCheck(
         kinds={
-            kind: separation(
-                instructed_truth(kind, gesture),
-                seen.second_score(kind)[kept],
-                flagged[kind],
-            )
+            kind: separation(instructed_truth(kind, gesture), score[kind], flagged[kind])
             for kind in INSTRUCTED
         },
         counts={name: int((gesture == name).sum()) for name in dict.fromkeys(gesture)},

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,12 +13,7 @@ from artifactlens.flagging import MARKS
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import Measured, conclude
 from artifactlens.result import Flag
-
-Bools = NDArray[np.bool_]
-
-LEAST_OVERLAP = 0.1
-"""Seconds of a flag (or a reading) that make a second count as marked: the ends of flags
-are refined to a tenth, and less than that is the edge of the second beside it."""
+from artifactlens.training.corpora.spans import Bools, touched
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,31 +112,3 @@ def highest(probability: NDArray[np.float64]) -> NDArray[np.float64]:
     known = np.where(np.isnan(probability), -np.inf, probability)
     top = known.max(axis=-1, initial=-np.inf)
     return np.where(np.isinf(top), np.nan, top)
-
-
-def touched(
-    begin: NDArray[np.float64], end: NDArray[np.float64], onset: NDArray[np.float64]
-) -> Bools:
-    """Which seconds an interval touches by a tenth, or by all of itself if it is shorter.
-
-    Parameters
-    ----------
-    begin, end : array, shape (n,), seconds
-    onset : array, shape (n_epochs,), seconds
-
-    Returns
-    -------
-    array, shape (n, n_epochs), bool
-    """
-    shared = np.minimum(end[:, None], onset + 1) - np.maximum(begin[:, None], onset)
-    # Tenths are no binary fractions: a microsecond is left for rounding.
-    least = np.minimum(LEAST_OVERLAP, end - begin)[:, None] - 1e-6
-    return np.asarray((shared >= least) & (shared > 0))
-
-
-def within(windows: Sequence[tuple[float, float]], onset: NDArray[np.float64]) -> Bools:
-    """Which seconds have their middle in one of the windows (begin, end), (n_epochs,)."""
-    bounds = np.array(windows, dtype=np.float64).reshape(-1, 2)
-    middle = onset + 0.5
-    inside = (bounds[:, :1] <= middle) & (middle < bounds[:, 1:])
-    return np.asarray(inside.any(axis=0))

@@ -7,10 +7,8 @@ itself: people blink and clench during a seizure too.
 
 from __future__ import annotations
 
-import csv
 from collections.abc import Sequence
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,30 +17,17 @@ from artifactlens.curves import Model
 from artifactlens.flagging import MARKS
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import Measured
+from artifactlens.training.corpora.absence import (
+    CALIBRATION_SECONDS,
+    SEIZURES,
+    Note,
+    documented_windows,
+)
+from artifactlens.training.corpora.spans import Span, within
 from artifactlens.training.realchecks.agreement import share
-from artifactlens.training.realchecks.judged import Judged, judge_recording, within
-from artifactlens.training.realchecks.witness import CALIBRATION_SECONDS
+from artifactlens.training.realchecks.judged import Judged, judge_recording
 
-Note = tuple[float, str]
-"""Seconds from the start, text."""
-
-Window = tuple[float, float]
-
-LATE_SECONDS, AFTER_SECONDS = 10.0, 1.0
-"""A note is typed after what it tells of: it stands for the 10 s before it and 1 s more."""
-
-SEIZURE = ("SZ START", "SZ END")
-SLOWING = ("HV slowing", "HV END")
 ELSEWHERE = "all other seconds"
-NOTED: dict[str, tuple[str, ...]] = {
-    "sleep spindles": ("spindles", "sleep spindles"),
-    "vertex waves": ("vertex-waves",),
-    "spikes": (
-        "R spike", "sharps", "spikes", "O1>O2 spike", "spike", "EFD", "L>R  EFD", "L  EFD",
-    ),
-}  # fmt: skip
-"""Texts of the notes that name a pattern; "EFD" is read as epileptiform discharge. Texts
-that leave open what was meant ("?", "p", "L") stand for nothing."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,69 +94,15 @@ class LookalikeCheck:
         return "\n".join(lines)
 
 
-def read_notes(path: Path) -> list[Note]:
-    """Notes of ``notes.tsv``: columns ``onset_s`` and ``text``."""
-    with path.open(encoding="utf-8", newline="") as file:
-        return [
-            (float(row["onset_s"]), row["text"].strip())
-            for row in csv.DictReader(file, delimiter="\t")
-        ]
-
-
-def documented_windows(notes: Sequence[Note]) -> dict[str, list[Window]]:
-    """Windows in which the notes document a pattern, in seconds.
-
-    - seizures: from SZ START to the next SZ END, as noted (on the traces the notes stand at
-      the discharge itself);
-    - spindles, vertex waves, spikes and discharges: 10 s before the note to 1 s after;
-    - slowing by hyperventilation: from 10 s before "HV slowing" to the next HV END.
-
-    A second may lie in windows of more than one pattern. Windows begin after the first 60 s,
-    which are calibration.
-    """
-    windows = {
-        "spike-wave seizures": _between(notes, *SEIZURE, before=0.0),
-        "hyperventilation slowing": _between(notes, *SLOWING, before=LATE_SECONDS),
-        **{
-            pattern: [
-                (onset - LATE_SECONDS, onset + AFTER_SECONDS)
-                for onset, text in notes
-                if text in texts
-            ]
-            for pattern, texts in NOTED.items()
-        },
-    }
-    return {
-        pattern: [
-            (max(begin, CALIBRATION_SECONDS), end)
-            for begin, end in found
-            if end > CALIBRATION_SECONDS
-        ]
-        for pattern, found in windows.items()
-    }
-
-
-def _between(
-    notes: Sequence[Note], opening: str, closing: str, *, before: float
-) -> list[Window]:
-    ends = [onset for onset, text in notes if text == closing]
-    found = []
-    for begin, text in notes:
-        later = [end for end in ends if end >= begin]
-        if text == opening and later:
-            found.append((begin - before, min(later)))
-    return found
-
-
 def pattern_masks(
-    windows: dict[str, list[Window]], onset: NDArray[np.float64]
+    windows: dict[str, list[Span]], onset: NDArray[np.float64]
 ) -> dict[str, NDArray[np.bool_]]:
     """Seconds of every pattern, and of none after the calibration, each (n_epochs,).
 
     Seconds of a seizure count as no other pattern: the slowing surrounds the seizures.
     """
     masks = {pattern: within(spans, onset) for pattern, spans in windows.items()}
-    seizure = masks["spike-wave seizures"]
+    seizure = masks[SEIZURES]
     masks = {
         pattern: mask if mask is seizure else mask & ~seizure
         for pattern, mask in masks.items()

@@ -7,7 +7,7 @@ elsewhere carries over to a real adult at full bandwidth; they are no ground tru
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,9 +17,22 @@ from artifactlens.curves import Model
 from artifactlens.flagging import MARKS
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import Measured
+from artifactlens.training.corpora.page_readings import (
+    ANY,
+    BESIDE_POP,
+    PAGE_SITES,
+    PLAIN,
+    POLES,
+    READ_KINDS,
+    Reading,
+    marked,
+    page_numbers,
+)
+from artifactlens.training.corpora.spans import Bools
 from artifactlens.training.realchecks.agreement import (
     NO,
     NOT_CALLED,
+    YES,
     Separation,
     kappa,
     separation,
@@ -27,23 +40,8 @@ from artifactlens.training.realchecks.agreement import (
     share,
 )
 from artifactlens.training.realchecks.judged import Judged, judge_recording
-from artifactlens.training.realchecks.page_readings import (
-    ANY,
-    PAGE_SITES,
-    PLAIN,
-    Row,
-    agreed,
-    marked,
-    marked_cells,
-    on_whole_page,
-    page_numbers,
-)
 
-Bools = NDArray[np.bool_]
-
-READ_KINDS = ("eye", "muscle", "pop")
-POLES = ("Fp1", "Fp2")
-ARTIFACT_ROWS = ("eye", "muscle", "pop", "sway", "other")
+ARTIFACT_ROWS = ("eye", "muscle", *BESIDE_POP)
 HALF = "at .5"
 """A way of marking beside both operating points: a probability of at least one half."""
 
@@ -152,7 +150,9 @@ class _Run:
 
 
 def readings_check(
-    model: Model, runs: Mapping[str, Measured], rows: Sequence[Row]
+    model: Model,
+    runs: Mapping[str, Measured],
+    readings: Mapping[str, Sequence[Reading]],
 ) -> ReadingsCheck:
     """Score a model against the readings; this person needs to be none of its training.
 
@@ -161,12 +161,11 @@ def readings_check(
     model : Model
     runs : mapping
         File name as in the readings ("S001R01.edf") to the measured recording.
-    rows : sequence of Row
+    readings : mapping
+        File name to the rows of both readers (``page_readings.readings``).
     """
     found = [
-        _run(
-            [row for row in rows if row.recording == name], judge_recording(measured, model)
-        )
+        _run(readings.get(name, ()), judge_recording(measured, model))
         for name, measured in runs.items()
     ]
     return ReadingsCheck(
@@ -185,7 +184,58 @@ def readings_check(
     )
 
 
-def _run(rows: list[Row], seen: Judged) -> _Run:
+def marked_cells(
+    rows: Sequence[Reading],
+    onset: NDArray[np.float64],
+    kinds: Collection[str],
+    confidences: Collection[str],
+    sites: Sequence[str],
+) -> Bools:
+    """As :func:`marked`, site by site: shape (2, n_epochs, n_sites)."""
+    columns = [marked(rows, onset, kinds, confidences, site) for site in sites]
+    return np.stack(columns, axis=2)
+
+
+def agreed(plain: Bools, anything: Bools, read: Bools) -> NDArray[np.int8]:
+    """Truth by two readings: YES where both are plain, NO where neither marks anything.
+
+    What one calls and the other does not, and what one calls doubtful only, is NOT_CALLED.
+
+    Parameters
+    ----------
+    plain : array, shape (2, ...), bool
+        Sure or probable to each reader.
+    anything : array, shape (2, ...), bool
+        Marked with any confidence.
+    read : array, shape (...), bool
+        On a page that both read.
+    """
+    truth = np.full(read.shape, NOT_CALLED, dtype=np.int8)
+    truth[read & plain.all(axis=0)] = YES
+    truth[read & ~anything.any(axis=0)] = NO
+    return truth
+
+
+def on_whole_page(named: Bools, page: NDArray[np.int64]) -> Bools:
+    """Spread a mark over the page it stands on.
+
+    Parameters
+    ----------
+    named : array, shape (n_epochs, n_sites), bool
+    page : array, shape (n_epochs,)
+        Page numbers, -1 for none: such seconds stay as they are.
+
+    Returns
+    -------
+    array, shape (n_epochs, n_sites), bool
+    """
+    spread = named.copy()
+    for number in np.unique(page[page >= 0]):
+        spread[page == number] = named[page == number].any(axis=0)
+    return spread
+
+
+def _run(rows: Sequence[Reading], seen: Judged) -> _Run:
     onset = seen.onset
     page = page_numbers(rows, onset)
     read = page >= 0

@@ -23,6 +23,7 @@ from artifactlens.flagging import MARKS
 from artifactlens.pipeline import Measured
 from artifactlens.recording import Recording
 from artifactlens.sites import parse_label, without_prefix
+from artifactlens.training.corpora.absence import CALIBRATION_SECONDS
 from artifactlens.training.realchecks.agreement import (
     NO,
     NOT_CALLED,
@@ -35,8 +36,6 @@ from artifactlens.training.realchecks.agreement import (
 from artifactlens.training.realchecks.judged import Judged, judge_recording
 
 BAND_HZ = (0.5, 10.0)
-CALIBRATION_SECONDS = 60.0
-"""The start of ``clinical_absence`` is calibration and impedance check."""
 
 EYE_UV, NO_EYE_UV = 120.0, 40.0
 """Peak-to-peak limits between the two leads: design of this check, fixed beforehand."""
