@@ -29,6 +29,7 @@ from artifactlens.training.evaluation.tables import main_table
 from artifactlens.training.fit import (
     FOLDS,
     FittedHead,
+    fit_folds,
     fit_head,
     model_body,
 )
