@@ -560,13 +560,17 @@ def test_rows_by_size_by_hand():
     strength[:, EYE] = [29, 30, 49, 50, 500, NAN, 60, 60]
     score = np.array([0.1, 0.9, 0.5, 0.9, 0.9, 0.5, NAN, 0.9])
     found = tables.strength_rows(examples(truth, strength=strength), "eye", score, 0.8, 0.4)
-    assert found == [
+    assert [row[:4] for row in found] == [
         ("under 30", 1, 0.0, 0.0),
         ("30 to 50", 2, 0.5, 1.0),
         ("50 to 100", 1, 1.0, 1.0),
         ("200 and more", 1, 1.0, 1.0),
         ("not known", 1, 0.0, 1.0),
     ]
+    # The one clean cell scores 0.9: the pair of 0.9 and 0.9 is half in order.
+    assert [row.ranking.auc for row in found] == [0.0, 0.25, 0.5, 0.5, 0.0]
+    assert {row.ranking.n_clean for row in found} == {1}
+    assert [row.ranking.n_present for row in found] == [row.n_present for row in found]
 
 
 def test_look_alikes_by_hand():

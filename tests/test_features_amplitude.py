@@ -398,3 +398,64 @@ def test_a_burst_is_the_pace_of_the_fastest_tenth_of_a_second():
         20 * np.log10(found / np.median(found, axis=0)),
         atol=1e-4,
     )
+
+
+# How even the pace of a second is --------------------------------------------------------
+
+
+def evenness(trace, second=3):
+    """burst_even at T8, whose trace this is, over weak noise."""
+    data = ten_twenty(7, rms_uv=0.2)
+    data[row("T8")] += trace
+    return table_of(data).column("burst_even")[second, row("T8")]
+
+
+@pytest.mark.parametrize(
+    ("fast_tenths", "decibel"),
+    [
+        # Paces 16 and 1.6 uV (4 of 250 samples are 16 ms; the site moves by 19/20 of it).
+        # Half and half the median lies between the slower and the slowest of the faster:
+        # its last 4 of 25 changes reach 1 to 4 samples beyond, 14.4 x 2.5 / 25 uV less.
+        (5, 20 * np.log10((1.6 + 16 - 1.44) / 2 / 16)),
+        # From six tenths on the median is among the faster, up to four the slower.
+        (7, 0.0),
+        (3, -20.0),
+        (10, 0.0),
+    ],
+)
+def test_evenness_is_the_median_tenth_over_the_fastest(fast_tenths, decibel):
+    rate = 250.0
+    time = np.arange(int(7 * rate)) / rate - 3
+    slope = np.where((time >= 0) & (time < fast_tenths / 10), 1000.0, 100.0)
+    data = ten_twenty(7, rate, rms_uv=0.5)
+    data[row("T8")] += np.cumsum(slope) / rate
+    found = table_of(data, rate).column("burst_even")[3, row("T8")]
+    # The floor of 0.05 uV lifts 1.5 uV by 0.3 dB, the noise moves it by as much.
+    assert found == pytest.approx(decibel, abs=0.6)
+
+
+def test_one_short_burst_is_uneven_and_steady_activity_is_even():
+    n = 7 * 256
+    time = np.arange(n) / RATE
+    short = np.where((time >= 3.42) & (time < 3.47), sine(n, RATE, 30.0, 40.0), 0.0)
+    weak = noise(1, n, RATE, exponent=0, rms_uv=1.0)[0]
+    # Two independent values of 1 uV rms differ by 2 / sqrt(pi) = 1.13 uV on average, 30 Hz
+    # of 40 uV by 2 / pi x 80 uV over 16 ms: half a tenth of a second of that.
+    assert evenness(short + weak) < 20 * np.log10(1.4 / 20)
+    # Means of 25 independent changes scatter by some 15 %: the largest of ten is no more
+    # than half as large again as their median.
+    steady = noise(1, n, RATE, exponent=0, rms_uv=20.0, seed=4)[0]
+    assert -20 * np.log10(1.6) < evenness(steady) < -0.5
+    # Whole cycles within each tenth: all tenths are alike.
+    assert evenness(sine(n, RATE, 20.0, 30.0)) == pytest.approx(0, abs=0.6)
+
+
+def test_evenness_of_a_burst_is_that_of_its_own_second():
+    n = 7 * 256
+    time = np.arange(n) / RATE
+    short = np.where((time >= 3.42) & (time < 3.47), sine(n, RATE, 30.0, 40.0), 0.0)
+    steady = noise(1, n, RATE, exponent=0, rms_uv=1.0)[0]
+    for second in (2, 4):
+        assert evenness(short + steady, second) == pytest.approx(
+            evenness(steady, second), abs=1e-4
+        )

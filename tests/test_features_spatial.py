@@ -68,6 +68,8 @@ def test_eye_leads_of_the_10_20_system():
     assert names(LEADS.left) == {"F7"}
     assert names(LEADS.right) == {"F8"}
     assert names(LEADS.behind) == {"P7", "P3", "Pz", "P4", "P8", "O1", "O2"}
+    assert names(LEADS.row) == {"F3", "Fz", "F4"}
+    assert names(LEADS.near) == {"Fp1", "Fp2", "F7", "F3", "Fz", "F4", "F8"}
     assert LEADS.front_row == "frontal poles"
 
 
@@ -84,12 +86,16 @@ def test_without_frontal_poles_the_frontal_sites_serve():
     assert leads.front_row == "frontal sites"
     assert leads.front.sum() >= 3
     assert not leads.front[5:].any()
+    # There is no row between them and the sites behind.
+    np.testing.assert_array_equal(leads.row, leads.behind)
 
 
 def test_without_sites_behind_the_central_ones_serve():
     labels = ("Fp1", "Fp2", "C3", "Cz", "C4")
     leads = leads_of([f"{site}-REF" for site in labels])
     np.testing.assert_array_equal(leads.behind[:5], [False, False, True, True, True])
+    # Two sites in front are too few to fit the eyes to: all of the head is.
+    np.testing.assert_array_equal(leads.near, [True] * 5 + [False])
 
 
 def test_eye_maps_are_symmetric_and_lateral_ones_change_sign():
@@ -265,7 +271,8 @@ def test_gaze_to_the_right_makes_f8_positive_and_f7_negative_and_left_is_its_inv
 
 def test_frontal_polarity_is_the_same_number_at_every_site_of_a_second():
     table = table_of(at_second(scaled(VERTICAL, 100.0)))
-    for name in ("front_vertical", "front_lateral", "front_rhythm", "eye_match"):
+    for name in ("front_vertical", "front_lateral", "front_rhythm", "front_swing",
+                 "side_swing", "eye_match", "eye_span"):  # fmt: skip
         column = table.column(name)
         np.testing.assert_array_equal(column, np.broadcast_to(column[:, :1], column.shape))
 
@@ -375,6 +382,222 @@ def test_eyes_are_not_measured_without_frontal_or_posterior_sites():
 def test_context_beyond_an_end_is_mirrored_and_a_blink_at_the_end_is_found():
     table = table_of(at_second(scaled(VERTICAL, 150.0), second=11.6))
     assert table.column("front_vertical")[11, 0] == pytest.approx(150.0, abs=10.0)
+
+
+# The swing within a second -------------------------------------------------------------
+
+
+def at_sites(sizes, wave, seconds=7):
+    """Potentials of these sizes times a wave (n_samples,) on hardly any noise."""
+    data = ten_twenty(seconds, rms_uv=0.1)
+    for site, size in sizes.items():
+        data[row(site)] += size * wave
+    return data
+
+
+def triangle(second=3.5, seconds=7, base=0.4):
+    """Up to 1 at this second and back, 0.2 s each."""
+    away = np.abs(np.arange(int(seconds * RATE)) / RATE - second)
+    return np.maximum(0, 1 - away / (base / 2))
+
+
+@pytest.mark.parametrize(
+    ("sizes", "swing"),
+    [
+        ({"Fp1": 100, "Fp2": 100}, 100),
+        ({"Fp1": -100, "Fp2": -100}, 100),
+        ({"Fp1": 100}, 50),
+        # What the row behind the poles shares is no swing of the poles; a third of the row
+        # takes a third off.
+        ({"Fp1": 100, "Fp2": 100, "F3": 100, "Fz": 100, "F4": 100}, 0),
+        ({"Fp1": 100, "Fp2": 100, "Fz": 60}, 80),
+        ({"O1": 100, "O2": 100, "T7": 100}, 0),
+    ],
+)
+def test_frontal_swing_is_that_of_the_poles_against_the_row_behind_them(sizes, swing):
+    found = table_of(at_sites(sizes, triangle())).column("front_swing")
+    # Means of 5 samples, over which the triangle moves by 10 uV, take its tip off: at most
+    # (2 + 2 + 4 + 4) / 5 = 2.4 uV of 100.
+    np.testing.assert_allclose(found[3], swing, atol=0.024 * max(swing, 1) + 0.5)
+    assert np.delete(found, 3, axis=0).max() < 0.6
+
+
+def test_frontal_swing_against_usual_is_in_decibel_over_its_median():
+    table = table_of(at_second(scaled(VERTICAL, 100.0)))
+    swing = table.column("front_swing")[:, 0]
+    found = table.column("front_swing_rise")[:, 0]
+    np.testing.assert_allclose(found, 20 * np.log10(swing / np.median(swing)), atol=1e-3)
+    assert found.argmax() == 5
+
+
+@pytest.mark.parametrize(
+    ("sizes", "swing"),
+    [
+        ({"F7": -30, "F8": 30}, 60),
+        ({"F7": 30, "F8": -30}, 60),
+        ({"F8": 45}, 45),
+        ({"F7": 30, "F8": 30, "Fp1": 80, "T7": 50}, 0),
+    ],
+)
+def test_swing_between_the_temples_is_that_of_their_difference(sizes, swing):
+    after = (np.arange(7 * 256) >= 3.5 * 256).astype(float)
+    found = table_of(at_sites(sizes, after)).column("side_swing")
+    np.testing.assert_allclose(found[3], swing, atol=0.8)
+    assert np.delete(found, 3, axis=0).max() < 0.8
+
+
+# What fits the eyes over the second, without noise ---------------------------------------
+
+
+def polarity_of(fields_and_waves, n_slow=50, lost=()):
+    """Polarity of the middle of three seconds: fields (19,) times waves (3 n_slow,)."""
+    slow = np.zeros((20, 3, n_slow), dtype=np.float32)
+    for field, wave in fields_and_waves:
+        slow[:19] += np.outer(field, wave).reshape(19, 3, n_slow)
+    ok = np.ones((20, 3), dtype=bool)
+    ok[list(lost)] = False
+    slow[list(lost)] = 0
+    return spatial.frontal_polarity(slow, ok, LEADS)
+
+
+TIME = np.arange(150) / 50.0 - 1
+"""Seconds since the start of the middle one."""
+BLINK = np.where(np.abs(TIME - 0.5) < 0.15, np.cos(np.pi * (TIME - 0.5) / 0.3) ** 2, 0)
+
+
+def other_field():
+    """A field that no mixture of the eye maps explains at all, of mean zero."""
+    maps = np.stack([VERTICAL, LATERAL, np.ones(19)])
+    field = np.cos(np.arange(19.0))
+    return field - maps.T @ np.linalg.lstsq(maps.T, field, rcond=None)[0]
+
+
+@pytest.mark.parametrize("mixture", [(120.0, 0.0), (0.0, 90.0), (-60.0, 40.0)])
+def test_eye_swing_is_how_far_the_eyes_move_each_site(mixture):
+    field = scaled(VERTICAL, mixture[0]) + scaled(LATERAL, mixture[1])
+    found = polarity_of([(field, BLINK), (np.ones(19), 30 * np.sin(9 * TIME))])
+    expected = np.abs(against_behind(field)) * np.ptp(BLINK)
+    np.testing.assert_allclose(found.swing[:19, 0], expected, atol=0.02)
+    assert np.isnan(found.swing[19]).all()  # the reference has no place
+    largest = expected.max()
+    assert expected[LEADS.behind[:19]].max() < 0.1 * largest
+    if not mixture[1]:
+        assert found.swing[:2, 0].mean() == pytest.approx(120.0, abs=0.1)
+
+
+def test_eye_swing_does_not_see_what_only_the_back_of_the_head_does():
+    field = np.where(LEADS.near[:19], 0.0, 80.0 * np.cos(np.arange(19)))
+    found = polarity_of([(scaled(VERTICAL, 50.0), BLINK), (field, np.sin(30 * TIME))])
+    alone = polarity_of([(scaled(VERTICAL, 50.0), BLINK)])
+    # The maps are fitted to the front half, in which nothing else moves.
+    np.testing.assert_allclose(found.swing[:19], alone.swing[:19], atol=0.05)
+
+
+@pytest.mark.parametrize(
+    ("ratio", "share"), [(0, 1), (1, 1 / 2), (3, 1 / 4), (99, 1 / 100)]
+)
+def test_eye_span_is_the_share_of_the_power_over_the_second(ratio, share):
+    eyes, other = scaled(VERTICAL, 80.0) + scaled(LATERAL, 50.0), other_field()
+    eyes = eyes - eyes.mean()
+    other *= np.sqrt(ratio * (eyes @ eyes) / (other @ other))
+    # Sines of whole cycles a second: as much power in each, and medians of zero.
+    found = polarity_of(
+        [(eyes, np.sin(4 * np.pi * TIME + 0.1)), (other, np.sin(6 * np.pi * TIME + 0.1))]
+    )
+    assert found.span[0] == pytest.approx(share, abs=0.004)
+
+
+def test_moments_without_any_field_take_nothing_off():
+    # Between blinks nothing moves at all: 0 of 0 is explained there.
+    assert (BLINK[50:100] == 0).any()
+    found = polarity_of([(scaled(VERTICAL, 100.0), BLINK)])
+    assert found.span[0] == pytest.approx(1, abs=1e-4)
+    silent = polarity_of([(np.zeros(19), BLINK)])
+    assert np.isnan(silent.span).all()
+    np.testing.assert_array_equal(silent.swing[:19], 0)
+
+
+def test_eye_span_tells_a_second_of_the_eyes_from_a_posterior_rhythm():
+    found = table_of(at_second(scaled(VERTICAL, 150.0))).column("eye_span")[:, 0]
+    assert found[5] > 0.98
+    assert np.delete(found, 5).max() < 0.3
+    alpha = np.sin(2 * np.pi * 10 * np.arange(12 * 256) / RATE)
+    data = ten_twenty(12, rms_uv=1.0, exponent=2) + np.outer(OCCIPITAL / 3, alpha)
+    assert table_of(data).column("eye_span").max() < 0.1
+
+
+def test_eye_agree_is_1_where_a_site_does_what_the_eyes_predict():
+    field = scaled(VERTICAL, 150.0)
+    found = polarity_of([(field, BLINK)])
+    # d p / max(d, p)^2 with d = p, but for the floor of 0.05 uV: 1 / (1 + (0.05 / d)^2).
+    size = against_behind(field)
+    np.testing.assert_allclose(found.agree[:19, 0], 1 / (1 + (0.05 / size) ** 2), atol=0.01)
+    assert np.isnan(found.agree[19]).all()
+
+
+def test_eye_agree_is_negative_at_a_site_that_moves_the_other_way():
+    field = scaled(VERTICAL, 150.0)
+    field[row("F3")] *= -1
+    found = polarity_of([(field, BLINK)])
+    agree, d, p = (values[:19, 0] for values in (found.agree, found.reach, found.part))
+    assert agree[row("F3")] < -0.5
+    assert agree[[row("Fp1"), row("Fp2"), row("F4")]].min() > 0.8
+    # Its size is the smaller over the larger of what is there and what is predicted.
+    large = (d > 3) & (p > 3)
+    assert large.sum() > 5
+    ratio = np.minimum(d, p)[large] / np.maximum(d, p)[large]
+    np.testing.assert_allclose(np.abs(agree[large]), ratio, atol=2e-3)
+
+
+def test_eye_agree_is_small_where_a_site_moves_far_more_than_predicted():
+    field = scaled(VERTICAL, 150.0)
+    field[row("T8")] += 400.0
+    found = polarity_of([(field, BLINK)])
+    assert abs(found.agree[row("T8"), 0]) < 0.3
+    assert found.reach[row("T8"), 0] > 350
+
+
+def test_a_rhythm_that_does_not_follow_the_frontal_deflection_is_no_reach():
+    field = scaled(VERTICAL, 150.0)
+    at_c3 = np.zeros(19)
+    at_c3[row("C3")] = 60.0
+    # A raised cosine of 0.3 s holds nothing of 2 / 0.3 Hz: the regression on it is 0.
+    found = polarity_of([(field, BLINK), (at_c3, np.sin(2 * np.pi * 2 / 0.3 * TIME))])
+    np.testing.assert_allclose(found.reach[:19, 0], np.abs(against_behind(field)), atol=0.5)
+    # What does follow it counts, in proportion.
+    found = polarity_of([(field, BLINK), (at_c3, BLINK / 2)])
+    expected = abs(against_behind(field)[row("C3")] + 30.0)
+    assert found.reach[row("C3"), 0] == pytest.approx(expected, abs=0.1)
+
+
+def test_reach_looks_no_further_than_four_tenths_of_a_second():
+    poles = np.where(LEADS.front[:19], 150.0, 0.0)
+    at_c3 = np.zeros(19)
+    at_c3[row("C3")] = 100.0
+    # The poles move twice, 0.34 or 0.45 s apart, and C3 with the second time alone.
+    for apart, follows in ((0.34, True), (0.45, False)):
+        again = np.where(np.abs(TIME - 0.5 - apart) < 0.03, 0.6, 0.0)
+        found = polarity_of([(poles, BLINK), (poles, again), (at_c3, again)])
+        reach = found.reach[row("C3"), 0]
+        assert reach > 10 if follows else reach < 1e-3
+
+
+@pytest.mark.parametrize("site", ["C3", "O1", "F7"])
+def test_losing_a_site_leaves_what_the_eyes_do_at_the_others(site):
+    field = scaled(VERTICAL, 120.0)
+    whole, holed = (polarity_of([(field, BLINK)], lost=lost) for lost in ((), [row(site)]))
+    others = np.delete(np.arange(19), row(site))
+    assert np.isnan(holed.swing[row(site)]).all()
+    assert np.isnan(holed.agree[row(site)]).all()
+    assert holed.span[0] == pytest.approx(1, abs=1e-4)
+    # "Behind" is another mean where one of those sites is lost: up to 1 uV of 120.
+    np.testing.assert_allclose(holed.swing[others], whole.swing[others], atol=0.1)
+    np.testing.assert_allclose(holed.reach[others], whole.reach[others], atol=1.0)
+    np.testing.assert_allclose(holed.front_swing, whole.front_swing, rtol=1e-6)
+    if site == "F7":
+        assert np.isnan(holed.side_swing).all()
+    else:
+        np.testing.assert_allclose(holed.side_swing, whole.side_swing, atol=1e-4)
 
 
 # Sites that come and go ----------------------------------------------------------------

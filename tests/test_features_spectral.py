@@ -550,3 +550,61 @@ def test_high_power_leaves_the_mains_out():
     loud = measure_recording(referential(data), line_frequency=60.0).table
     difference = loud.column("high_power") - plain.column("high_power")
     np.testing.assert_allclose(difference, 0, atol=0.1)
+
+
+# One band over another -----------------------------------------------------------------
+
+
+def medians_of(name, exponent, rate=256.0, **options):
+    data = noise(19, int(60 * rate), rate, exponent=exponent, rms_uv=20.0, seed=3)
+    recording = referential(data, rate, **options)
+    found = measure_recording(recording, line_frequency=50.0).table.column(name)
+    return np.median(found[:, :19], axis=0)
+
+
+@pytest.mark.parametrize("exponent", [0.0, 1.0, 2.0])
+@pytest.mark.parametrize("name", ["fast_over_beta", "high_over_fast"])
+def test_a_band_over_the_one_below_follows_the_power_law(name, exponent):
+    high, low = {
+        "fast_over_beta": (np.arange(30.0, 46), np.arange(18.0, 31)),
+        # 55-95 Hz without 3 Hz either side of the harmonic of 50 Hz: none lies within.
+        "high_over_fast": (np.arange(55.0, 96), np.arange(30.0, 46)),
+    }[name]
+    expected = 10 * np.log10((high**-exponent).mean() / (low**-exponent).mean())
+    found = medians_of(name, exponent)
+    # White noise: 0 dB. A minute of each of 19 sites.
+    np.testing.assert_allclose(found, expected, atol=0.9)
+    assert found.mean() == pytest.approx(expected, abs=0.25)
+
+
+@pytest.mark.parametrize(
+    ("rate", "low_pass", "fast", "high"),
+    [
+        (256.0, None, True, True),
+        # 95 % of the low-pass is kept of: 0.3 of 41 bins of 55-95 Hz reach to 67 Hz, 0.3 of
+        # 16 bins of 30-45 Hz to 34 Hz.
+        (256.0, 72.0, True, True),
+        (256.0, 68.0, True, False),
+        (256.0, 37.0, True, False),
+        (256.0, 34.0, False, False),
+        (100.0, None, True, False),
+        (60.0, None, False, False),
+    ],
+)
+def test_a_ratio_is_not_measured_where_a_band_is_not_carried(rate, low_pass, fast, high):
+    stated = {} if low_pass is None else {"filters": [Filters(0.5, low_pass, None)] * 19}
+    recording = referential(ten_twenty(12, rate), rate, **stated)
+    table = measure_recording(recording, line_frequency=50.0).table
+    for name, carried in (("fast_over_beta", fast), ("high_over_fast", high)):
+        found = np.isfinite(table.column(name))
+        assert found.all() if carried else not found.any(), name
+
+
+def test_muscle_lifts_each_band_over_the_one_below():
+    data = ten_twenty(30, rms_uv=12.0, exponent=1.7, seed=5)
+    data[row("T7")] += noise(1, 30 * 256, RATE, exponent=-0.5, rms_uv=20, seed=6)[0]
+    table = measure_recording(referential(data), line_frequency=50.0).table
+    for name in ("fast_over_beta", "high_over_fast"):
+        found = np.median(table.column(name), axis=0)
+        others = np.delete(found[:19], row("T7"))
+        assert found[row("T7")] > others.max() + 1.0, name

@@ -346,7 +346,7 @@ def _map_fit(
     fitted = np.linalg.solve(gram, moment)
     power = np.einsum("est,est->et", field, field)
     explained = np.einsum("emt,emt->et", fitted, moment)
-    enough = (there.sum(axis=1) >= 4)[:, None] & (power > 0)
+    enough = (there.sum(axis=1) >= 4)[:, None]
     behind = leads.behind & placed
     far = leads.maps[:, behind].mean(axis=1) if behind.any() else maps.min(axis=1)
     against = leads.maps[:, placed] - far[:, None]

@@ -13,7 +13,7 @@ from artifactlens.training.gathering import Gathered
 LABELLED_KINDS = ("eye", "muscle")
 """Kinds with real labels: the others are learnt from simulation alone."""
 
-FOLDS = 3
+FOLDS = 2
 
 
 def heads_without(

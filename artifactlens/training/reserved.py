@@ -9,14 +9,16 @@ import joblib
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.kinds import KIND_NAMES
 from artifactlens.pipeline import measure_recording
 from artifactlens.recording import open_recording
 from artifactlens.training.corpora.backgrounds import mental_arithmetic
+from artifactlens.training.corpora.truth import judged_kinds
 from artifactlens.training.evaluation.baselines import (
     blink_peak_seconds,
     muscle_zscore_seconds,
 )
-from artifactlens.training.examples import CLEAN, Examples, from_table, join
+from artifactlens.training.examples import CLEAN, UNKNOWN, Examples, from_table, join
 from artifactlens.training.gathering import RESERVED_PEOPLE, SEEDS
 from artifactlens.training.simulated import simulate
 from artifactlens.training.situation import Background
@@ -71,16 +73,19 @@ def as_distributed(folder: Path, people: range) -> Examples:
     """Recordings of ``eegmat`` as they are: every cell is called clean of every kind.
 
     They were distributed as free of artifact; what their authors missed counts as clean.
+    Kinds that the recordings do not let one judge (mains, after their notch) are unknown.
     """
     parts = []
     for person in people:
         for path in sorted(folder.glob(f"Subject{person:02d}_*.edf")):
             measured = measure_recording(open_recording(path), line_frequency=50.0)
-            shape = (4, *measured.table.values.shape[1:])
+            shape = (len(KIND_NAMES), *measured.table.values.shape[1:])
+            truth = np.full(shape, CLEAN, dtype=np.int8)
+            truth[~judged_kinds(measured)] = UNKNOWN
             parts.append(
                 from_table(
                     measured.table,
-                    np.full(shape, CLEAN, dtype=np.int8),
+                    truth,
                     np.zeros(shape, dtype=np.float32),
                     person=f"eegmat-{person:02d}",
                     origin="real: eegmat as distributed",

@@ -303,6 +303,10 @@ def examples_of(labelled: LabelledRecording) -> Examples:
     measured = measure_recording(labelled.open(), line_frequency=labelled.line_frequency)
     truth = truth_of(labelled.labels, measured, labelled.montage)
     truth[~judged_kinds(measured)] = UNKNOWN
+    # A site of which no label ever says anything, as a rule the reference, is left out:
+    # else no second could count as clean at every site.
+    silent = (truth == UNKNOWN).all(axis=(0, 1))
+    measured.table.values[:, :, silent] = np.nan
     return from_table(
         measured.table,
         truth,

@@ -31,6 +31,7 @@ from artifactlens.training.evaluation.metrics import (
     known_cells,
     measure_scores,
     per_second,
+    rank_scores,
     recordings_of,
 )
 from artifactlens.training.examples import CLEAN, PRESENT, Examples
@@ -79,6 +80,7 @@ class StrengthRow(NamedTuple):
     n_present: int
     sensitivity_sure: float
     sensitivity_doubtful: float
+    ranking: Ranking
 
 
 def source_of(examples: Examples) -> str:
@@ -244,7 +246,9 @@ def strength_rows(
     """
     column = KIND_NAMES.index(kind)
     truth = examples.truth[:, column]
-    chosen = known_cells(score, truth) & (truth == PRESENT)
+    known = known_cells(score, truth)
+    chosen = known & (truth == PRESENT)
+    clean = score[known & (truth == CLEAN)]
     size, found = examples.strength[chosen, column], score[chosen]
     edges = STRENGTHS[kind][1]
     labels = [
@@ -266,6 +270,7 @@ def strength_rows(
                     len(own),
                     float((own >= sure).mean()),
                     float((own >= doubtful).mean()),
+                    _ranked(own, clean),
                 )
             )
     return rows
@@ -280,12 +285,23 @@ def strength_table(examples: Examples, scores: ScoresByKind, marks: Marks) -> st
             f"{row.n_present:,}",
             number(row.sensitivity_sure),
             number(row.sensitivity_doubtful),
+            number(row.ranking.auc, 4),
+            number(row.ranking.sensitivity_99),
         ]
         for kind, score in scores.items()
         for row in strength_rows(examples, kind, score, *marks[kind])
     ]
-    header = ["kind", "size", "present", "sensitivity, sure", "sensitivity, doubtful"]
-    return table(caption(examples, "By size of the artifact"), header, rows)
+    header = [
+        "kind", "size", "present", "sensitivity, sure", "sensitivity, doubtful", "ROC AUC",
+        "sensitivity at 99 % specificity",
+    ]  # fmt: skip
+    note = "AUC and specificity are against all clean cells."
+    return table(caption(examples, "By size of the artifact", note), header, rows)
+
+
+def _ranked(present: Scores, clean: Scores) -> Ranking:
+    truth = np.repeat(np.array([PRESENT, CLEAN], np.int8), (len(present), len(clean)))
+    return rank_scores(np.concatenate([present, clean]), truth)
 
 
 def look_alike_table(examples: Examples, scores: ScoresByKind, marks: Marks) -> str:
