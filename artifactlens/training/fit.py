@@ -103,15 +103,21 @@ def fit_forest(
     """
     from sklearn.ensemble import HistGradientBoostingClassifier
 
-    names = [name for name in HEAD_FEATURES[kind] if name not in leave_out]
+    truth = examples.truth[:, KIND_NAMES.index(kind)]
+    known = truth >= 0
+    # What none of the recordings carries, as a band beyond their low-pass, cannot be learnt.
+    measured = np.isfinite(examples.features[known]).any(axis=0)
+    names = [
+        name
+        for name in HEAD_FEATURES[kind]
+        if name not in leave_out and measured[FEATURE_NAMES.index(name)]
+    ]
     columns = np.array([FEATURE_NAMES.index(name) for name in names])
     together = [[k] for k in range(len(names))] + [
         [names.index(first), names.index(second)]
         for first, second in PAIRS[kind]
-        if leave_out.isdisjoint((first, second))
+        if first in names and second in names
     ]
-    truth = examples.truth[:, KIND_NAMES.index(kind)]
-    known = truth >= 0
     forest = HistGradientBoostingClassifier(
         learning_rate=0.08,
         max_iter=300,
