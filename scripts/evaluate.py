@@ -286,7 +286,7 @@ def left_out(
     texts["eye leads"] = "```\n" + "\n".join(check.text() for check in eyes) + "\n```"
     noted = absence.notes(where["clinical_absence"] / "notes.tsv")
     alike = lookalike_check(model, absent, noted)
-    texts["look-alikes on real record"] = f"```\n{alike.text()}\n```"
+    texts["look-alikes on real record"] = f"```\n{alike.shares_text()}\n```"
     sample = open_recording(where["sample_60eeg"] / "sample_eeg_raw.fif")
     texts["eog"] = f"```\n{eog_check(model, measure_recording(sample)).text()}\n```"
     return texts

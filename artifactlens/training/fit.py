@@ -106,7 +106,7 @@ def fit_forest(
     truth = examples.truth[:, KIND_NAMES.index(kind)]
     known = truth >= 0
     # What none of the recordings carries, as a band beyond their low-pass, cannot be learnt.
-    measured = np.isfinite(examples.features[known]).any(axis=0)
+    measured = np.asarray(np.isfinite(examples.features[known]).any(axis=0))
     names = [
         name
         for name in HEAD_FEATURES[kind]

@@ -68,7 +68,11 @@ class LookalikeCheck:
     flags: dict[str, tuple[FlagInside, ...]]
 
     def text(self) -> str:
-        """The check in plain lines."""
+        """The check in plain lines, every flag with its sentence."""
+        return "\n".join([self.shares_text(), *self._flag_lines()])
+
+    def shares_text(self) -> str:
+        """The shares flagged, without the flags themselves."""
         lines = []
         for entry in self.patterns:
             lines.append(f"{entry.pattern}: {entry.seconds} s, flagged {'/'.join(MARKS)}")
@@ -84,6 +88,10 @@ class LookalikeCheck:
                     ("cells by own score", entry.own),
                 )
             ]
+        return "\n".join(lines)
+
+    def _flag_lines(self) -> list[str]:
+        lines = []
         for mark, flags in self.flags.items():
             lines.append(f"flags inside at {mark}: {len(flags)}")
             lines += [
@@ -91,7 +99,7 @@ class LookalikeCheck:
                 f"{', '.join(flag.sites)}, {flag.probability:.2f}. {flag.sentence}"
                 for flag in flags
             ]
-        return "\n".join(lines)
+        return lines
 
 
 def pattern_masks(
