@@ -12,6 +12,7 @@ from artifactlens.curves import logistic
 from artifactlens.features.catalogue import FEATURE_NAMES
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.training.compilation import Compiled, compile_forest
+from artifactlens.training.evaluation.metrics import per_second
 from artifactlens.training.examples import CLEAN, PRESENT, Examples
 
 if TYPE_CHECKING:
@@ -265,12 +266,8 @@ def clean_seconds(
     examples: Examples, kind: str, probability: NDArray[np.float64]
 ) -> NDArray[np.float64]:
     """Highest probability over the sites of every second that is clean of the kind."""
-    truth = examples.truth[:, KIND_NAMES.index(kind)]
-    order = np.argsort(examples.second, kind="stable")
-    _, starts = np.unique(examples.second[order], return_index=True)
-    clean = np.minimum.reduceat((truth == CLEAN)[order], starts)
-    highest = np.maximum.reduceat(probability[order], starts)
-    return np.asarray(highest[clean])
+    seconds = per_second(examples, kind, probability)
+    return seconds.highest[seconds.truth == CLEAN]
 
 
 def _threshold(worst: NDArray[np.float64], specificity: float, least: float) -> float:
