@@ -21,7 +21,7 @@ from artifactlens.frames import Frame, build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores
-from artifactlens.sitecare import site_evidence
+from artifactlens.sitecare.shares import site_evidence
 from artifactlens.survey import LINE_FREQUENCIES, PLAUSIBLE_UV, Conditions, survey
 
 if TYPE_CHECKING:

@@ -8,13 +8,14 @@ import math
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
+from artifactlens.advice import Advice
 from artifactlens.errors import ResultError
 
 if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-RESULT_VERSION = 2
+RESULT_VERSION = 3
 
 CAUTION = (
     "artifactlens is a research and technical aid, not a medical device. A flag does not "
@@ -135,13 +136,15 @@ class Assessment:
 
 @dataclass(frozen=True, slots=True)
 class SiteEvidence:
-    """What was measured at one site over the recording.
+    """What was measured at one site over the recording, and what follows for it.
 
     ``site`` is the file's own spelling of the electrode; ``channel`` the full label of the
     channel that carries it, None for sites solved from derivations and for the reference.
     ``position`` is in metres, x to the right, y to the nose, z up, origin at the centre
     of the head. ``share`` maps a kind to the share of judged epochs flagged (0 to 1), None
-    where the kind cannot be judged.
+    where the kind cannot be judged. ``verdict`` is one of
+    :data:`~artifactlens.advice.SITE_VERDICTS`, ``why`` a clause for it, empty where there is
+    nothing to say; ``impedance_kohm`` None where none is known.
     """
 
     site: str
@@ -156,6 +159,25 @@ class SiteEvidence:
     mains_db: float | None
     isolation_db: float | None
     fault: str
+    verdict: str = "leave"
+    why: str = ""
+    impedance_kohm: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Setup:
+    """Whether the sites were fit to start, judged from the first ``seconds``.
+
+    ``fit`` and ``unfit`` hold site names, the latter each with a reason; ``cannot_tell``
+    those that could not be judged. ``responses`` say what the biological calibration showed,
+    one sentence each, empty where none was announced.
+    """
+
+    seconds: float
+    fit: tuple[str, ...]
+    unfit: tuple[tuple[str, str], ...]
+    cannot_tell: tuple[str, ...]
+    responses: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -200,7 +222,8 @@ class Result:
     """All that artifactlens says of one recording.
 
     ``touched`` maps each kind, and "any", to the seconds under at least one flag.
-    ``scores`` is kept beside the JSON (in ``scores.npz``) and takes no part in equality.
+    ``advice`` is the technologist's list in order of work. ``scores`` is kept beside the JSON
+    (in ``scores.npz``) and takes no part in equality.
     """
 
     tool_version: str
@@ -212,6 +235,8 @@ class Result:
     touched: dict[str, float]
     flags: tuple[Flag, ...]
     sites: tuple[SiteEvidence, ...]
+    advice: tuple[Advice, ...] = ()
+    setup: Setup | None = None
     scores: Scores | None = field(default=None, compare=False, repr=False)
 
     def assessment(self, kind: str) -> Assessment:
@@ -317,6 +342,29 @@ def _result_from(body: dict[str, Any]) -> Result:
         touched=body["touched"],
         flags=flags,
         sites=sites,
+        advice=tuple(_advice_from(entry) for entry in body["advice"]),
+        setup=None if body["setup"] is None else _setup_from(body["setup"]),
+    )
+
+
+def _advice_from(entry: dict[str, Any]) -> Advice:
+    return Advice(
+        **{
+            **entry,
+            "sites": tuple(entry["sites"]),
+            "stretches": tuple((float(a), float(b)) for a, b in entry["stretches"]),
+            "checks": tuple(entry["checks"]),
+        }
+    )
+
+
+def _setup_from(entry: dict[str, Any]) -> Setup:
+    return Setup(
+        seconds=entry["seconds"],
+        fit=tuple(entry["fit"]),
+        unfit=tuple((site, why) for site, why in entry["unfit"]),
+        cannot_tell=tuple(entry["cannot_tell"]),
+        responses=tuple(entry["responses"]),
     )
 
 

@@ -1,4 +1,4 @@
-"""What was measured at every electrode site over the recording."""
+"""What was measured at every electrode site over the recording: one row per site."""
 
 from __future__ import annotations
 

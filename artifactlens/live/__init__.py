@@ -1,0 +1,1 @@
+"""Work on a stream while it is recorded (optional extra ``live``)."""

@@ -1,0 +1,1 @@
+"""Which electrode sites need care, why, and what to check next."""

@@ -1,0 +1,1 @@
+"""Injected electrode faults over real background: is the technologist advised well?"""
