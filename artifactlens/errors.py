@@ -50,3 +50,11 @@ class OptionError(ArtifactlensError, ValueError):
 
 class LabelsError(ArtifactlensError, ValueError):
     """A file of labels is missing, malformed or does not fit its recording."""
+
+
+class ImpedanceError(ArtifactlensError, ValueError):
+    """A table of electrode impedances cannot be read or does not fit its recording."""
+
+
+class StreamError(ArtifactlensError, ConnectionError):
+    """A live stream cannot be found, reached or used."""

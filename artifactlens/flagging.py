@@ -186,6 +186,25 @@ def _flags_of(
     return flags
 
 
+def pop_moments(
+    model: Model,
+    probability: NDArray[np.floating],
+    step_at: NDArray[np.floating],
+    grid: EpochGrid,
+) -> tuple[tuple[float, tuple[int, ...]], ...]:
+    """Moment (seconds) and rows of every sure pop, whatever operating point marks flags.
+
+    ``probability`` (n_kinds, n_epochs, n_sites), ``step_at`` (n_epochs, n_sites).
+    """
+    row = KIND_NAMES.index("pop")
+    head = model.heads[row]
+    events = find_segments(
+        "pop", probability[row], grid, step_at, enter=head.sure, stay=head.sure
+    )
+    at = grid.onset[events.peak_epoch] + step_at[events.peak_epoch, events.peak_site]
+    return tuple(zip((float(moment) for moment in at), events.sites, strict=True))
+
+
 def touched_seconds(flags: tuple[Flag, ...], end: float) -> dict[str, float]:
     """Seconds under at least one flag, per kind and for "any"."""
     onset = np.array([flag.onset for flag in flags])

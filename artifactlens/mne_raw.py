@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 import warnings
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import datetime, timedelta
 from itertools import pairwise
 from typing import TYPE_CHECKING
@@ -29,6 +29,7 @@ KEPT_TYPES = {
     "misc": "misc",
 }
 _UNIT_VOLT, _COORD_HEAD = 107, 4  # FIFF_UNIT_V and FIFFV_COORD_HEAD of the FIF format
+_KILO_OHM = {"kohm": 1.0, "kω": 1.0, "ohm": 1e-3, "ω": 1e-3}
 _CUT = re.compile(r"(bad |edge )?boundary|new segment/.*", re.IGNORECASE)
 
 
@@ -38,7 +39,8 @@ class RawSelection:
 
     ``picks`` are their indices; ``positions`` (n_channels, 3) metres, head coordinates;
     ``runs`` the uninterrupted stretches: first sample, number of samples, onset in
-    seconds; ``high_pass`` and ``low_pass`` hertz or None.
+    seconds; ``high_pass`` and ``low_pass`` hertz or None; ``impedances_kohm`` those that
+    the file states.
     """
 
     raw: mne.io.BaseRaw
@@ -54,6 +56,7 @@ class RawSelection:
     start: datetime | None
     set_aside: tuple[tuple[str, str], ...]
     notes: tuple[str, ...]
+    impedances_kohm: dict[str, float] = field(default_factory=dict)
 
     def read(self, start: int, stop: int) -> NDArray[np.float32]:
         """Samples ``start`` to ``stop``, (n_channels, n), microvolt."""
@@ -137,7 +140,21 @@ def select_raw(raw: mne.io.BaseRaw, name: str) -> RawSelection:
         start=started,
         set_aside=tuple(set_aside),
         notes=tuple(notes),
+        impedances_kohm=_impedances(raw),
     )
+
+
+def _impedances(raw: mne.io.BaseRaw) -> dict[str, float]:
+    """Impedances by electrode, kilo-ohm; mne keeps those of a BrainVision header."""
+    table = getattr(raw, "impedances", None)
+    found = {}
+    for name, entry in table.items() if isinstance(table, dict) else ():
+        factor = _KILO_OHM.get(str(entry.get("imp_unit", "")).lower())
+        value = float(entry.get("imp", np.nan))
+        # A passive pair is written as +name and -name: the first is the electrode.
+        if factor is not None and np.isfinite(value) and not name.startswith("-"):
+            found[name.removeprefix("+").strip()] = value * factor
+    return found
 
 
 def _why_aside(kind: str, unit: int) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -16,12 +17,22 @@ from artifactlens.epochs import BATCH_EPOCHS, EpochGrid, batches, epoch_grid
 from artifactlens.errors import OptionError, RecordingError
 from artifactlens.features import FeatureTable, feature_table, mains_is_carried, measure
 from artifactlens.features.spatial import EyeLeads, eye_leads
-from artifactlens.flagging import MARKS, judge, make_flags, touched_seconds
+from artifactlens.flagging import (
+    MARKS,
+    Judgement,
+    judge,
+    make_flags,
+    pop_moments,
+    touched_seconds,
+)
 from artifactlens.frames import Frame, build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores
+from artifactlens.sitecare.evidence import Evidence
 from artifactlens.sitecare.shares import site_evidence
+from artifactlens.sitecare.signs import SignKeeper, SignLog, signs_of
+from artifactlens.sitecare.verdicts import advise, site_verdicts
 from artifactlens.survey import LINE_FREQUENCIES, PLAUSIBLE_UV, Conditions, survey
 
 if TYPE_CHECKING:
@@ -44,6 +55,7 @@ class Measured:
     conditions: Conditions
     grid: EpochGrid
     table: FeatureTable
+    log: SignLog
     faults: dict[str, NDArray[np.float64]]
 
 
@@ -85,29 +97,31 @@ def measure_recording(
         )
     leads = eye_leads(frame)
     parts = []
-    counts = {
-        name: np.zeros(len(frame.channels)) for name in ("flat", "missing", "clipped")
-    }
+    keeper = SignKeeper(len(grid), len(frame.sites))
     for batch in batches(recording, frame, grid, batch_epochs, conditions.levels_uv):
         parts.append(measure(batch, frame, leads, conditions))
-        for name, count in counts.items():
-            count += getattr(batch, name).sum(axis=1)
+        onset = grid.onset[batch.first : batch.first + len(batch)]
+        keeper.add(onset, *signs_of(batch, frame, conditions))
         if progress is not None:
             progress(batch.first + len(batch), len(grid))
     table = feature_table(parts, grid.segment)
+    log = keeper.log()
+    faults = {
+        name: getattr(log.signs, name).mean(axis=0)
+        for name in ("flat", "missing", "clipped")
+    }
     if not np.isfinite(table.values).any():
-        raise _no_signal(counts, conditions.amplitude_uv)
-    faults = {name: count / len(grid) for name, count in counts.items()}
-    return Measured(recording, frame, leads, conditions, grid, table, faults)
+        raise _no_signal(faults, conditions.amplitude_uv)
+    return Measured(recording, frame, leads, conditions, grid, table, log, faults)
 
 
 def _no_signal(
-    counts: dict[str, NDArray[np.float64]], amplitude_uv: float
+    faults: dict[str, NDArray[np.float64]], amplitude_uv: float
 ) -> RecordingError:
     """Say what is there instead of a signal, and which unit would make it one."""
-    n_channels = len(counts["flat"])
+    n_channels = len(faults["flat"])
     needed = "A signal is needed on at least two EEG channels"
-    if counts["missing"].sum() > counts["flat"].sum():
+    if faults["missing"].sum() > faults["flat"].sum():
         return RecordingError(
             f"{needed}; all {n_channels} hold no numbers (NaN).", "Check the export."
         )
@@ -148,6 +162,13 @@ def conclude(
         measured.faults,
         mark,
     )
+    evidence = _evidence(measured, model, judgement)
+    advice = advise(evidence)
+    verdicts, reasons = site_verdicts(evidence, advice)
+    sites = tuple(
+        dataclasses.replace(site, verdict=verdict, why=why)
+        for site, verdict, why in zip(sites, verdicts, reasons, strict=True)
+    )
     notes = [*recording.notes, *frame.notes]
     if implausible:
         notes.append(unit_note(amplitude))
@@ -164,12 +185,29 @@ def conclude(
         touched=touched_seconds(flags, end),
         flags=flags,
         sites=sites,
+        advice=advice,
         scores=Scores(
             kinds=KIND_NAMES,
             onset=measured.grid.onset,
             sites=frame.sites,
             probability=judgement.probability,
         ),
+    )
+
+
+def _evidence(measured: Measured, model: Model, judgement: Judgement) -> Evidence:
+    """What the search for electrode faults looks at; its operating points are fixed."""
+    table, conditions = measured.table, measured.conditions
+    return Evidence(
+        frame=measured.frame,
+        log=measured.log,
+        probability=judgement.probability,
+        doubtful=np.array([head.doubtful for head in model.heads]),
+        sure=np.array([head.sure for head in model.heads]),
+        pops=pop_moments(model, judgement.probability, table.step_at, measured.grid),
+        swing=table.column("swing"),
+        mains_ratio=table.column("mains_ratio"),
+        line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
     )
 
 
@@ -316,6 +354,7 @@ def triage_to_folder(
     from artifactlens.export.folder import prepared_folder, write_all
     from artifactlens.page.need import by_need
     from artifactlens.page.report import report_html
+    from artifactlens.page.sheet import sheet_html
 
     # What can fail at once fails before the long pass over the recording.
     _check_options(mark, line_frequency)
@@ -330,5 +369,11 @@ def triage_to_folder(
         chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
         traces = closeups(recording, measured.frame, [flag for flag, _ in chosen])
         page = report_html(result, traces)
-        write_all(result, target, start=recording.start, report_html=page)
+        write_all(
+            result,
+            target,
+            start=recording.start,
+            report_html=page,
+            sites_html=sheet_html(result),
+        )
     return result, target

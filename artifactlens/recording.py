@@ -93,6 +93,8 @@ class Recording:
     set_aside : tuple of (label, reason)
     notes : tuple of str
         Sentences for a person.
+    impedances_kohm : dict of str to float
+        By the electrode names of the file, where it states them.
     """
 
     name: str
@@ -110,6 +112,7 @@ class Recording:
     set_aside: tuple[tuple[str, str], ...]
     notes: tuple[str, ...]
     _read: Callable[[int, int], NDArray[np.float32]] = field(repr=False)
+    impedances_kohm: dict[str, float] = field(default_factory=dict, repr=False)
 
     @property
     def duration(self) -> float:
@@ -191,6 +194,7 @@ def from_raw(raw: mne.io.BaseRaw, name: str = "raw") -> Recording:
             set_aside=chosen.set_aside,
             notes=chosen.notes,
             _read=chosen.read,
+            impedances_kohm=chosen.impedances_kohm,
         )
     )
 

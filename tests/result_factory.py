@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 
 import numpy as np
 
+from artifactlens.advice import Advice
 from artifactlens.kinds import KIND_NAMES, KINDS
 from artifactlens.result import (
     Assessment,
@@ -15,6 +17,7 @@ from artifactlens.result import (
     RecordingFacts,
     Result,
     Scores,
+    Setup,
     SiteEvidence,
 )
 
@@ -262,5 +265,148 @@ def make_result(n_flags: int = 3, hostile: bool = False) -> Result:
             onset=np.arange(N_EPOCHS, dtype=np.float64),
             sites=tuple(names.values()),
             probability=probability,
+        ),
+    )
+
+
+# verdict, cause, sign, sites, confidence, state, stretches, reason, checks
+_ENTRIES: tuple[
+    tuple[
+        str,
+        str,
+        str,
+        tuple[str, ...],
+        str,
+        str,
+        tuple[tuple[float, float], ...],
+        str,
+        tuple[str, ...],
+    ],
+    ...,
+] = (
+    (
+        "check",
+        "ground",
+        "mains",
+        (),
+        "moderate",
+        "present",
+        ((0.0, 120.0),),
+        "mains at all sites with differing size, also between neighbours",
+        ("check the ground electrode", "cables", "devices near the bed"),
+    ),
+    (
+        "re-prep",
+        "site",
+        "pops",
+        ("P3",),
+        "high",
+        "present",
+        ((20.0, 118.0),),
+        "14 pops in 2 min, unlike its neighbours",
+        ("check the lead", "re-prep"),
+    ),
+    (
+        "re-prep",
+        "bridge",
+        "bridged",
+        ("F4", "C4"),
+        "high",
+        "present",
+        ((0.0, 70.0), (90.0, 120.0)),
+        "two traces nearly identical, beyond what their distance explains",
+        ("clean between", "re-prep both"),
+    ),
+    (
+        "check",
+        "placement",
+        "swapped",
+        ("T5", "T6"),
+        "low",
+        "present",
+        ((0.0, 120.0),),
+        "each behaves like the other's position",
+        ("check placement", "check the labels"),
+    ),
+    (
+        "ask",
+        "patient",
+        "muscle",
+        ("T3", "F7"),
+        "high",
+        "present",
+        ((40.0, 45.0), (60.0, 80.0), (90.0, 95.0)),
+        "muscle in 25 of 100 seconds",
+        ("ask to loosen the jaw", "a pillow for the neck"),
+    ),
+    (
+        "watch",
+        "site",
+        "drift",
+        ("O1",),
+        "moderate",
+        "cured",
+        ((30.0, 60.0),),
+        "slow drift that stopped when the electrode was handled",
+        ("look again in 10 min",),
+    ),
+)
+
+
+def with_advice(result: Result) -> Result:
+    """The result with six invented entries, site verdicts to match, impedances and a setup.
+
+    The ground comes first, then P3, a bridge F4 to C4, T5 and T6 perhaps swapped, muscle at
+    T3 and F7, and O1 whose drift was cured; of O2 nothing can be told.
+    """
+    spelled = dict(zip((*SITES, REFERENCE), (s.site for s in result.sites), strict=True))
+    advice = tuple(
+        Advice(
+            number=number,
+            verdict=verdict,
+            cause=cause,
+            sign=sign,
+            sites=tuple(spelled[site] for site in sites),
+            confidence=confidence,
+            state=state,
+            stretches=stretches,
+            share=sum(end - start for start, end in stretches) / N_EPOCHS,
+            reason=reason,
+            checks=checks,
+        )
+        for number, (
+            verdict,
+            cause,
+            sign,
+            sites,
+            confidence,
+            state,
+            stretches,
+            reason,
+            checks,
+        ) in enumerate(_ENTRIES, 1)
+    )
+    verdicts = dict.fromkeys(("P3", "F4", "C4"), "re-prep")
+    verdicts |= {"O1": "watch", "O2": "cannot tell"}
+    whys = {entry.sites[0]: entry.reason for entry in advice if entry.sites}
+    sites = tuple(
+        dataclasses.replace(
+            site,
+            verdict=verdicts.get(name, "leave"),
+            why="flat from 90 s on" if name == "O2" else whys.get(site.site, ""),
+            impedance_kohm=None if name == REFERENCE else 2.0 + 12.5 * (name == "P3"),
+        )
+        for name, site in zip(spelled, result.sites, strict=True)
+    )
+    return dataclasses.replace(
+        result,
+        advice=advice,
+        sites=sites,
+        setup=Setup(
+            seconds=120.0,
+            fit=tuple(spelled[name] for name in SITES if name not in ("P3", "O2")),
+            unfit=((spelled["P3"], "pops"),),
+            cannot_tell=(spelled["O2"],),
+            responses=("Blinks were seen at both frontal poles.",),
         ),
     )

@@ -12,7 +12,10 @@ from pathlib import Path
 import pytest
 
 import artifactlens
-from artifactlens import cli, pipeline
+from artifactlens import pipeline
+from artifactlens.cli import demo as cli_demo
+from artifactlens.cli import main
+from artifactlens.cli import triage as cli_triage
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.result import CAUTION
 
@@ -49,7 +52,7 @@ def test_help_names_both_commands_with_what_they_do_uncut(invoke):
     assert "not a medical device" in shown
 
 
-@pytest.mark.parametrize("name", sorted(cli.main.commands))
+@pytest.mark.parametrize("name", sorted(main.commands))
 @pytest.mark.parametrize("flag", ["-h", "--help"])
 def test_every_option_has_a_sentence_in_the_help_and_the_exit_codes_stand_there(
     invoke, name, flag
@@ -57,7 +60,7 @@ def test_every_option_has_a_sentence_in_the_help_and_the_exit_codes_stand_there(
     done = invoke(name, flag)
     assert done.exit_code == 0
     assert "Exit codes: 0 done; 1 some recording failed" in done.stdout
-    for option in cli.main.commands[name].params:
+    for option in main.commands[name].params:
         if option.param_type_name == "option" and option.name != "help":
             assert option.help.endswith(".")
             assert option.opts[0] in done.stdout
@@ -214,14 +217,14 @@ def test_each_recording_is_printed_before_the_next_one_begins(
         said.append(f"begin {path.name}")
         return whole(path, *args, **kwargs)
 
-    printed = cli._print_result
+    printed = cli_triage.print_result
 
     def printing(result, report):
         said.append(f"print {Path(report['recording']).name}")
         printed(result, report)
 
     monkeypatch.setattr(pipeline, "triage_to_folder", watched)
-    monkeypatch.setattr(cli, "_print_result", printing)
+    monkeypatch.setattr(cli_triage, "print_result", printing)
     assert invoke("triage", night, second).exit_code == 0
     assert said == [
         "begin night.edf", "print night.edf", "begin second.edf", "print second.edf",
@@ -328,7 +331,7 @@ def test_the_demo_goes_into_a_folder_of_its_own_where_none_is_named(
     invoke, tmp_path, monkeypatch
 ):
     monkeypatch.chdir(tmp_path)
-    monkeypatch.setattr(cli, "_triage_all", lambda *args: [])
+    monkeypatch.setattr(cli_demo, "triage_all", lambda *args: [])
     assert invoke("demo").exit_code == 0
     assert files_in(tmp_path) == ["artifactlens-demo"]
     assert files_in(tmp_path / "artifactlens-demo") == ["workshop.edf"]

@@ -22,10 +22,17 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from result_factory import PAIR, make_result
 
+from artifactlens.advice import CAUSES, SITE_VERDICTS, Advice
 from artifactlens.errors import OutputError, ResultError
 from artifactlens.export.atomic import probe_folder, write_atomically, write_together
 from artifactlens.export.flags_table import flags_columns_json, flags_tsv
-from artifactlens.export.folder import write_all
+from artifactlens.export.folder import (
+    SITES_FILES,
+    TRIAGE_FILES,
+    prepared_folder,
+    write_all,
+    write_sites,
+)
 from artifactlens.export.marks import CAUTION_TEXT, marks_edf, tal_bytes
 from artifactlens.export.one_line import one_line
 from artifactlens.export.scores import scores_npz
@@ -40,7 +47,8 @@ FLAG_HEADER = (
 FLAG_COLUMNS = FLAG_HEADER.split("\t")
 SITE_HEADER = (
     "site\tchannel\trole\tseconds_judged\teye_share\tmuscle_share\tpop_share\tmains_share\t"
-    "pops_per_minute\tmains_uv\tmains_db\tisolation_db\tfault"
+    "pops_per_minute\tmains_uv\tmains_db\tisolation_db\tfault\tverdict\tcause\twhy\tadvice\t"
+    "impedance_kohm"
 )
 SITE_COLUMNS = SITE_HEADER.split("\t")
 START = datetime(2031, 3, 4, 22, 5, 6)
@@ -187,17 +195,60 @@ def test_sites_tsv_holds_the_lines_worked_out_by_hand():
     # Fp1: 2 of 120 s eye; C3: 1 of 120 s pop; the reference: 1 of 120 s pop
     assert lines[1] == (
         "Fp1\tEEG Fp1-REF\tsite\t120.00\t"
-        "0.0167\t0.0000\t0.0000\tn/a\t0\t0.8125\t1.5\t0.4\tn/a"
+        "0.0167\t0.0000\t0.0000\tn/a\t0\t0.8125\t1.5\t0.4\tn/a\tleave\tn/a\tn/a\tn/a\tn/a"
     )
     assert lines[9] == (
         "C3\tEEG C3-REF\tsite\t120.00\t"
-        "0.0000\t0.0000\t0.0083\tn/a\t0.5\t0.8125\t1.5\t9.5\tn/a"
+        "0.0000\t0.0000\t0.0083\tn/a\t0.5\t0.8125\t1.5\t9.5\tn/a\tleave\tn/a\tn/a\tn/a\tn/a"
     )
-    assert lines[19].endswith("\tflat from 90 s on")
+    assert lines[19].endswith("\tflat from 90 s on\tleave\tn/a\tn/a\tn/a\tn/a")
     assert lines[20] == (
-        "reference\tn/a\treference\t120.00\t0.0000\t0.0000\t0.0083\tn/a\t0.5\tn/a\tn/a\tn/a\tn/a"
+        "reference\tn/a\treference\t120.00\t0.0000\t0.0000\t0.0083\tn/a\t0.5\tn/a\tn/a\tn/a"
+        "\tn/a\tleave\tn/a\tn/a\tn/a\tn/a"
     )
     assert lines[21:] == [""]
+
+
+def test_the_table_gives_each_site_its_verdict_and_the_first_entry_that_concerns_it():
+    result = make_result(0)
+    advice = [
+        Advice(number, verdict, cause, sign, sites, "high", "present", ((0.0, 60.0),), 0.5,
+               "seen", ("do",))
+        for number, verdict, cause, sign, sites in (
+            (1, "re-prep", "site", "pops", ("P3",)),
+            (2, "check", "ground", "mains", ()),
+            (3, "re-prep", "bridge", "bridged", ("F3", "P3")),
+            (4, "ask", "patient", "muscle", ("T3", "reference")),
+        )
+    ]  # fmt: skip
+    said = {
+        "P3": ("re-prep", "8 pops in 2 min"),
+        "Fp2": ("cannot tell", "@ the chain's end"),
+    }
+    rows = [
+        dataclasses.replace(
+            row,
+            verdict=said.get(row.site, ("leave", ""))[0],
+            why=said.get(row.site, ("", ""))[1],
+            impedance_kohm={"P3": 12.345, "F3": 0.0}.get(row.site),
+        )
+        for row in result.sites
+    ]
+    result = dataclasses.replace(result, sites=tuple(rows), advice=tuple(advice))
+    table = {row[0]: row[-5:] for row in _rows(sites_tsv(result))}
+    assert table["P3"] == ["re-prep", "site", "8 pops in 2 min", "1", "12.35"]
+    assert table["F3"] == ["leave", "bridge", "n/a", "3", "0"]
+    assert table["Fp2"] == ["cannot tell", "n/a", "_@ the chain's end", "n/a", "n/a"]
+    assert table["T3"][1::2] == table["reference"][1::2] == ["patient", "4"]
+    assert table["O1"] == ["leave", "n/a", "n/a", "n/a", "n/a"]
+
+
+def test_the_dictionary_of_the_sites_explains_every_word_of_the_advice():
+    entries = json.loads(sites_columns_json())
+    assert tuple(entries["verdict"]["Levels"]) == SITE_VERDICTS
+    assert tuple(entries["cause"]["Levels"]) == CAUSES
+    for name in ("verdict", "cause"):
+        assert all(text.endswith(".") for text in entries[name]["Levels"].values())
 
 
 def test_sites_tsv_reads_back_with_pandas():
@@ -232,6 +283,7 @@ def test_every_column_of_the_sites_has_an_entry_in_the_dictionary():
     } == {
         "seconds_judged": "s",
         "pops_per_minute": "1/min",
+        "impedance_kohm": "kOhm",
         "mains_uv": "uV",
         "mains_db": "dB",
         "isolation_db": "dB",
@@ -702,7 +754,10 @@ def test_writing_below_a_file_names_the_folder(tmp_path):
 
 def test_all_outputs_stand_in_the_folder_and_nothing_else(tmp_path):
     result = make_result(4)
-    paths = write_all(result, tmp_path / "new", start=START, report_html="<p>µ</p>")
+    folder = tmp_path / "new"
+    paths = write_all(
+        result, folder, start=START, report_html="<p>µ</p>", sites_html="<p>Ω</p>"
+    )
     assert {key: path.name for key, path in paths.items()} == {
         "flags": "flags.tsv",
         "flags_columns": "flags.json",
@@ -711,12 +766,14 @@ def test_all_outputs_stand_in_the_folder_and_nothing_else(tmp_path):
         "scores": "scores.npz",
         "marks": "invented-01_marks.edf",
         "report": "report.html",
+        "sheet": "sites.html",
         "result": "result.json",
     }
-    assert sorted((tmp_path / "new").iterdir()) == sorted(paths.values())
+    assert sorted(folder.iterdir()) == sorted(paths.values())
     assert paths["flags"].read_bytes() == flags_tsv(result).encode()
     assert paths["sites"].read_bytes() == sites_tsv(result).encode()
     assert paths["report"].read_bytes() == "<p>µ</p>".encode()
+    assert paths["sheet"].read_bytes() == "<p>Ω</p>".encode()
     assert paths["scores"].read_bytes() == scores_npz(result)
     texts = [entry.text for entry in edfio.read_edf(paths["marks"]).annotations]
     assert texts[1:] == [
@@ -729,10 +786,41 @@ def test_all_outputs_stand_in_the_folder_and_nothing_else(tmp_path):
     ]
 
 
+def test_the_folder_of_the_sites_holds_sheet_table_and_result(tmp_path):
+    result = make_result(2)
+    paths = write_sites(result, tmp_path / "new", sites_html="<p>Ω</p>")
+    assert {path.name for path in paths.values()} == SITES_FILES
+    assert sorted((tmp_path / "new").iterdir()) == sorted(paths.values())
+    assert paths["sheet"].read_text("utf-8") == "<p>Ω</p>"
+    assert paths["sites"].read_text("utf-8") == sites_tsv(result)
+    assert paths["sites_columns"].read_text("utf-8") == sites_columns_json()
+    assert Result.from_json(paths["result"].read_text("utf-8")) == result
+
+
+@pytest.mark.parametrize(
+    ("files", "foreign"),
+    [
+        (TRIAGE_FILES, {"thesis.docx"}),
+        (SITES_FILES, {"thesis.docx", "report.html", "x_marks.edf"}),
+    ],
+)
+def test_a_folder_is_taken_only_if_all_in_it_came_from_such_a_run(tmp_path, files, foreign):
+    for name in (".DS_Store", "._sites.html", ".0f.part", "result.json", "sites.tsv"):
+        (tmp_path / name).write_text("old")
+    with prepared_folder(tmp_path, files):
+        pass
+    for name in sorted(foreign):
+        (tmp_path / name).write_text("mine")
+        with pytest.raises(OutputError, match="holds other files") as caught:
+            prepared_folder(tmp_path, files).__enter__()
+        assert f"({name})" in caught.value.problem
+        (tmp_path / name).unlink()
+
+
 @pytest.mark.parametrize("hostile", [False, True])
 def test_the_written_result_reads_back_equal(tmp_path, hostile):
     result = make_result(5, hostile=hostile)
-    paths = write_all(result, tmp_path, start=None, report_html="")
+    paths = write_all(result, tmp_path, start=None, report_html="", sites_html="")
     assert Result.from_json(paths["result"].read_text("utf-8")) == result
 
 
@@ -755,7 +843,7 @@ def test_a_damaged_pair_is_refused_in_words(pair):
 
 def test_a_site_name_with_a_damaged_character_reads_back_equal(tmp_path):
     result = _with_flag(sites=("F\udc803",))
-    paths = write_all(result, tmp_path, start=None, report_html="")
+    paths = write_all(result, tmp_path, start=None, report_html="", sites_html="")
     assert Result.from_json(paths["result"].read_text("utf-8")) == result
 
 
@@ -765,15 +853,15 @@ def test_the_result_takes_its_place_last(tmp_path, monkeypatch):
     monkeypatch.setattr(
         os, "replace", lambda old, new: (placed.append(Path(new).name), replaced(old, new))
     )
-    write_all(make_result(), tmp_path, start=None, report_html="")
+    write_all(make_result(), tmp_path, start=None, report_html="", sites_html="")
     assert placed[-1] == "result.json"
-    assert len(placed) == 8
+    assert len(placed) == 9
 
 
 def test_scores_of_an_earlier_run_do_not_outlive_it(tmp_path):
-    write_all(make_result(), tmp_path, start=None, report_html="")
+    write_all(make_result(), tmp_path, start=None, report_html="", sites_html="")
     bare = dataclasses.replace(make_result(), scores=None)
-    paths = write_all(bare, tmp_path, start=None, report_html="")
+    paths = write_all(bare, tmp_path, start=None, report_html="", sites_html="")
     assert "scores" not in paths
     assert not (tmp_path / "scores.npz").exists()
 
@@ -796,29 +884,35 @@ def test_the_name_of_the_recording_cannot_lead_out_of_the_folder(tmp_path, name,
         result, recording=dataclasses.replace(result.recording, name=name)
     )
     folder = tmp_path / "out"
-    paths = write_all(result, folder, start=None, report_html="")
+    paths = write_all(result, folder, start=None, report_html="", sites_html="")
     assert paths["marks"] == folder / file_name
     assert list(tmp_path.iterdir()) == [folder]
-    assert len(list(folder.iterdir())) == 8
+    assert len(list(folder.iterdir())) == 9
 
 
 def test_a_file_in_place_of_the_folder_is_told_of_and_kept(tmp_path):
     (tmp_path / "out").write_text("mine")
     with pytest.raises(OutputError, match="a file stands there"):
-        write_all(make_result(), tmp_path / "out", start=None, report_html="")
+        write_all(
+            make_result(), tmp_path / "out", start=None, report_html="", sites_html=""
+        )
     assert (tmp_path / "out").read_text() == "mine"
 
 
 def test_equal_results_give_equal_bytes(tmp_path):
-    one = write_all(make_result(), tmp_path / "1", start=START, report_html="x")
-    two = write_all(make_result(), tmp_path / "2", start=START, report_html="x")
+    one = write_all(
+        make_result(), tmp_path / "1", start=START, report_html="x", sites_html="y"
+    )
+    two = write_all(
+        make_result(), tmp_path / "2", start=START, report_html="x", sites_html="y"
+    )
     assert {key: path.read_bytes() for key, path in one.items()} == {
         key: path.read_bytes() for key, path in two.items()
     }
 
 
 def test_the_caution_is_on_every_output_that_can_hold_text_beside_its_data(tmp_path):
-    paths = write_all(make_result(), tmp_path, start=None, report_html="")
+    paths = write_all(make_result(), tmp_path, start=None, report_html="", sites_html="")
     for key in ("result", "flags_columns", "sites_columns"):
         assert CAUTION in paths[key].read_text("utf-8")
     with np.load(paths["scores"]) as archive:

@@ -85,7 +85,7 @@ def head_svg(kind: str, sites: Sequence[SiteEvidence]) -> Markup:
     rim = rim_degrees(sites)
     spots = [(site, spot) for site in sites if (spot := place(site, rim)) is not None]
     size = _size([spot for _, spot in spots])
-    parts = [_outline()]
+    parts = [outline()]
     for site, spot in spots:
         square = site.role in ("reference", "ground")
         parts.append(_mark(site, kind, spot, size, square=square))
@@ -103,18 +103,23 @@ def head_svg(kind: str, sites: Sequence[SiteEvidence]) -> Markup:
     )
 
 
-def _size(spots: list[tuple[float, float]]) -> float:
-    """Radius of the marks: as large as the closest sites allow, one pair in ten aside."""
+def room(spots: Sequence[tuple[float, float]]) -> float:
+    """How far apart the closest sites stand, one in ten aside; infinite for a single one."""
     if len(spots) < 2:
-        return BIGGEST
+        return math.inf
     points = np.array(spots)
     apart = np.hypot(*(points[:, None] - points[None]).transpose(2, 0, 1))
     np.fill_diagonal(apart, np.inf)
-    nearest = float(np.quantile(apart.min(axis=1), 0.1))
-    return min(BIGGEST, max(SMALLEST, 0.44 * nearest))
+    return float(np.quantile(apart.min(axis=1), 0.1))
 
 
-def _outline() -> Markup:
+def _size(spots: list[tuple[float, float]]) -> float:
+    """Radius of the marks: as large as the closest sites allow."""
+    return min(BIGGEST, max(SMALLEST, 0.44 * room(spots)))
+
+
+def outline() -> Markup:
+    """The head from above with nose and ears."""
     (x, y), r = CENTRE, RADIUS
     nose = f"M{x - 13:g} {y - r + 1:g}L{x:g} {y - r - 17:g}L{x + 13:g} {y - r + 1:g}"
     ears = "".join(

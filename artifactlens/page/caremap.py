@@ -1,0 +1,401 @@
+"""The head of the technologist's sheet: shapes tell verdicts, numbers the order of work."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from itertools import pairwise
+
+from markupsafe import Markup
+
+from artifactlens.advice import VERDICTS, Advice
+from artifactlens.page.headmap import (
+    CENTRE,
+    RADIUS,
+    outline,
+    place,
+    placed_below,
+    rim_degrees,
+    room,
+    unplaced,
+)
+from artifactlens.page.svg import joined, tag
+from artifactlens.page.words import cut, number
+from artifactlens.result import Result, SiteEvidence
+
+SHAPES: dict[str, tuple[str, str]] = {
+    "re-prep": ("filled square", "prepare again"),
+    "check": ("triangle", "look here before re-prepping"),
+    "ask": ("diamond", "ask the patient, no re-prep"),
+    "watch": ("double ring", "wait, look again"),
+    "cannot tell": ("dotted ring with ?", "not judged, see below"),
+    "leave": ("small ring", "nothing to do"),
+}
+"""Every verdict, the shape it is drawn as, and what it asks for."""
+
+LINES: dict[str, tuple[str, str]] = {
+    "bridged": ("double line", "clean between, re-prep both"),
+    "swapped": ("broken arrow", "perhaps: check placement"),
+}
+
+TOP, HEIGHT = 9.0, 326.0
+HEAD_FROM, HEAD_TO = CENTRE[0] - RADIUS - 15, CENTRE[0] + RADIUS + 15
+"""From ear to ear."""
+
+BELOW, MOST_BELOW = 303.0, 6
+NAMED, MEASURED = 17.0, 28.0
+"""Room between sites from which untroubled ones keep their name, and all their impedance."""
+
+_LETTER = 0.6
+"""Width of a character over its height, for keeping names apart; wide on purpose."""
+
+Spot = tuple[float, float]
+Box = tuple[float, float, float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class Mark:
+    """A site on the map, with the entries of the list that concern it, the gravest first."""
+
+    site: SiteEvidence
+    entries: tuple[Advice, ...]
+
+    @property
+    def verdict(self) -> str:
+        """What the gravest of its entries asks for, else what is said of the site."""
+        return self.entries[0].verdict if self.entries else self.site.verdict
+
+
+def marks(result: Result) -> list[Mark]:
+    """All sites, and whatever else an entry needs a place for; there is always a ground."""
+    rows = list(result.sites)
+    if not any(site.role == "ground" for site in rows):
+        rows.append(_stand_in("ground", "ground"))
+    found = {entry.number: concerned(entry, rows) for entry in result.advice}
+    for entry in result.advice:
+        if not found[entry.number]:
+            role = "reference" if entry.cause == "reference" else "unknown"
+            rows.append(_stand_in(entry.subject, role))
+            found[entry.number] = [rows[-1]]
+    ordered = sorted(result.advice, key=_gravity)
+    return [
+        Mark(row, tuple(e for e in ordered if any(row is one for one in found[e.number])))
+        for row in rows
+    ]
+
+
+def _gravity(entry: Advice) -> tuple[bool, int, int]:
+    """A site that is to be re-prepped shows so, whatever else is asked before."""
+    return entry.state == "cured", VERDICTS.index(entry.verdict), entry.number
+
+
+def concerned(entry: Advice, sites: Sequence[SiteEvidence]) -> list[SiteEvidence]:
+    """The rows that an entry is about, in the order in which it names them."""
+    if entry.cause == "ground":
+        return [site for site in sites if site.role == "ground"]
+    named = [site for name in entry.sites for site in sites if site.site == name]
+    if entry.cause == "reference" and not named:
+        return [site for site in sites if site.role == "reference"]
+    return named
+
+
+def _stand_in(name: str, role: str) -> SiteEvidence:
+    return SiteEvidence(
+        site=name,
+        channel=None,
+        canonical=None,
+        role=role,
+        position=None,
+        seconds_judged=0.0,
+        share={},
+        pops_per_minute=None,
+        mains_uv=None,
+        mains_db=None,
+        isolation_db=None,
+        fault="",
+    )
+
+
+def spots(shown: Sequence[Mark]) -> dict[int, Spot]:
+    """Where each mark stands, by its index; those missing have no place in the picture.
+
+    Below the head stand the ground and reference, then others without a known place that
+    the list speaks of, as many as there is room for.
+    """
+    sites = [mark.site for mark in shown]
+    rim = rim_degrees(sites)
+    found = {
+        index: spot
+        for index, site in enumerate(sites)
+        if (spot := place(site, rim)) is not None
+    }
+    wanted = [*placed_below(sites), *unplaced(sites)]
+    below = [
+        index
+        for site in wanted
+        for index, mark in enumerate(shown)
+        if mark.site is site and (mark.entries or site.role in ("reference", "ground"))
+    ][:MOST_BELOW]
+    step = min(74.0, 2 * RADIUS / max(1, len(below)))
+    for rank, index in enumerate(below):
+        found[index] = (CENTRE[0] + step * (rank - (len(below) - 1) / 2), BELOW)
+    return found
+
+
+def care_svg(shown: Sequence[Mark], advice: Sequence[Advice]) -> Markup:
+    """The whole map: outline, lines between sites, marks, names."""
+    at = spots(shown)
+    wide = room([spot for spot in at.values() if spot[1] < BELOW])
+    size, _ = sizes(wide)
+    left = min([HEAD_FROM, *(x - 1.5 * size for x, _ in at.values())])
+    right = max([HEAD_TO, *(x + 1.5 * size for x, _ in at.values())])
+    lines = _lines(shown, at, advice)
+    # The quiet ones lie beneath, the first to be worked on lie on top.
+    order = sorted(at, key=lambda index: -_urgency(shown[index]))
+    return tag(
+        "svg",
+        outline(),
+        joined([line(sign, *ends, size) for sign, ends in lines]),
+        joined([_mark(shown[index], at[index], size) for index in order]),
+        joined(_names(shown, at, [ends for _, ends in lines], wide, (left, right))),
+        class_="care",
+        viewBox=f"{left:.4g} {TOP:g} {right - left:.4g} {HEIGHT:g}",
+        role="img",
+        aria_label=_aloud(shown),
+    )
+
+
+def sizes(wide: float) -> tuple[float, float]:
+    """Half the width of a mark, and the height of letters, for so much room between sites."""
+    return _within(0.27 * wide, 7.5, 15.0), _within(0.3 * wide, 8.5, 14.0)
+
+
+def _within(value: float, least: float, most: float) -> float:
+    return min(most, max(least, value))
+
+
+def _urgency(mark: Mark) -> float:
+    return mark.entries[0].number if mark.entries else math.inf
+
+
+def symbol(verdict: str, x: float, y: float, r: float, words: str = "") -> Markup:
+    """The shape of a verdict about a middle, with a number or nothing inside."""
+    fit = r * {1: 1.3, 2: 1.1}.get(len(words), 0.85)
+    if verdict == "re-prep":
+        shape = tag("rect", x=x - r, y=y - r, width=2 * r, height=2 * r, class_="solid")
+        return joined([shape, _inside(words, x, y, fit, "inside inverse")])
+    if verdict == "check":
+        d = f"M{x:.2f} {y - 1.35 * r:.2f}l{1.35 * r:.2f} {2.3 * r:.2f}h{-2.7 * r:.2f}z"
+        shape = tag("path", d=d, class_="edge", stroke_width=0.28 * r)
+        return joined([shape, _inside(words, x, y + 0.28 * r, 0.78 * fit, "inside")])
+    if verdict == "ask":
+        far = 1.3 * r
+        side = f"l{far:.2f} {far:.2f}l{-far:.2f} {far:.2f}l{-far:.2f} {-far:.2f}z"
+        d = f"M{x:.2f} {y - far:.2f}{side}"
+        shape = tag("path", d=d, class_="edge", stroke_width=0.12 * r)
+        return joined([shape, _inside(words, x, y, 0.85 * fit, "inside")])
+    if verdict == "watch":
+        rings = [
+            tag("circle", cx=x, cy=y, r=far * r, class_="edge", stroke_width=0.11 * r)
+            for far in (1.05, 0.8)
+        ]
+        return joined([*rings, _inside(words, x, y, 0.8 * fit, "inside")])
+    if verdict == "cannot tell":
+        dots = f"{0.12 * r:.2f} {0.34 * r:.2f}"
+        ring = tag(
+            "circle", cx=x, cy=y, r=0.8 * r, class_="edge dotted", stroke_dasharray=dots
+        )
+        return joined([ring, _inside(words or "?", x, y, r, "inside")])
+    return tag("circle", cx=x, cy=y, r=0.42 * r, class_="edge", stroke_width=1)
+
+
+def _inside(words: str, x: float, y: float, height: float, look: str) -> Markup:
+    if not words:
+        return Markup("")
+    return tag("text", words, x=x, y=y + 0.35 * height, font_size=height, class_=look)
+
+
+def _mark(mark: Mark, spot: Spot, size: float) -> Markup:
+    (x, y), site = spot, mark.site
+    told = f"{cut(site.site)}: {mark.verdict}"
+    if mark.entries:
+        told += f", number {', '.join(str(entry.number) for entry in mark.entries)}"
+    elif site.why:
+        told += f", {cut(site.why, 120)}"
+    words = str(mark.entries[0].number) if mark.entries else ""
+    parts = [tag("title", told), symbol(mark.verdict, x, y, size, words)]
+    if site.role == "ground":
+        # The sign for earth on every plug and box: three bars that grow shorter.
+        at = f"{x + 1.5 * size:.2f} {y:.2f}"
+        d = f"M{at}h9m-2 2.6h-5m1.7 2.6h1.6M{x + 1.5 * size + 4.5:.2f} {y:.2f}v-7"
+        parts.append(tag("path", d=d, class_="earth"))
+    numbers = " ".join(str(entry.number) for entry in mark.entries)
+    return tag("g", joined(parts), data_verdict=mark.verdict, data_number=numbers or None)
+
+
+def _lines(
+    shown: Sequence[Mark], at: dict[int, Spot], advice: Sequence[Advice]
+) -> list[tuple[str, tuple[Spot, Spot]]]:
+    """Which sites are joined: the sign, and both ends."""
+    lines = []
+    for entry in advice:
+        ends = {
+            shown[index].site.site: spot
+            for index, spot in at.items()
+            if entry in shown[index].entries and entry.sign in LINES
+        }
+        named = [name for name in entry.sites if name in ends]
+        lines += [(entry.sign, (ends[a], ends[b])) for a, b in pairwise(named)]
+    return lines
+
+
+def line(sign: str, start: Spot, end: Spot, size: float) -> Markup:
+    """What joins two sites: a heavy double line, or a broken one with a head at each end."""
+    (ax, ay), (bx, by) = start, end
+    far = math.hypot(bx - ax, by - ay) or 1.0
+    ux, uy = (bx - ax) / far, (by - ay) / far
+    if sign == "bridged":
+        d = f"M{ax:.2f} {ay:.2f}L{bx:.2f} {by:.2f}"
+        return tag(
+            "g",
+            tag("path", d=d, class_="stroke", stroke_width=0.75 * size),
+            tag("path", d=d, class_="gap", stroke_width=0.3 * size),
+            data_line=sign,
+        )
+    off = min(1.55 * size, 0.3 * far)
+    ax, ay, bx, by = ax + off * ux, ay + off * uy, bx - off * ux, by - off * uy
+    heads = "".join(
+        f"M{x + h * (turn * ux - 0.6 * uy):.2f} {y + h * (turn * uy + 0.6 * ux):.2f}"
+        f"L{x:.2f} {y:.2f}"
+        f"L{x + h * (turn * ux + 0.6 * uy):.2f} {y + h * (turn * uy - 0.6 * ux):.2f}"
+        for x, y, turn in ((ax, ay, 1), (bx, by, -1))
+        for h in (0.62 * size,)
+    )
+    return tag(
+        "g",
+        tag(
+            "path",
+            d=f"M{ax:.2f} {ay:.2f}L{bx:.2f} {by:.2f}",
+            class_="stroke",
+            stroke_width=0.17 * size,
+            stroke_dasharray=f"{0.5 * size:.2f} {0.35 * size:.2f}",
+        ),
+        tag("path", d=heads, class_="stroke", stroke_width=0.17 * size),
+        data_line=sign,
+    )
+
+
+def _names(
+    shown: Sequence[Mark],
+    at: dict[int, Spot],
+    lines: Sequence[tuple[Spot, Spot]],
+    wide: float,
+    sides: tuple[float, float],
+) -> list[Markup]:
+    """Names beside the marks: all of those with a verdict, the others where there is room."""
+    size, letters = sizes(wide)
+    loud = {index for index in at if shown[index].verdict != "leave"}
+    marks_ = {
+        index: _about(at[index], size if index in loud else 0.42 * size) for index in at
+    }
+    taken = [marks_[index] for index in at if index in loud]
+    taken += [_about(spot, 0.25 * size) for ends in lines for spot in _along(*ends, size)]
+    faint = [marks_[index] for index in at if index not in loud]
+    names = []
+    for index in sorted(at, key=lambda index: (_urgency(shown[index]), index)):
+        mark, below = shown[index], at[index][1] == BELOW
+        if index not in loud and wide < NAMED and not below:
+            continue
+        name = cut(mark.site.site, 14 if below else 8)
+        also = "".join(f" +{entry.number}" for entry in mark.entries[1:3])
+        ohms = mark.site.impedance_kohm
+        told = (
+            f" {number(ohms)}" if ohms is not None and (wide >= MEASURED or below) else ""
+        )
+        length = _LETTER * letters * (len(name) + 0.85 * len(also + told))
+        tall = _reach(mark.verdict) * size
+        places = _beside(at[index], length, letters, tall, sides)
+        box = _free(places, taken + faint)
+        if box is None and index not in loud:
+            continue
+        if box is None:
+            box = _free(places, taken) or min(places, key=lambda one: _shared(one, taken))
+        taken.append(box)
+        small = [
+            tag("tspan", words, class_=look, font_size=0.85 * letters)
+            for words, look in ((also, "also"), (told, "ohms"))
+            if words
+        ]
+        names.append(
+            tag(
+                "text",
+                name,
+                *small,
+                x=(box[0] + box[2]) / 2,
+                y=box[3] - 0.2 * letters,
+                font_size=letters,
+                class_="name" if index in loud else "name quiet",
+            )
+        )
+    return names
+
+
+def _about(spot: Spot, r: float) -> Box:
+    return spot[0] - r, spot[1] - r, spot[0] + r, spot[1] + r
+
+
+def _along(start: Spot, end: Spot, step: float) -> list[Spot]:
+    """Points on a line, close enough together to keep names off it."""
+    (ax, ay), (bx, by) = start, end
+    n = max(2, math.ceil(math.hypot(bx - ax, by - ay) / (0.4 * step)))
+    return [(ax + (bx - ax) * i / n, ay + (by - ay) * i / n) for i in range(1, n)]
+
+
+def _reach(verdict: str) -> float:
+    """How far a shape reaches up and down, in sizes."""
+    return {"re-prep": 1.0, "check": 1.0, "ask": 1.3, "leave": 0.42}.get(verdict, 1.1)
+
+
+def _beside(
+    spot: Spot, length: float, letters: float, tall: float, sides: tuple[float, float]
+) -> list[Box]:
+    """Places of a name: below, above, beside its mark, then askew, all inside the picture."""
+    (x, y), half, rise = spot, length / 2, letters
+    under, over = y + tall + 1, y - 1.3 * tall - 1 - rise
+    right, left = x + 1.3 * tall + 1.5, x - 1.3 * tall - 1.5 - length
+    level = y - rise / 2
+    corners = [(x - half, under), (x - half, over), (right, level), (left, level)]
+    corners += [(x, under), (x - length, under), (x, over), (x - length, over)]
+    held = [
+        (_within(corner, sides[0] + 1, sides[1] - 1 - length), top)
+        for corner, top in corners
+    ]
+    return [(corner, top, corner + length, top + rise) for corner, top in held]
+
+
+def _free(places: Sequence[Box], taken: Sequence[Box]) -> Box | None:
+    """The first place that touches nothing."""
+    return next((box for box in places if _shared(box, taken) == 0), None)
+
+
+def _shared(box: Box, taken: Sequence[Box]) -> float:
+    """Area that a box shares with others."""
+    return sum(
+        max(0.0, min(box[2], other[2]) - max(box[0], other[0]))
+        * max(0.0, min(box[3], other[3]) - max(box[1], other[1]))
+        for other in taken
+    )
+
+
+def _aloud(shown: Sequence[Mark]) -> str:
+    """What the map shows, for those who hear it."""
+    told = [
+        f"{cut(mark.site.site, 16)} {mark.verdict}"
+        for mark in sorted(shown, key=_urgency)
+        if mark.verdict != "leave"
+    ]
+    if not told:
+        return "Head from above: nothing to do at any site"
+    rest = f" and {len(told) - 12} more" if len(told) > 12 else ""
+    return f"Head from above: {', '.join(told[:12])}{rest}"

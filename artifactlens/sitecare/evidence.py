@@ -1,0 +1,119 @@
+"""All that the search for electrode faults looks at, and what it finds."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.kinds import KIND_NAMES
+
+if TYPE_CHECKING:
+    from artifactlens.frames import Frame
+    from artifactlens.sitecare.signs import SignLog
+
+Bools = NDArray[np.bool_]
+Array = NDArray[np.float64]
+
+REST_SHARE = 0.5
+"""A stretch counts for a site if the site was there for this part of it."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Evidence:
+    """What is known of a recording, or of the last minutes of a stream.
+
+    Attributes
+    ----------
+    frame, log
+        The sites, and their signs.
+    probability : array, shape (n_kinds, n_epochs, n_sites)
+        NaN where not judged.
+    doubtful, sure : array, shape (n_kinds,)
+        Operating points.
+    pops : tuple of (float, tuple of int)
+        Moment in seconds and rows of every pop.
+    swing : array, shape (n_epochs, n_sites), microvolt
+    mains_ratio : array, shape (n_epochs, n_sites), decibel
+    line_frequency : float or None
+        None where mains is not carried.
+    """
+
+    frame: Frame
+    log: SignLog
+    probability: NDArray[np.float32]
+    doubtful: Array
+    sure: Array
+    pops: tuple[tuple[float, tuple[int, ...]], ...]
+    swing: NDArray[np.float32]
+    mains_ratio: NDArray[np.float32]
+    line_frequency: float | None
+
+    def judged(self, kind: str) -> bool:
+        """Whether a kind is judged at all."""
+        return bool(np.isfinite(self.probability[KIND_NAMES.index(kind)]).any())
+
+    def marked(self, kind: str, *, doubtful: bool = True) -> Bools:
+        """Where a kind reaches an operating point, (n_epochs, n_sites)."""
+        row = KIND_NAMES.index(kind)
+        limit = (self.doubtful if doubtful else self.sure)[row]
+        return np.nan_to_num(self.probability[row], nan=-1.0) >= limit
+
+    def references(self) -> Bools:
+        """Which rows are reference electrodes, (n_sites,)."""
+        return np.array([role == "reference" for role in self.frame.roles])
+
+    def present(self) -> Bools:
+        """Which sites were there for most of each stretch, (n_stretches, n_sites)."""
+        return self.log.mean(self.log.signs.ok) >= REST_SHARE
+
+    def site_faults(self, fault: Bools) -> Bools:
+        """Epochs in which *all* channels of a site have a fault, (n_epochs, n_sites).
+
+        One faulty derivation does not tell which of its two electrodes is to blame; where a
+        site's other derivations are sound, neither is.
+        """
+        touches = self.frame.incidence != 0
+        if self.frame.montage == "average":
+            touches = self.frame.incidence > 0.5
+        faulty = fault.astype(np.float32) @ touches.astype(np.float32)
+        count = touches.sum(axis=0)
+        return (faulty >= count - 0.5) & (count > 0)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Finding:
+    """One thing that is wrong, before it becomes advice.
+
+    Attributes
+    ----------
+    cause, sign : str
+        Words of :mod:`artifactlens.advice`.
+    rows : tuple of int
+        Sites concerned, the first one most; empty for the ground.
+    held : array, shape (n_stretches,), bool
+        When it was so.
+    known : array, shape (n_stretches,), bool
+        When it could be told.
+    plain : bool
+        Whether it is strong enough to act upon.
+    weight : float
+        Orders findings of one kind: larger is worse.
+    reason : str
+        What was measured, a clause.
+    lasting : bool
+        False for what comes and goes, such as pops: it is present until it has been away for
+        long.
+    """
+
+    cause: str
+    sign: str
+    rows: tuple[int, ...]
+    held: Bools
+    known: Bools
+    plain: bool
+    weight: float
+    reason: str
+    lasting: bool = True

@@ -1,0 +1,122 @@
+"""Mains: at a few sites, in the reference, or from ground and surroundings.
+
+Every site's complex amplitude at the line frequency is compared with the median of all. What
+a common reference puts into all channels alike, in size and phase, is then left at the
+reference's own row; a single bad site is left at its row; a fault of the ground, or a device
+near by, leaves sizes and phases that differ from site to site and survive any derivation.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.epochs import median_of_known
+from artifactlens.sitecare.evidence import Evidence, Finding
+
+EVERYWHERE_UV = 2.0
+PLAIN_UV = 4.0
+"""Amplitude (half of peak to peak) at the line from which mains at many sites, or at one,
+is acted upon."""
+
+ALONE_UV = 1.0
+ALONE_TIMES = 3.0
+PLAIN_ALONE_UV, PLAIN_ALONE_TIMES = 1.5, 8.0
+"""A site is named for mains of this size, if it is so many times that of the other sites; it
+is acted upon if it is large, or far larger than elsewhere."""
+
+LEAST_RATIO_DB = 6.0
+EVERYWHERE = 0.5
+"""Mains at this share of the sites is a matter of ground and surroundings."""
+
+FEW = 0.25
+"""Up to this share of the sites, each has its own trouble."""
+
+
+def own_hum(hum: NDArray[np.complexfloating], ok: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """Amplitude of each site beyond the complex median of all, (n_epochs, n_sites), uV.
+
+    In a frame of mean zero a site with an amplitude A leaks A / n to all others: the median
+    over the sites takes that off again. Median of real and imaginary part.
+    """
+    real = median_of_known(np.where(ok, hum.real, np.nan).T)
+    imaginary = median_of_known(np.where(ok, hum.imag, np.nan).T)
+    middle = (real + 1j * imaginary)[:, None]
+    return np.where(ok, np.abs(hum - middle), np.nan)
+
+
+def hums(evidence: Evidence) -> list[Finding]:
+    """Sites, reference or ground with mains."""
+    log, frame = evidence.log, evidence.frame
+    if evidence.line_frequency is None or len(frame.sites) < 3:
+        return []
+    reference = evidence.references()
+    size = log.mean(own_hum(log.signs.hum, log.signs.ok & _in_large_chain(evidence)))
+    ratio = log.mean(evidence.mains_ratio)
+    known = np.isfinite(size)
+    scalp = ~reference
+    usual = median_of_known(size[:, scalp].T).astype(np.float64)[:, None]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        hums = known & (ratio >= LEAST_RATIO_DB)
+        held = hums & (size >= EVERYWHERE_UV)
+        times = size / usual
+        alone = hums & (size >= ALONE_UV) & (times >= ALONE_TIMES)
+    share = held[:, scalp].sum(axis=1) / np.maximum(known[:, scalp].sum(axis=1), 1)
+    everywhere = share > EVERYWHERE
+    line = f"{evidence.line_frequency:.3g} Hz"
+    found = []
+    if everywhere.any():
+        strongest = np.fmax.reduce(size[everywhere][:, scalp], axis=1)
+        least = np.fmin.reduce(size[everywhere][:, scalp], axis=1)
+        count = int(np.median(held[everywhere][:, scalp].sum(axis=1)))
+        found.append(
+            Finding(
+                cause="ground",
+                sign="mains",
+                rows=(),
+                held=everywhere,
+                known=known.any(axis=1),
+                plain=bool(np.median(strongest) >= PLAIN_UV),
+                weight=float(np.median(strongest)),
+                reason=(
+                    f"mains at {line} at {count} of {int(scalp.sum())} sites, "
+                    f"{np.median(least):.2g} to {np.median(strongest):.2g} uV, of differing "
+                    "size and phase, so it is left in any derivation"
+                ),
+            )
+        )
+    alone &= ~everywhere[:, None]
+    crowd = alone[:, scalp].sum(axis=1) > max(3, FEW * scalp.sum())
+    for row in np.flatnonzero(alone.any(axis=0)):
+        when = alone[:, row]
+        uv = float(np.median(size[when, row]))
+        elsewhere = float(np.median(usual[when]))
+        far = uv >= PLAIN_ALONE_UV and np.median(times[when, row]) >= PLAIN_ALONE_TIMES
+        at_reference = bool(reference[row])
+        if at_reference:
+            what = (
+                f"mains at {line}, {uv:.2g} uV, in every channel alike in size and phase, "
+                f"and {elsewhere:.1g} uV at the usual site beside that"
+            )
+        else:
+            what = f"mains at {line}, {uv:.2g} uV, where the usual site has {elsewhere:.1g} uV"
+        found.append(
+            Finding(
+                cause="reference" if at_reference else "site",
+                sign="mains",
+                rows=(int(row),),
+                held=when,
+                known=known[:, row],
+                plain=bool(uv >= PLAIN_UV or far) and not bool(np.all(crowd[when])),
+                weight=uv * float(when.mean()),
+                reason=what,
+            )
+        )
+    return found
+
+
+def _in_large_chain(evidence: Evidence) -> NDArray[np.bool_]:
+    """Sites of chains with at least five electrodes: a median of fewer tells nothing."""
+    chain = evidence.frame.chain
+    size = np.bincount(chain)
+    return np.asarray(chain == int(size.argmax())) & (size.max() >= 5)

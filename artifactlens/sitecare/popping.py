@@ -1,0 +1,116 @@
+"""Pops, and leads that make and lose contact."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.epochs import median_of_known
+from artifactlens.sitecare.evidence import Evidence, Finding
+
+PLAIN_POPS = 3
+"""From so many pops on an electrode is prepared again; fewer are watched."""
+
+PLAIN_PER_MINUTE = 0.5
+WILD_UV = 150.0
+WILD_RATIO = 5.0
+"""A second is wild at a site that swings by this much, and this many times the median site."""
+
+LOOSE_SECONDS = 3
+"""Wild seconds from which a popping site is called a loose lead."""
+
+MUSCLE_NEAR_SECONDS = 1
+
+
+def popping(evidence: Evidence) -> list[Finding]:
+    """Sites and references that pop; those that also run wild are loose leads."""
+    log, frame = evidence.log, evidence.frame
+    n = len(frame.sites)
+    epochs, rows = _pop_cells(evidence)
+    pops = np.zeros((len(log.onset), n))
+    np.add.at(pops, (epochs, rows), 1)
+    wild = _wild(evidence)
+    per_stretch = log.total(pops)
+    wild_stretch = log.total(wild)
+    known = evidence.present()
+    judged = np.isfinite(evidence.probability[2]).sum(axis=0)
+    found = []
+    for row in range(n):
+        count = int(per_stretch[:, row].sum())
+        bad = int(wild_stretch[:, row].sum())
+        busy = _busiest(log.onset, wild[:, row])
+        loose = busy >= LOOSE_SECONDS and (count >= 1 or busy >= 2 * LOOSE_SECONDS)
+        if not (count or loose):
+            continue
+        held = (per_stretch[:, row] > 0) | (loose & (wild_stretch[:, row] > 0))
+        minutes = max(judged[row] / 60, 1 / 6)
+        often = count >= PLAIN_POPS and _busiest(log.onset, pops[:, row]) >= PLAIN_POPS
+        span = _span_words(minutes)
+        noun = "pop" if count == 1 else "pops"
+        if loose:
+            reason = f"comes and goes: {bad} wild seconds and {count} {noun} in {span}"
+        else:
+            reason = f"{count} {noun} in {span}"
+        at_reference = frame.roles[row] == "reference"
+        reason += " in every channel alike" if at_reference else ", unlike its neighbours"
+        found.append(
+            Finding(
+                cause="reference" if at_reference else "site",
+                sign="loose lead" if loose else "pops",
+                rows=(row,),
+                held=held,
+                known=known[:, row] | held,
+                plain=often or loose,
+                weight=count / minutes + 2.0 * bad / minutes,
+                reason=reason,
+                lasting=False,
+            )
+        )
+    return found
+
+
+def _pop_cells(evidence: Evidence) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Epoch and row of every pop that is no spike of muscle."""
+    pairs = [(moment, row) for moment, rows in evidence.pops for row in rows]
+    if not pairs:
+        nothing = np.zeros(0, dtype=np.intp)
+        return nothing, nothing
+    moments = np.array([moment for moment, _ in pairs])
+    rows = np.array([row for _, row in pairs], dtype=np.intp)
+    onset = evidence.log.onset
+    epochs = np.clip(np.searchsorted(onset, moments, side="right") - 1, 0, len(onset) - 1)
+    muscle = evidence.marked("muscle")
+    near = muscle.copy()
+    for shift in range(1, MUSCLE_NEAR_SECONDS + 1):
+        near[shift:] |= muscle[:-shift]
+        near[:-shift] |= muscle[shift:]
+    # Muscle at the site alone may be the fault itself; among others it is muscle.
+    among = near.sum(axis=1) >= 2
+    keep = ~(near[epochs, rows] & among[epochs])
+    return epochs[keep], rows[keep]
+
+
+def _wild(evidence: Evidence) -> NDArray[np.bool_]:
+    """Seconds in which a site swings far beyond all others, (n_epochs, n_sites)."""
+    swing = evidence.swing.astype(np.float64)
+    if swing.shape[1] < 3:
+        return np.zeros(swing.shape, dtype=bool)
+    usual = median_of_known(swing.T)[:, None]
+    second = np.partition(np.nan_to_num(swing), -2, axis=1)[:, -2:-1]
+    # Eye movements may reach one frontal pole twice as much as the other.
+    times = np.where(evidence.marked("eye"), 4.0, 2.0)
+    with np.errstate(invalid="ignore"):
+        wild = (swing > WILD_UV) & (swing > WILD_RATIO * usual) & (swing > times * second)
+    return np.asarray(wild)
+
+
+def _busiest(onset: NDArray[np.float64], count: NDArray[np.generic]) -> float:
+    """Most events within any stretch of time in which ``PLAIN_PER_MINUTE`` asks for three."""
+    window = PLAIN_POPS / PLAIN_PER_MINUTE * 60
+    total = np.concatenate([[0.0], np.cumsum(count, dtype=np.float64)])
+    last = np.searchsorted(onset, onset + window)
+    return float((total[last] - total[:-1]).max(initial=0.0))
+
+
+def _span_words(minutes: float) -> str:
+    return f"{minutes:.0f} min" if minutes >= 1.5 else f"{60 * minutes:.0f} s"

@@ -1,0 +1,198 @@
+"""What the electrodes themselves show, second by second, beside the features of the model.
+
+The log of a recording holds little per second, so that it stays small over a day and can be
+cut to the last minutes of a stream: who was lost, flat or clipped, the slow level, mains as
+a complex amplitude, and, per stretch of some seconds, the covariance of the sites. From that
+covariance follow the electrical distance of any two sites, what a site shows that no other
+does, and which place it fits.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from artifactlens.features import mains_is_carried
+from artifactlens.features.spatial import field_covariance, slow_traces
+
+if TYPE_CHECKING:
+    from artifactlens.epochs import EpochBatch
+    from artifactlens.frames import Frame
+    from artifactlens.survey import Conditions
+
+Array = NDArray[np.float32]
+Bools = NDArray[np.bool_]
+
+LEVELS_PER_SECOND = 2
+
+STRETCH_SECONDS = 10.0
+"""Time over which sites are compared: long enough for a stable correlation, short enough to
+see when a fault began."""
+
+LONGEST_LOG = 64e6
+"""Bytes that the covariances of a recording may take; longer ones get longer stretches."""
+
+
+@dataclass(frozen=True, slots=True)
+class Signs:
+    """Signs of a few neighbouring seconds, or of a recording's.
+
+    Attributes
+    ----------
+    ok : array, shape (n_epochs, n_sites), bool
+    flat, missing, clipped : array, shape (n_epochs, n_channels), bool
+        Of the used channels.
+    level : array, shape (n_epochs, 2, n_sites), microvolt
+        Mean of each half second.
+    hum : array, shape (n_epochs, n_sites), complex microvolt
+        Amplitude and phase at the line frequency; zeros where mains is not carried. Phases
+        compare within an epoch only.
+    """
+
+    ok: Bools
+    flat: Bools
+    missing: Bools
+    clipped: Bools
+    level: Array
+    hum: NDArray[np.complex64]
+
+
+def signs_of(
+    batch: EpochBatch, frame: Frame, conditions: Conditions
+) -> tuple[Signs, Array]:
+    """Signs of a batch, and its covariance between sites, (n_epochs, n_sites, n_sites) uV^2.
+
+    The covariance is that of the traces smoothed to 50 samples a second, within each epoch.
+    """
+    ok = batch.ok[:, 1:-1].T
+    n, starts = batch.n_samples, batch.starts[1:-1]
+    epochs = batch.windows(starts, n)
+    half = n // LEVELS_PER_SECOND
+    halves = [epochs[:, :, k * half : (k + 1) * half].mean(axis=2) for k in range(2)]
+    hum = np.zeros(ok.shape, dtype=np.complex64)
+    if mains_is_carried(conditions):
+        # Of the Hann window the line keeps half its height, hence 2 / (n / 2).
+        window = np.hanning(n + 1)[:-1] * (4 / n)
+        turns = conditions.line_frequency * np.arange(n) / batch.sampling_rate
+        hum = (epochs @ (window * np.exp(-2j * np.pi * turns)).astype(np.complex64)).T
+    signs = Signs(
+        ok=ok,
+        flat=batch.flat.T,
+        missing=batch.missing.T,
+        clipped=batch.clipped.T,
+        level=np.stack(halves).transpose(2, 0, 1).astype(np.float32),
+        hum=hum.astype(np.complex64),
+    )
+    return signs, field_covariance(slow_traces(batch))
+
+
+@dataclass(frozen=True, slots=True)
+class SignLog:
+    """The signs of a recording, or of the last minutes of a stream.
+
+    ``onset`` (n_epochs,) seconds; ``stretch`` (n_epochs,) index of the stretch that an epoch
+    is of, ``begin`` and ``end`` (n_stretches,) their bounds in seconds, ``covariance``
+    (n_stretches, n_sites, n_sites) uV^2, mean over the epochs in which both sites were there,
+    NaN where none was.
+    """
+
+    signs: Signs
+    onset: NDArray[np.float64]
+    stretch: NDArray[np.intp]
+    begin: NDArray[np.float64]
+    end: NDArray[np.float64]
+    covariance: Array
+
+    def __len__(self) -> int:
+        return len(self.begin)
+
+    def mean(self, values: NDArray[np.floating]) -> NDArray[np.float64]:
+        """Mean over each stretch of (n_epochs, ...) values, NaN left out, NaN where none is."""
+        known = np.isfinite(values)
+        total = self.total(np.where(known, values, 0.0))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return np.asarray(total / self.total(known))
+
+    def total(self, values: NDArray[np.generic]) -> NDArray[np.float64]:
+        """Sum over each stretch of (n_epochs, ...) values, (n_stretches, ...)."""
+        first = np.searchsorted(self.stretch, np.arange(len(self)))
+        return np.asarray(np.add.reduceat(values.astype(np.float64), first, axis=0))
+
+
+class SignKeeper:
+    """Takes in the signs of batch after batch; keeps covariances as sums per stretch.
+
+    Parameters
+    ----------
+    n_epochs : int or None
+        Expected number of epochs; None for a stream.
+    n_sites : int
+    """
+
+    def __init__(self, n_epochs: int | None, n_sites: int) -> None:
+        size = max(n_sites, 1) ** 2 * 4
+        most = max(60, int(LONGEST_LOG / size))
+        seconds = 0.0 if n_epochs is None else n_epochs / most
+        self.stretch_seconds = max(STRETCH_SECONDS, float(math.ceil(seconds)))
+        self._signs: list[Signs] = []
+        self._onset: list[NDArray[np.float64]] = []
+        self._sums: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
+
+    def add(
+        self, onset: NDArray[np.float64], signs: Signs, covariance: Array
+    ) -> None:
+        """Take in the next epochs, in order of time."""
+        number = self._number(onset)
+        first = np.flatnonzero(np.diff(number, prepend=-1))
+        there = signs.ok.astype(np.float64)
+        sums = np.add.reduceat(covariance.astype(np.float64), first, axis=0)
+        both = np.add.reduceat(there[:, :, None] * there[:, None], first, axis=0)
+        for index, total, count in zip(number[first], sums, both, strict=True):
+            before = self._sums.get(int(index), (0.0, 0.0))
+            self._sums[int(index)] = (before[0] + total, before[1] + count)
+        self._signs.append(signs)
+        self._onset.append(onset)
+
+    def forget(self, before: float) -> None:
+        """Drop the stretches that end at or before ``before`` seconds."""
+        lowest = int(before // self.stretch_seconds)
+        self._sums = {key: pair for key, pair in self._sums.items() if key >= lowest}
+        limit = lowest * self.stretch_seconds
+        while self._onset and self._onset[0][-1] < limit:
+            del self._onset[0], self._signs[0]
+
+    def log(self) -> SignLog:
+        """All that is kept."""
+        onset = np.concatenate(self._onset)
+        number = self._number(onset)
+        kept, first, stretch, length = np.unique(
+            number, return_index=True, return_inverse=True, return_counts=True
+        )
+        sums, counts = (np.stack([self._sums[int(key)][k] for key in kept]) for k in (0, 1))
+        # A rest too short to tell anything is told with the stretch before it.
+        short = (length < self.stretch_seconds / 2) & (np.diff(kept, prepend=kept[0]) == 1)
+        group = np.cumsum(~short) - 1
+        begins = np.flatnonzero(~short)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            covariance = np.add.reduceat(sums, begins) / np.add.reduceat(counts, begins)
+        names = Signs.__slots__
+        columns = {
+            name: np.concatenate([getattr(part, name) for part in self._signs])
+            for name in names
+        }
+        last = np.append(first[begins][1:], len(onset)) - 1
+        return SignLog(
+            signs=Signs(**columns),
+            onset=onset,
+            stretch=group[stretch.ravel()].astype(np.intp),
+            begin=onset[first[begins]],
+            end=onset[last] + 1.0,
+            covariance=covariance.astype(np.float32),
+        )
+
+    def _number(self, onset: NDArray[np.float64]) -> NDArray[np.int64]:
+        return np.floor(onset / self.stretch_seconds + 1e-9).astype(np.int64)

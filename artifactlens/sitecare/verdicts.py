@@ -1,0 +1,226 @@
+"""From findings to advice: what to do, in which order, and what is said of each site."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+
+from artifactlens.advice import CAUSES, VERDICTS, Advice
+from artifactlens.sitecare import courses
+from artifactlens.sitecare.bridging import bridges
+from artifactlens.sitecare.contact import contacts
+from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.humming import hums
+from artifactlens.sitecare.losses import losses
+from artifactlens.sitecare.patients import patients
+from artifactlens.sitecare.popping import popping
+
+LEAST_SHARE = 0.03
+"""What held for less of the time, and is over, is not worth a line."""
+
+LEAST_STRETCHES = 2
+"""What lasts must hold for so many stretches before anybody is sent to the patient."""
+
+CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
+    ("ground", "mains"): (
+        "check the ground electrode and the cables",
+        "move or unplug devices and power cords near the patient",
+        "touch no other electrode before that",
+    ),
+    ("ground", "any"): (
+        "check the head box, its cable and the input plug",
+        "check ground and reference",
+    ),
+    ("reference", "any"): (
+        "check the reference lead and its plug",
+        "re-prep the reference, not the sites",
+        "then the ground",
+    ),
+    ("bridge", "any"): (
+        "clean between the sites and dry the skin",
+        "re-prep both with less paste",
+        "check that no cables are joined",
+    ),
+    ("placement", "any"): (
+        "check placement against the head",
+        "check the labels at the head box",
+        "then the montage",
+    ),
+    ("patient", "muscle"): (
+        "ask to let the jaw hang, relax the brow, rest the head",
+        "support neck and head",
+    ),
+    ("patient", "eye"): (
+        "ask to rest the eyes, closed if the protocol allows",
+        "a folded cloth on the lids if local procedure has it",
+    ),
+    ("site", "pops"): ("check the lead", "re-prep", "replace the electrode if it goes on"),
+    ("site", "loose lead"): ("check lead and plug", "fix the electrode again, re-prep"),
+    ("site", "apart"): ("check the lead", "re-prep", "measure the impedance"),
+    ("site", "drift"): ("check for sweat and drying paste", "re-prep", "cool the room"),
+    ("site", "mains"): ("check the lead and where it runs", "re-prep", "measure the impedance"),
+    ("site", "flat"): ("check that the lead is plugged in", "replace the electrode"),
+    ("site", "lost"): ("check the lead and the head box input", "replace the electrode"),
+    ("site", "clipped"): ("check the lead", "re-prep", "check the range of the recorder"),
+}
+"""In the order of the trade: cables, electrode, placement, bridge, impedance, ground and
+reference, montage (common practice)."""
+
+
+def findings_of(evidence: Evidence) -> list[Finding]:
+    """Everything that is wrong, in no order."""
+    if not len(evidence.log):
+        return []
+    found = [
+        *losses(evidence),
+        *hums(evidence),
+        *bridges(evidence),
+        *popping(evidence),
+        *contacts(evidence),
+        *patients(evidence),
+    ]
+    return _without_echoes(found)
+
+
+def _without_echoes(found: list[Finding]) -> list[Finding]:
+    """One finding per site and time: what another finding already explains goes.
+
+    A bridged site may look apart, a loose lead pops, hums and drifts, and where the whole
+    head is lost at once no single site is to blame.
+    """
+    rank = ("lost", "flat", "clipped", "loose lead", "bridged", "pops", "drift", "apart", "mains")
+    by_site: dict[tuple[str, int], list[Finding]] = {}
+    rest = []
+    for finding in found:
+        if finding.cause in ("site", "reference"):
+            by_site.setdefault((finding.cause, finding.rows[0]), []).append(finding)
+        else:
+            rest.append(finding)
+    bridged = {row for finding in rest if finding.cause == "bridge" for row in finding.rows}
+    kept = []
+    for (_, row), group in by_site.items():
+        group.sort(key=lambda item: (not item.plain, -int(item.held.sum()), rank.index(item.sign)))
+        main, others = group[0], group[1:]
+        if row in bridged and main.sign not in ("pops", "loose lead", "lost", "clipped"):
+            continue
+        for other in others:
+            if main.plain and not other.plain:
+                continue
+            if (main.held & other.held).sum() >= 0.5 * other.held.sum():
+                main = replace(
+                    main,
+                    held=main.held | other.held,
+                    weight=main.weight + 0.5 * other.weight,
+                    reason=f"{main.reason}; {other.reason}",
+                )
+            else:
+                kept.append(other)
+        kept.append(main)
+    return kept + rest
+
+
+def advise(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> tuple[Advice, ...]:
+    """The ranked list.
+
+    Parameters
+    ----------
+    evidence : Evidence
+    extra : tuple of Finding
+        What other tests have found: placement, biological calibration.
+    """
+    entries = []
+    for finding in [*findings_of(evidence), *extra]:
+        entry = _entry(evidence, finding)
+        if entry is not None:
+            entries.append((finding, entry))
+    entries.sort(key=lambda pair: _order(*pair))
+    return tuple(
+        replace(entry, number=number) for number, (_, entry) in enumerate(entries, start=1)
+    )
+
+
+def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
+    known = max(int((finding.known | finding.held).sum()), 1)
+    count = int(finding.held.sum())
+    share = count / known
+    state = courses.state(evidence, finding)
+    if share < LEAST_SHARE and state != "present":
+        return None
+    brief = finding.lasting and count < min(LEAST_STRETCHES, known)
+    if brief and share < 0.5 and state != "present":
+        return None
+    verdict = "watch"
+    if state == "present" and finding.plain and not brief:
+        verdict = {"ground": "check", "placement": "check", "patient": "ask"}.get(
+            finding.cause, "re-prep"
+        )
+    elif finding.cause == "patient":
+        return None
+    names = tuple(evidence.frame.sites[row] for row in finding.rows)
+    checks = CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
+    return Advice(
+        number=0,
+        verdict=verdict,
+        cause=finding.cause,
+        sign=finding.sign,
+        sites=names,
+        confidence=_confidence(evidence, finding, verdict),
+        state=state,
+        stretches=courses.stretches(evidence, finding),
+        share=round(share, 4),
+        reason=finding.reason,
+        checks=checks,
+    )
+
+
+def _confidence(evidence: Evidence, finding: Finding, verdict: str) -> str:
+    """High where it is plain, lasts, and the site has neighbours to be compared with."""
+    if finding.cause == "placement" or not finding.plain:
+        return "low"
+    near = evidence.frame.near
+    few = finding.cause == "site" and any(near[row].sum() < 2 for row in finding.rows)
+    few = few and finding.sign not in ("flat", "lost", "clipped")
+    if few or verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
+        return "moderate"
+    return "high"
+
+
+def _order(finding: Finding, entry: Advice) -> tuple[int, int, float]:
+    """First what may explain the rest (ground, reference), then what is worst."""
+    waiting = entry.verdict == "watch"
+    first = CAUSES.index(entry.cause) if entry.cause in ("ground", "reference") else 2
+    if entry.cause in ("placement", "patient"):
+        first = CAUSES.index(entry.cause)
+    return (VERDICTS.index("watch") if waiting else 0, first, -finding.weight)
+
+
+def site_verdicts(
+    evidence: Evidence, advice: tuple[Advice, ...]
+) -> tuple[list[str], list[str]]:
+    """What is said of each site, and why, in the order of the frame."""
+    frame = evidence.frame
+    verdicts, reasons = ["leave"] * len(frame.sites), [""] * len(frame.sites)
+    seen = evidence.log.signs.ok.any(axis=0)
+    alone = frame.neighbours.sum(axis=1) == 0
+    for row in range(len(frame.sites)):
+        if not seen[row]:
+            verdicts[row], reasons[row] = "cannot tell", "no signal at any time"
+        elif alone[row] and frame.roles[row] != "reference":
+            verdicts[row] = "cannot tell"
+            reasons[row] = "no neighbour in this recording to compare it with"
+    place = {name: row for row, name in enumerate(frame.sites)}
+    for entry in sorted(advice, key=lambda item: -item.number):
+        if entry.cause in ("ground", "patient", "placement"):
+            continue
+        for name in entry.sites:
+            row = place[name]
+            verdicts[row] = "re-prep" if entry.verdict == "re-prep" else "watch"
+            reasons[row] = entry.reason
+    for entry in advice:
+        if entry.cause == "placement":
+            for name in entry.sites:
+                if verdicts[place[name]] in ("leave", "cannot tell"):
+                    verdicts[place[name]], reasons[place[name]] = "watch", entry.reason
+    return verdicts, reasons
+
+
