@@ -192,14 +192,16 @@ def pop_moments(
     step_at: NDArray[np.floating],
     grid: EpochGrid,
 ) -> tuple[tuple[float, tuple[int, ...]], ...]:
-    """Moment (seconds) and rows of every sure pop, whatever operating point marks flags.
+    """Moment (seconds) and rows of every doubtful pop, whatever operating point marks flags.
+
+    An electrode is judged by several of them, so that one that is none does little harm.
 
     ``probability`` (n_kinds, n_epochs, n_sites), ``step_at`` (n_epochs, n_sites).
     """
     row = KIND_NAMES.index("pop")
     head = model.heads[row]
     events = find_segments(
-        "pop", probability[row], grid, step_at, enter=head.sure, stay=head.sure
+        "pop", probability[row], grid, step_at, enter=head.doubtful, stay=head.doubtful
     )
     at = grid.onset[events.peak_epoch] + step_at[events.peak_epoch, events.peak_site]
     return tuple(zip((float(moment) for moment in at), events.sites, strict=True))

@@ -206,6 +206,9 @@ def _evidence(measured: Measured, model: Model, judgement: Judgement) -> Evidenc
         sure=np.array([head.sure for head in model.heads]),
         pops=pop_moments(model, judgement.probability, table.step_at, measured.grid),
         swing=table.column("swing"),
+        step=table.column("step"),
+        step_rise=table.column("step_rise"),
+        fast_share=table.column("fast_share"),
         mains_ratio=table.column("mains_ratio"),
         line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
     )

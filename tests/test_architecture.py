@@ -151,11 +151,21 @@ def test_the_simulation_knows_nothing_of_what_judges_it():
 
 
 LATER = ("curves", "evidence", "flagging", "result", "pipeline", "export", "page", "sitecare",
-         "segments", "closeups", "assessable", "cli")  # fmt: skip
+         "segments", "closeups", "assessable", "advice", "bedside", "cli")  # fmt: skip
 
 
 @pytest.mark.parametrize(
-    "early", ["recording", "sites", "frames", "epochs", "survey", "features"]
+    "early",
+    [
+        "recording",
+        "last_minutes",
+        "sites",
+        "frames",
+        "impedances",
+        "epochs",
+        "survey",
+        "features",
+    ],
 )
 def test_what_measures_does_not_know_what_is_made_of_it(early):
     for name in FILES:

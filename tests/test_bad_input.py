@@ -27,8 +27,8 @@ from artifactlens.sites import HEAD_CENTRE_M, canonical_site, site_position
 
 SFREQ = 256
 OUTPUTS = {
-    "flags.tsv", "flags.json", "sites.tsv", "sites.json", "scores.npz", "report.html",
-    "result.json",
+    "flags.tsv", "flags.json", "sites.tsv", "sites.json", "sites.html", "scores.npz",
+    "report.html", "result.json",
 }  # fmt: skip
 
 

@@ -45,8 +45,9 @@ def files_in(folder):
 # ---------------------------------------------------------------- help and usage
 
 
-def test_help_names_both_commands_with_what_they_do_uncut(invoke):
+def test_help_names_the_commands_with_what_they_do_uncut(invoke):
     shown = invoke("--help", width=80).stdout
+    assert "sites   Say which electrodes to look after, and why." in shown
     assert "triage  Mark the artifacts of EEG recordings." in shown
     assert "demo    Try it on an invented recording." in shown
     assert "not a medical device" in shown
@@ -360,7 +361,7 @@ def test_any_file_name_is_taken_and_shown(invoke, night, monkeypatch, name):
     assert done.exit_code == 0, done.stderr
     assert f"{name}.edf: 12 s" in done.stdout
     written = files_in(Path(f"{name}.triage"))
-    assert len(written) == 8
+    assert len(written) == 9
     assert "result.json" in written
 
 

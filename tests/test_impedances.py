@@ -5,7 +5,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from artifactlens.demo import DEMO_SITES
@@ -21,6 +21,9 @@ TABLES = st.dictionaries(SITES, KOHM, min_size=1)
 
 def frame_of(*labels):
     return build_frame(labels, [None] * len(labels), None)
+
+
+WHOLE_HEAD = frame_of(*(f"EEG {site}-REF" for site in DEMO_SITES))
 
 
 def recording_of(*labels):
@@ -85,6 +88,7 @@ def test_what_cannot_be_read_is_told_with_what_to_do(text, problem, remedy):
     assert remedy in caught.value.remedy
 
 
+@settings(deadline=None)
 @given(TABLES, st.sampled_from([("\t", "z.tsv"), (",", "z.csv"), (";", "z.csv"), (" ", "z")]),
        st.sampled_from([None, "kOhm", "k\u03a9", "impedance [ohm]"]))  # fmt: skip
 def test_whatever_is_written_reads_back(table, form, unit):
@@ -99,6 +103,7 @@ def test_whatever_is_written_reads_back(table, form, unit):
     assert list(read.values()) == pytest.approx(list(table.values()), rel=1e-12)
 
 
+@settings(deadline=None)
 @given(st.text(), st.sampled_from(["z.tsv", "z.csv", "z"]))
 def test_any_text_is_read_or_refused_in_plain_words(text, name):
     try:
@@ -112,6 +117,7 @@ def test_any_text_is_read_or_refused_in_plain_words(text, name):
 CELLS = ["Fp1", "T3", "4.2", "n/a", "name", "impedance", "kohm", "ohm", "-1", '"', "", "x"]
 
 
+@settings(deadline=None)
 @given(st.lists(st.lists(st.sampled_from(CELLS), max_size=4), max_size=5))
 def test_any_mixture_of_likely_cells_gives_its_numbers_or_is_refused(rows):
     try:
@@ -286,10 +292,10 @@ def test_nothing_known_is_not_zero():
     assert np.isnan(impedances_of(frame_of("Fp1", "F3"), {})).all()
 
 
+@settings(deadline=None)
 @given(TABLES)
 def test_every_site_gets_the_value_of_its_own_row(table):
-    frame = frame_of(*(f"EEG {site}-REF" for site in DEMO_SITES))
-    found = dict(zip(frame.sites, impedances_of(frame, table), strict=True))
+    found = dict(zip(WHOLE_HEAD.sites, impedances_of(WHOLE_HEAD, table), strict=True))
     for site in DEMO_SITES:
         np.testing.assert_equal(found[site], table.get(site, np.nan))
     np.testing.assert_equal(found["reference"], table.get("Ref", np.nan))

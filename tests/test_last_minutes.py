@@ -5,7 +5,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from artifactlens.epochs import epoch_grid
@@ -62,6 +62,7 @@ def test_no_time_at_all_is_refused_with_what_was_given(minutes):
         last_minutes_of(recording(), minutes)
 
 
+@settings(deadline=None)
 @given(
     st.sampled_from([10.0, 100.0, 99.7, 173.61, 256.0]),
     st.lists(st.tuples(st.integers(1, 900), st.floats(0, 40)), min_size=1, max_size=4),

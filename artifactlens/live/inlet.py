@@ -221,7 +221,9 @@ class Inlet:
         named = [info for info in usable if info.name() == self.facts.name]
         if self._name is None:
             named = [info for info in named if _is_eeg(info)]
-        return Link(self._client, named[0]) if len(named) == 1 else None
+        if len(named) == 1 and self._search.settled:
+            return Link(self._client, named[0])
+        return None
 
     def _find(self) -> Info:
         """The one stream that fits."""

@@ -26,7 +26,8 @@ SEARCH_SECONDS = 3.0
 _CLOCK_SECONDS = 3.0
 _CLOCK_EVERY_SECONDS = 5.0
 _CLOCK_FOLLOW = 0.2
-_SETTLE_SECONDS = 0.6  # a second stream of the same kind may answer a little later
+# The client asks by multicast at once, but known peers one by one only half a second later.
+_SETTLE_SECONDS = 0.8
 _GATHER_SECONDS = 0.04
 _LONGEST_PIECE_SECONDS = 4.0
 _NAP_SECONDS = 0.02
@@ -44,20 +45,21 @@ class Search:
     def age(self) -> float:
         return time.monotonic() - self._since
 
+    @property
+    def settled(self) -> bool:
+        """Whether a second stream of the same kind would have answered by now."""
+        return self.age > _SETTLE_SECONDS
+
     def found(self) -> list[Info]:
         """Each stream once, though it may answer over several network cards."""
         return list({info.uid(): info for info in self._resolver.results()}.values())
 
     def wait_for(self, fits: Callable[[Info], bool], seconds: float) -> list[Info]:
-        """Streams that fit: all that answer within a moment after the first."""
-        last = time.monotonic() + seconds
-        first = None
+        """Streams that fit, once there is one and all have had the time to answer."""
         while True:
-            now = time.monotonic()
+            waited = self.age >= seconds
             fitting = [info for info in self.found() if fits(info)]
-            if fitting and first is None:
-                first = now
-            if now >= (last if first is None else first + _SETTLE_SECONDS):
+            if waited or (fitting and self.settled):
                 return fitting
             time.sleep(_NAP_SECONDS)
 

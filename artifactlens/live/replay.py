@@ -181,7 +181,5 @@ def _source_id(recording: Recording) -> str:
 def _reference(labels: tuple[str, ...]) -> str | None:
     """The second input that all electrodes share, if the labels name one and only one."""
     parsed = [parse_label(label) for label in labels]
-    if any(label.role == "derivation" for label in parsed):
-        return None
-    named = {label.minus for label in parsed if label.role == "site" and label.minus}
-    return named.pop() if len(named) == 1 else None
+    seconds = {label.minus for label in parsed if label.role != "other"}
+    return seconds.pop() if len(seconds) == 1 else None

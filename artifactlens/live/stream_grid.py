@@ -17,6 +17,7 @@ LONGEST_FILL_SECONDS = 2.0
 
 _HALF = 0.5
 _FRACTION = 0.05
+_MARGIN = 1.5
 _MOST_JITTER_SECONDS = 0.25
 _JITTER_MEMORY_SECONDS = 60.0
 _ANSWER_SECONDS = 5.0
@@ -138,7 +139,7 @@ class Assembler:
             fitting = int(odd.argmax()) if odd.any() else len(odd)
             if fitting:
                 parts.append((done, done + fitting, 0))
-                self._follow(fitting, float(deviation[:fitting].mean()) * self._period)
+                self._follow(deviation[:fitting])
                 done += fitting
                 continue
             off = float(deviation[0])
@@ -184,15 +185,22 @@ class Assembler:
             self._count += n
         parts.clear()
 
-    def _follow(self, n: int, late: float) -> None:
-        """Move on by ``n`` points that were ``late`` seconds behind the grid, on average."""
-        seconds = n * self._period
+    def _follow(self, deviation: NDArray[np.float64]) -> None:
+        """Move on by points whose stamps deviated so many samples from the grid."""
+        seconds = len(deviation) * self._period
+        late = float(deviation.mean()) * self._period
         gain = -math.expm1(-seconds / _FOLLOW_SECONDS)
         self._next += seconds + gain * late
         ratio = self._period * self._rate
         ratio += late * seconds / (_FOLLOW_SECONDS * _RATE_SECONDS)
         ratio = min(max(ratio, 1.0 - _MOST_RATE_ERROR), 1.0 + _MOST_RATE_ERROR)
         self._period = ratio / self._rate
+        if self._jitter:
+            self._raise_jitter(float(np.abs(deviation).max()))
+
+    def _raise_jitter(self, seen: float) -> None:
+        limit = _MOST_JITTER_SECONDS * self._rate
+        self._jitter = min(max(self._jitter, _MARGIN * seen), limit)
 
     def _forget_jitter(self, n: int) -> None:
         self._jitter *= math.exp(-n / self._rate / _JITTER_MEMORY_SECONDS)
@@ -209,6 +217,4 @@ class Assembler:
         else:
             self._overlap, answer = (size, now), self._hole
         if abs(now - answer[1]) <= _ANSWER_SECONDS:
-            seen = 1.5 * min(size, answer[0])
-            limit = _MOST_JITTER_SECONDS * self._rate
-            self._jitter = min(max(self._jitter, seen), limit)
+            self._raise_jitter(min(size, answer[0]))

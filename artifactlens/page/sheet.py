@@ -9,17 +9,8 @@ from typing import TYPE_CHECKING, Any
 from markupsafe import Markup
 
 from artifactlens.advice import Advice
-from artifactlens.page.caremap import (
-    LINES,
-    SHAPES,
-    Mark,
-    care_svg,
-    concerned,
-    line,
-    marks,
-    spots,
-    symbol,
-)
+from artifactlens.page.caremap import Mark, care_svg, concerned, marks, spots
+from artifactlens.page.careshapes import LINES, SHAPES, line, symbol
 from artifactlens.page.svg import tag
 from artifactlens.page.template import part, template
 from artifactlens.page.words import clock, cut, names, number, span
@@ -34,8 +25,9 @@ IN_FULL = 12
 ROOMY = 6
 """Up to so many entries are set in larger letters."""
 
-LINES_OF_LIST, LETTERS_OF_LINE = 36, 46
-"""Lines of print that the list may fill, and characters that surely fit on one of them."""
+LINES_OF_LIST, LETTERS_OF_LINE = 36, 42
+"""Lines of print that the list may fill, and characters that fit on one of them even in a
+wide typeface."""
 
 GOOD_KOHM, ACCEPTABLE_KOHM = 5.0, 10.0
 """Impedance that is good, and that is acceptable if even over the sites (common practice)."""
@@ -79,13 +71,14 @@ def sheet_html(result: Result) -> str:
         responses=() if result.setup is None else result.setup.responses,
         care=care_svg(shown, advice),
         legend=_legend(),
+        doubled=next((m.entries[1].number for m in shown if len(m.entries) > 1), 0),
         elsewhere=_elsewhere(shown),
         untold=_grouped(shown, "cannot tell"),
         watched=_grouped(shown, "watch"),
         impedance=impedance_words(result.sites),
         order=", ".join(ORDER_OF_CHECKS),
         entries=[_row(entry, result, *limits) for entry in full],
-        rest=[_row(entry, result, 60, 40) for entry in rest],
+        rest=[_row(entry, result, 40, 24) for entry in rest],
         blank=range(4 if not full else 2 if len(full) <= ROOMY else 0),
         roomy=len(full) <= ROOMY,
         caution=CAUTION,
@@ -151,7 +144,7 @@ def setup_words(setup: Setup) -> str:
     )
     if setup.unfit:
         told = [f"{cut(site, 12)} ({cut(why, 40)})" for site, why in setup.unfit]
-        words += f" Not yet: {_at_most(told, 4, ', ')}."
+        words += f" Not yet: {_at_most(told, 3, ', ')}."
     if setup.cannot_tell:
         words += f" Cannot tell: {names(setup.cannot_tell)}."
     return words
@@ -172,7 +165,7 @@ def impedance_words(sites: Sequence[SiteEvidence]) -> str:
         for value, site in sorted(known, key=lambda pair: -pair[0])
         if value > ACCEPTABLE_KOHM
     ]
-    words += f"; above {ACCEPTABLE_KOHM:g}: {_at_most(above, 5, ', ')}." if above else "."
+    words += f"; above {ACCEPTABLE_KOHM:g}: {_at_most(above, 3, ', ')}." if above else "."
     return (
         f"{words} 100 Ω to {GOOD_KOHM:g} kΩ is good, {GOOD_KOHM:g} to {ACCEPTABLE_KOHM:g} "
         "acceptable if even (common practice). Line power is no impedance meter "
@@ -202,21 +195,21 @@ def _row(entry: Advice, result: Result, why: int, check: int) -> dict[str, Any]:
         "symbol": _picture(symbol(entry.verdict, 0, 0, 10, str(entry.number))),
         "subject": cut(entry.subject),
         "verdict": entry.verdict,
-        "confidence": ""
-        if entry.confidence == "high"
-        else f"{entry.confidence} confidence",
-        "impedance": f"{_at_most(known, 3, ', ')} kΩ" if known else "",
+        "confidence": entry.confidence,
+        "impedance": f"{', '.join(known)}\u00a0kΩ" if 0 < len(known) < 3 else "",
         "reason": cut(entry.reason, why),
         "check": cut(first, check),
         "then": cut(then, left) if left >= min(len(then), 16) else "",
         "when": when(entry, result.recording.duration),
+        "state": entry.state,
     }
 
 
 def _limits(n_entries: int) -> tuple[int, int]:
     """Characters for the reason and for the checks, so that the list keeps to its page."""
-    lines = min(6, LINES_OF_LIST // max(1, n_entries))
-    return LETTERS_OF_LINE * (lines - lines // 2), LETTERS_OF_LINE * (lines // 2)
+    lines = min(5, LINES_OF_LIST // max(1, n_entries))
+    # What to do is set in bold letters, which are wider.
+    return LETTERS_OF_LINE * (lines - lines // 2), LETTERS_OF_LINE * (lines // 2) - 6
 
 
 def _legend() -> list[tuple[Markup, str, str, str]]:
@@ -225,7 +218,7 @@ def _legend() -> list[tuple[Markup, str, str, str]]:
         for verdict, (shape, meaning) in SHAPES.items()
     ]
     joins = [
-        (_picture(line(sign, (-13, 0), (13, 0), 4.5)), sign, shape, meaning)
+        (_picture(line(sign, (-20, 0), (20, 0), 8)), sign, shape, meaning)
         for sign, (shape, meaning) in LINES.items()
     ]
     return shapes + joins
@@ -255,7 +248,7 @@ def _grouped(shown: Sequence[Mark], verdict: str) -> str:
     told = [
         f"{names(sites)} ({why})" if why else names(sites) for why, sites in groups.items()
     ]
-    return _at_most(told, 4, "; ")
+    return _at_most(told, 3, "; ")
 
 
 def _at_most(words: Sequence[str], most: int, between: str) -> str:

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import finite_rows
 from artifactlens.features.spatial import EyeLeads, eye_leads
 
 if TYPE_CHECKING:
@@ -80,12 +81,12 @@ class Traces:
         return self._mean(0.04, 0.24) - self._mean(-0.24, -0.04)
 
     def _mean(self, begin: float, end: float) -> Array:
-        """Mean from ``begin`` to ``end`` seconds about every sample; 0.5 s at both ends are 0."""
+        """Mean from ``begin`` to ``end`` seconds about every sample; NaN at both ends."""
         rate, n = self.slow_rate, self.slow.shape[1]
         first = round(begin * rate)
         last = max(round(end * rate), first + 1)
         edge = int(np.ceil(0.5 * rate)) + 1
-        found = np.zeros_like(self.slow)
+        found = np.full_like(self.slow, np.nan)
         if n <= 2 * edge:
             return found
         total = np.cumsum(np.pad(self.slow, ((0, 0), (1, 0))), axis=1)
@@ -120,12 +121,18 @@ def rest_sites(frame: Frame) -> list[NDArray[np.intp]]:
     x, y = direction[:, 0], direction[:, 1]
     scalp = np.isfinite(x) & (np.array(frame.roles) == "site")
     with np.errstate(invalid="ignore"):
-        tiers = (y <= -0.3, (y <= 0.15) & (np.abs(x) < 0.9), (np.abs(x) < 0.35) & (y < 0.85))
+        tiers = (
+            y <= -0.3,
+            (y <= 0.15) & (np.abs(x) < 0.9),
+            (np.abs(x) < 0.35) & (y < 0.85),
+        )
     chosen = {}
     for chain in np.unique(frame.chain):
         inside = scalp & (frame.chain == chain)
         found = (np.flatnonzero(inside & tier) for tier in tiers)
-        chosen[chain] = next((rows for rows in found if len(rows) > 1), np.array([], np.intp))
+        chosen[chain] = next(
+            (rows for rows in found if len(rows) > 1), np.array([], np.intp)
+        )
     return [chosen[chain] for chain in frame.chain]
 
 
@@ -154,14 +161,20 @@ def _directions(frame: Frame) -> Array:
 
 
 def reduce_traces(
-    sites_uv: NDArray[np.floating], sampling_rate: float, frame: Frame, start: float
+    sites_uv: NDArray[np.floating],
+    sampling_rate: float,
+    frame: Frame,
+    start: float,
+    *,
+    fast: bool = True,
 ) -> Traces:
     """Reduce site potentials (n_sites, n_times), microvolt, that begin at ``start`` seconds.
 
-    Sites with a missing sample are taken as unknown for the whole stretch.
+    Sites with a missing sample are taken as unknown for the whole stretch. ``fast`` is False
+    where a filter is known to have removed what lies above 20 Hz.
     """
     sites = np.asarray(sites_uv)
-    known = np.isfinite(sites).all(axis=1)
+    known = finite_rows(sites)
     width = max(1, int(sampling_rate / SLOW_HZ))
     count = sites.shape[1] // width
     slow = sites[:, : count * width].reshape(len(sites), count, width)
@@ -176,7 +189,7 @@ def reduce_traces(
         start=start,
         slow=against,
         slow_rate=sampling_rate / width,
-        power=_fast_power(sites, known, sampling_rate, half),
+        power=_fast_power(sites if fast else sites[:, :0], known, sampling_rate, half),
         hop_s=half / sampling_rate,
         first_hop=start + half / sampling_rate,
     )
@@ -187,8 +200,8 @@ def _fast_power(
 ) -> Array:
     top = min(FAST_HZ[1], 0.45 * sampling_rate)
     hops = max(sites.shape[1] // half - 1, 0)
-    if top < LEAST_FAST_HZ or not hops:
-        return np.zeros((len(sites), 0))
+    if top < LEAST_FAST_HZ:
+        hops = 0
     window = np.hanning(2 * half)
     freqs = np.fft.rfftfreq(2 * half, 1 / sampling_rate)
     band = (freqs >= FAST_HZ[0]) & (freqs <= top)
@@ -204,5 +217,19 @@ def _fast_power(
 
 
 def quiet_level(values: Array) -> Array:
-    """Robust standard deviation of what is usual, over the last axis, even amid movements."""
-    return np.asarray(np.quantile(np.abs(values), QUIET_SHARE, axis=-1) / _QUIET_OF_NORMAL)
+    """Robust standard deviation of what is usual at each site, even amid movements.
+
+    Parameters
+    ----------
+    values : array, shape (n_sites, n_moments)
+        Moments at which no site has a value are left out.
+
+    Returns
+    -------
+    array, shape (n_sites,)
+        NaN for sites without values.
+    """
+    seen = np.abs(values[:, np.isfinite(values).any(axis=0)])
+    if not seen.shape[1]:
+        return np.full(len(values), np.nan)
+    return np.asarray(np.quantile(seen, QUIET_SHARE, axis=1) / _QUIET_OF_NORMAL)

@@ -79,7 +79,9 @@ def protocol_tasks(start: float) -> tuple[Task, ...]:
 
 # All patterns are matched against words of small letters with one blank between them.
 _SIDE = r"(?P<side>left|right|l|r|lt|rt)(?:wards?)?"
-_BOTH = r"(?:left (?:and |to |then )?right|right (?:and |to |then )?left|l r|r l|lt rt|rt lt)"
+_BOTH = (
+    r"(?:left (?:and |to |then )?right|right (?:and |to |then )?left|l r|r l|lt rt|rt lt)"
+)
 _ACROSS = rf"(?:lateral(?:ly)?|horizontal(?:ly)?|side to side|sideways|{_BOTH})"
 _LOOK = r"(?:look|looks|looking|gaze|gazes|gazing|glance|saccades?|eyes|eye movements?)"
 _WAY = r"(?:(?:to|towards?|the|his|her|their|far|all|move|moved|moving|go|turn|turned) )*"
@@ -128,11 +130,11 @@ def task_words(text: str) -> str | None:
         return "jaw"
     if _GAZE.search(words):
         return "gaze"
-    sides = {
-        (match["side"] or match["before"])[0] for match in _GAZE_SIDE.finditer(words)
-    }
+    sides = {(match["side"] or match["before"])[0] for match in _GAZE_SIDE.finditer(words)}
     if sides:
-        return "gaze" if len(sides) > 1 else {"l": "gaze left", "r": "gaze right"}[sides.pop()]
+        return (
+            "gaze" if len(sides) > 1 else {"l": "gaze left", "r": "gaze right"}[sides.pop()]
+        )
     return UNNAMED if _UNNAMED.search(words) else None
 
 
@@ -166,7 +168,7 @@ def announced(
         length = stated if stated > 0 else following - onset
         named.append(Task(kind, onset, min(length, LONGEST_SECONDS, end - onset)))
     covered = -1.0
-    loose = []
+    loose: list[Task] = []
     for onset in unnamed:
         until = min(onset + LONGEST_UNNAMED_SECONDS, end)
         if onset < covered or any(onset <= task.onset <= until for task in named):

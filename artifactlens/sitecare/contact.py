@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 Array = NDArray[np.float64]
 
@@ -25,15 +25,19 @@ APART_DB, PLAIN_DB = 8.0, 10.5
 """How far the unpredicted amplitude exceeds the median of all sites': to be named, to be
 acted upon. The largest in undisturbed recordings at hand is about 8 dB with such a share."""
 
-APART_UV = 6.0
-REFERENCE_DB, REFERENCE_PLAIN_DB = 6.0, 7.5
+APART_UV, PLAIN_UV = 7.0, 12.0
+REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
 """How far the reference's row exceeds the median site."""
 
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
 
-DRIFT_RATIO = 1.5
-"""Of what is apart, the half-second levels must move this many times as much as the rest."""
+DRIFT_DB, DRIFT_WITH_EYES_DB = 12.0, 18.0
+DRIFT_UV, DRIFT_PLAIN_UV = 25.0, 50.0
+"""How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
+
+SMALL_CHAIN_SHARE = 0.58
+"""Share of a short chain's power at one of its sites: two thirds if it alone is noisy."""
 
 
 def prediction_errors(covariance: NDArray[np.floating]) -> Array:
@@ -99,47 +103,125 @@ def unpredicted(covariance: NDArray[np.floating], weights: Array) -> tuple[Array
 
 
 def contacts(evidence: Evidence) -> list[Finding]:
-    """Sites whose trace no other site shares, with drift told from noise; the reference."""
-    log, frame = evidence.log, evidence.frame
-    reference = evidence.references()
-    sites = np.flatnonzero(~reference)
-    found = []
+    """Sites whose trace no other site shares, slow drift told from noise; the reference."""
+    log = evidence.log
+    sites = np.flatnonzero(~evidence.references())
+    large = np.bincount(evidence.frame.chain)[evidence.frame.chain[sites]] >= SMALL_CHAIN
     covariance = log.covariance[:, sites[:, None], sites]
+    found = _small_chains(evidence, sites[~large], sites[large])
+    if large.sum() >= 3:
+        chosen = sites[large]
+        block = covariance[:, large][:, :, large]
+        found += _apart(evidence, chosen, block)
+    return [*found, *_noisy_reference(evidence, sites)]
+
+
+def _apart(
+    evidence: Evidence, sites: NDArray[np.intp], covariance: NDArray[np.floating]
+) -> list[Finding]:
+    log = evidence.log
     weights = prediction_errors(covariance)
     share, size = unpredicted(covariance, weights)
-    muscle = log.mean(evidence.marked("muscle"))[:, sites]
-    eyes = log.mean(evidence.marked("eye"))[:, sites]
-    usual = median_of_known(size.T).astype(np.float64)[:, None]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        above = 20 * np.log10(size / usual)
-    known = np.isfinite(share) & (muscle < MUSCLE_SHARE)
+    level = _level_size(evidence, sites, weights)
+    muscle = log.mean(evidence.muscle())[:, sites]
+    eyes = log.mean(evidence.marked("eye") & evidence.front())[:, sites] >= EYE_SHARE
+    there = np.isfinite(share)
+    known = there & (muscle < MUSCLE_SHARE)
+    above, wander = _above_usual(size), _above_usual(level)
     with np.errstate(invalid="ignore"):
-        asked = np.where(eyes >= EYE_SHARE, APART_WITH_EYES, APART_SHARE)
-        held = known & (share >= asked) & (above >= APART_DB) & (size >= APART_UV)
-    slow = _level_size(evidence, sites, weights)
+        noisy = known & (share >= np.where(eyes, APART_WITH_EYES, APART_SHARE))
+        noisy &= (above >= APART_DB) & (size >= APART_UV)
+        drifting = there & (wander >= np.where(eyes, DRIFT_WITH_EYES_DB, DRIFT_DB))
+        drifting &= level >= DRIFT_UV
+    held = noisy | drifting
+    found = []
     for index in np.flatnonzero(held.any(axis=0)):
-        times = held[:, index]
-        decibel = float(np.median(above[times, index]))
-        uv = float(np.median(size[times, index]))
-        drifts = bool(np.median(slow[times, index]) > DRIFT_RATIO * uv)
+        when = held[:, index]
+        drifts = bool(drifting[:, index].sum() > 0.5 * when.sum())
+        decibel, uv = (wander, level) if drifts else (above, size)
+        decibel = float(np.median(decibel[when, index]))
+        uv = float(np.median(uv[when, index]))
+        least = (DRIFT_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
         found.append(
             Finding(
                 cause="site",
                 sign="drift" if drifts else "apart",
                 rows=(int(sites[index]),),
-                held=times,
-                known=known[:, index],
-                plain=decibel >= PLAIN_DB,
-                weight=decibel * float(times.mean()),
+                held=when,
+                known=known[:, index] | when,
+                plain=decibel >= least[0] and uv >= least[1],
+                weight=decibel * float(when.mean()),
                 reason=(
-                    f"wanders by {np.median(slow[times, index]):.0f} uV on its own"
+                    f"wanders by {uv:.0f} uV on its own"
                     if drifts
                     else f"{uv:.0f} uV that no other site shares, "
                     f"{10 ** (decibel / 20):.0f} times the usual here"
                 ),
             )
         )
-    return [*found, *_noisy_reference(evidence, sites)]
+    return found
+
+
+def _above_usual(size: Array) -> Array:
+    """Amplitudes over the median site's of the stretch, decibel."""
+    usual = median_of_known(size.T).astype(np.float64)[:, None]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray(20 * np.log10(size / usual))
+
+
+def _small_chains(
+    evidence: Evidence, sites: NDArray[np.intp], others: NDArray[np.intp]
+) -> list[Finding]:
+    """Noise in chains of three or four, such as Fz-Cz-Pz of a double banana.
+
+    In a frame of mean zero, noise of one electrode of three is there with two thirds, and
+    with one third at each of the other two: four fifths, nearly, of the power is its own.
+    Which of them it is stays a suspicion.
+    """
+    log, frame = evidence.log, evidence.frame
+    variance = np.einsum("bss->bs", log.covariance.astype(np.float64))
+    if len(others) < 4:
+        return []
+    usual = median_of_known(variance[:, others].T).astype(np.float64)
+    eyes = log.mean(evidence.marked("eye"))
+    muscle = log.mean(evidence.muscle())
+    found = []
+    for number in np.unique(frame.chain[sites]):
+        rows = sites[frame.chain[sites] == number]
+        if len(rows) < 3:
+            continue
+        part = variance[:, rows]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            share = part / part.sum(axis=1, keepdims=True)
+            above = 10 * np.log10(part / usual[:, None])
+        calm = (eyes[:, rows].max(axis=1) < EYE_SHARE) & (
+            muscle[:, rows].max(axis=1) < MUSCLE_SHARE
+        )
+        known = np.isfinite(share) & np.isfinite(above) & calm[:, None]
+        with np.errstate(invalid="ignore"):
+            held = known & (share >= SMALL_CHAIN_SHARE) & (above >= APART_DB)
+            held &= part >= PLAIN_UV**2
+        for index in np.flatnonzero(held.any(axis=0)):
+            when = held[:, index]
+            uv = float(np.median(np.sqrt(part[when, index])))
+            decibel = float(np.median(above[when, index]))
+            names = ", ".join(frame.sites[row] for row in rows)
+            found.append(
+                Finding(
+                    cause="site",
+                    sign="apart",
+                    rows=(int(rows[index]),),
+                    held=when,
+                    known=known[:, index],
+                    plain=decibel >= PLAIN_DB,
+                    weight=decibel * float(when.mean()),
+                    reason=(
+                        f"{uv:.0f} uV more than elsewhere in the chain {names}, most of it "
+                        "here; so short a chain cannot tell for sure which site it is"
+                    ),
+                )
+            )
+    return found
 
 
 def _level_size(evidence: Evidence, sites: NDArray[np.intp], weights: Array) -> Array:

@@ -17,6 +17,13 @@ if TYPE_CHECKING:
 Bools = NDArray[np.bool_]
 Array = NDArray[np.float64]
 
+SMALL_CHAIN = 5
+"""With fewer electrodes a chain has too few neighbours for the usual comparisons."""
+
+MUSCLE_FAST_DB = -6.0
+FRONT_Y = 0.35
+"""Share of the way to the nose from which a site is near the eyes."""
+
 REST_SHARE = 0.5
 """A stretch counts for a site if the site was there for this part of it."""
 
@@ -36,6 +43,12 @@ class Evidence:
     pops : tuple of (float, tuple of int)
         Moment in seconds and rows of every pop.
     swing : array, shape (n_epochs, n_sites), microvolt
+    step : array, shape (n_epochs, n_sites), microvolt
+        Fastest step.
+    step_rise : array, shape (n_epochs, n_sites), decibel
+        Fastest step against the site's usual.
+    fast_share : array, shape (n_epochs, n_sites), decibel
+        Power at 18-45 Hz over power at 2-14 Hz.
     mains_ratio : array, shape (n_epochs, n_sites), decibel
     line_frequency : float or None
         None where mains is not carried.
@@ -48,6 +61,9 @@ class Evidence:
     sure: Array
     pops: tuple[tuple[float, tuple[int, ...]], ...]
     swing: NDArray[np.float32]
+    step: NDArray[np.float32]
+    step_rise: NDArray[np.float32]
+    fast_share: NDArray[np.float32]
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None
 
@@ -60,6 +76,22 @@ class Evidence:
         row = KIND_NAMES.index(kind)
         limit = (self.doubtful if doubtful else self.sure)[row]
         return np.nan_to_num(self.probability[row], nan=-1.0) >= limit
+
+    def muscle(self) -> Bools:
+        """Seconds of muscle that are fast enough to be muscle, (n_epochs, n_sites).
+
+        The noise of a poor contact is taken for muscle now and then; it is strongest where
+        muscle is weakest, below 10 Hz.
+        """
+        with np.errstate(invalid="ignore"):
+            slow = self.fast_share < MUSCLE_FAST_DB
+        return self.marked("muscle") & ~slow
+
+    def front(self) -> Bools:
+        """Sites whose place the eyes reach, or whose place is unknown, (n_sites,)."""
+        places = self.frame.positions
+        with np.errstate(invalid="ignore"):
+            return ~(places[:, 1] / np.linalg.norm(places, axis=1) < FRONT_Y)
 
     def references(self) -> Bools:
         """Which rows are reference electrodes, (n_sites,)."""

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 PLAIN_POPS = 3
 """From so many pops on an electrode is prepared again; fewer are watched."""
@@ -21,6 +21,9 @@ LOOSE_SECONDS = 3
 
 MUSCLE_NEAR_SECONDS = 1
 
+SMALL_CHAIN_TIMES, SMALL_CHAIN_UV = 1.5, 20.0
+SMALL_CHAIN_RISE_DB, SMALL_CHAIN_CALM_DB = 12.0, 8.0
+
 
 def popping(evidence: Evidence) -> list[Finding]:
     """Sites and references that pop; those that also run wild are loose leads."""
@@ -29,6 +32,7 @@ def popping(evidence: Evidence) -> list[Finding]:
     epochs, rows = _pop_cells(evidence)
     pops = np.zeros((len(log.onset), n))
     np.add.at(pops, (epochs, rows), 1)
+    pops[(pops == 0) & _small_chain_pops(evidence)] = 1
     wild = _wild(evidence)
     per_stretch = log.total(pops)
     wild_stretch = log.total(wild)
@@ -79,7 +83,7 @@ def _pop_cells(evidence: Evidence) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     rows = np.array([row for _, row in pairs], dtype=np.intp)
     onset = evidence.log.onset
     epochs = np.clip(np.searchsorted(onset, moments, side="right") - 1, 0, len(onset) - 1)
-    muscle = evidence.marked("muscle")
+    muscle = evidence.muscle()
     near = muscle.copy()
     for shift in range(1, MUSCLE_NEAR_SECONDS + 1):
         near[shift:] |= muscle[:-shift]
@@ -101,7 +105,33 @@ def _wild(evidence: Evidence) -> NDArray[np.bool_]:
     times = np.where(evidence.marked("eye"), 4.0, 2.0)
     with np.errstate(invalid="ignore"):
         wild = (swing > WILD_UV) & (swing > WILD_RATIO * usual) & (swing > times * second)
-    return np.asarray(wild)
+    return np.asarray(wild & ~evidence.muscle())
+
+
+def _small_chain_pops(evidence: Evidence) -> NDArray[np.bool_]:
+    """Steps in chains too small for neighbours to speak, (n_epochs, n_sites).
+
+    A step at one electrode of a chain of three is solved as two thirds there and one third,
+    turned over, at each of the other two. It is a pop if its electrode has the largest part
+    of it, far above its usual, while no other chain steps.
+    """
+    chain = evidence.frame.chain
+    sizes = np.bincount(chain)
+    step = np.nan_to_num(evidence.step, nan=0.0)
+    rise = np.nan_to_num(evidence.step_rise, nan=-99.0)
+    found = np.zeros(step.shape, dtype=bool)
+    for number in np.flatnonzero((sizes < SMALL_CHAIN) & (sizes >= 3)):
+        rows = np.flatnonzero(chain == number)
+        others = rise[:, chain != number]
+        calm = others.max(axis=1, initial=-99.0) < SMALL_CHAIN_CALM_DB
+        order = np.argsort(-step[:, rows], axis=1)
+        first = np.take_along_axis(step[:, rows], order, axis=1)
+        lead = (first[:, 0] >= SMALL_CHAIN_TIMES * first[:, 1]) & calm
+        at = rows[order[:, 0]]
+        epochs = np.arange(len(step))
+        lead &= (rise[epochs, at] >= SMALL_CHAIN_RISE_DB) & (first[:, 0] >= SMALL_CHAIN_UV)
+        found[epochs[lead], at[lead]] = True
+    return found
 
 
 def _busiest(onset: NDArray[np.float64], count: NDArray[np.generic]) -> float:

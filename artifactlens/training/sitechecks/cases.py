@@ -5,7 +5,6 @@ from __future__ import annotations
 import itertools
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,8 +44,6 @@ MIX: dict[str, int] = {
 PATIENT_MIX: dict[str, int] = {
     "muscle bursts": 1, "tonic muscle": 1, "blinks": 1, "gaze": 1,
 }  # fmt: skip
-
-Option = TypeVar("Option", bound=str)
 
 
 @dataclass(frozen=True, slots=True)
