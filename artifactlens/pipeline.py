@@ -208,7 +208,7 @@ def _evidence(measured: Measured, model: Model, judgement: Judgement) -> Evidenc
         swing=table.column("swing"),
         step=table.column("step"),
         step_rise=table.column("step_rise"),
-        fast_share=table.column("fast_share"),
+        fast_power=table.column("fast_power"),
         mains_ratio=table.column("mains_ratio"),
         line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
     )

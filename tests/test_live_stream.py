@@ -232,7 +232,7 @@ def drop_patterns(draw):
 
 
 @given(drop_patterns())
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 def test_every_sample_lands_on_its_place_and_drop_outs_are_missing(pattern):
     rate, indices, noise, ends = pattern
     assembler = Assembler(rate, 2)
@@ -251,7 +251,7 @@ def test_every_sample_lands_on_its_place_and_drop_outs_are_missing(pattern):
 @given(
     st.lists(st.tuples(st.integers(0, 130), st.integers(1, 60)), min_size=1, max_size=12)
 )
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 def test_what_comes_twice_or_too_late_is_discarded_and_nothing_is_reordered(chunks):
     assembler = Assembler(100.0, 2)
     sent = [np.arange(start, start + n) for start, n in chunks]
@@ -287,6 +287,17 @@ def test_a_clock_that_steps_far_back_begins_a_segment():
     assert assembler.discarded == 0
 
 
+def test_a_clock_is_seen_to_step_back_behind_a_repeat_in_the_same_piece():
+    assembler = Assembler(100.0, 2)
+    repeat, anew = piece(np.arange(45, 50), 100.0), piece(np.arange(40), 100.0, at=20.0)
+    both = Samples(
+        np.concatenate([repeat.uv, anew.uv], axis=1), np.r_[repeat.times, anew.times]
+    )
+    grids = laid_out(assembler, [piece(np.arange(50), 100.0), both])
+    assert [grid.shape[1] for grid in grids] == [50, 40]
+    assert assembler.discarded == 5
+
+
 def test_samples_without_a_time_are_discarded():
     assembler = Assembler(100.0, 2)
     samples = piece(np.arange(10), 100.0)
@@ -318,12 +329,23 @@ def test_a_source_off_its_nominal_rate_runs_without_holes(parts_per_million):
     assembler = Assembler(250.0, 2)
     actual = 250.0 * (1 + parts_per_million * 1e-6)
     end = np.nan
-    for start in range(0, 250 * 300, 50):
+    for start in range(0, 250 * 120, 50):
         (stretch,) = assembler.add(piece(np.arange(start, start + 50), actual))
         assert stretch.uv.shape[1] == 50
         end = stretch.time + 50 / actual
-    assert end == pytest.approx(100.0 + 250 * 300 / actual, abs=1 / 250)
+    assert end == pytest.approx(100.0 + 250 * 120 / actual, abs=1 / 250)
     assert assembler.filled == assembler.discarded == 0
+
+
+def test_a_wrong_nominal_rate_is_learnt():
+    assembler = Assembler(1000.0, 2)
+    pieces = [piece(np.arange(k, k + 100), 998.0) for k in range(0, 90_000, 100)]
+    laid_out(assembler, pieces[:600])
+    holes = assembler.filled
+    assert 0 < holes < 60  # of the 120 ms that the source falls behind in a minute
+    for samples in pieces[600:]:
+        assembler.add(samples)
+    assert (assembler.filled, assembler.discarded) == (holes, 0)
 
 
 def test_a_piece_of_other_channels_is_refused():
@@ -597,7 +619,7 @@ def test_of_two_others_with_the_same_name_neither_is_taken(lsl, patient):
         others = [outlet("b"), outlet("c")]
         del first
         pull_until(inlet, lambda p: isinstance(p, Gone))
-        last = time.monotonic() + 1.0
+        last = time.monotonic() + 0.9
         while time.monotonic() < last:
             assert inlet.pull(0.1) == []
         back = outlet("a")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from functools import cache
 from typing import TYPE_CHECKING, Any
@@ -60,7 +61,6 @@ def sheet_html(result: Result) -> str:
     shown = marks(result)
     advice = sorted(result.advice, key=lambda entry: entry.number)
     full, rest = advice[:IN_FULL], advice[IN_FULL:]
-    limits = _limits(len(full))
     sentence, more = what_to_do(result)
     return _template().render(
         recording=result.recording,
@@ -77,7 +77,7 @@ def sheet_html(result: Result) -> str:
         watched=_grouped(shown, "watch"),
         impedance=impedance_words(result.sites),
         order=", ".join(ORDER_OF_CHECKS),
-        entries=[_row(entry, result, *limits) for entry in full],
+        entries=[_row(e, result, *_limits(e.reason, len(full))) for e in full],
         rest=[_row(entry, result, 40, 24) for entry in rest],
         blank=range(4 if not full else 2 if len(full) <= ROOMY else 0),
         roomy=len(full) <= ROOMY,
@@ -193,7 +193,7 @@ def _row(entry: Advice, result: Result, why: int, check: int) -> dict[str, Any]:
     return {
         "number": entry.number,
         "symbol": _picture(symbol(entry.verdict, 0, 0, 10, str(entry.number))),
-        "subject": cut(entry.subject),
+        "subject": cut(entry.subject, 40),
         "verdict": entry.verdict,
         "confidence": entry.confidence,
         "impedance": f"{', '.join(known)}\u00a0kΩ" if 0 < len(known) < 3 else "",
@@ -205,11 +205,13 @@ def _row(entry: Advice, result: Result, why: int, check: int) -> dict[str, Any]:
     }
 
 
-def _limits(n_entries: int) -> tuple[int, int]:
+def _limits(reason: str, n_entries: int) -> tuple[int, int]:
     """Characters for the reason and for the checks, so that the list keeps to its page."""
-    lines = min(5, LINES_OF_LIST // max(1, n_entries))
+    lines = min(5, LINES_OF_LIST // n_entries)
+    why = lines - lines // 2
+    used = min(why, math.ceil(len(reason) / LETTERS_OF_LINE))
     # What to do is set in bold letters, which are wider.
-    return LETTERS_OF_LINE * (lines - lines // 2), LETTERS_OF_LINE * (lines // 2) - 6
+    return LETTERS_OF_LINE * why, LETTERS_OF_LINE * (lines - used) - 6
 
 
 def _legend() -> list[tuple[Markup, str, str, str]]:

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from collections import defaultdict
 from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
@@ -246,7 +246,18 @@ def _answer(
     if cut.sites_uv.shape[1] < sampling_rate * LEAST_S:
         return Answer("cannot tell", (), "the signal is missing there")
     traces = reduce_traces(cut.sites_uv, sampling_rate, places.frame, cut.start, fast=fast)
-    return _JUDGES[task.kind.split()[0]](Look(task, traces, places, since))
+    answer = _JUDGES[_family(task)](Look(task, traces, places, since))
+    return answer if task.timed else _unasked(answer)
+
+
+def _unasked(answer: Answer) -> Answer:
+    """What is left of an answer at no known time: nobody knows whether it was the task."""
+    if any(suspect.plain for suspect in answer.suspects):
+        return answer
+    verdict = answer.verdict
+    if verdict in ("mirrored", "one side missing"):
+        verdict = "cannot tell"
+    return replace(answer, verdict=verdict, suspects=())
 
 
 def _response(frame: Frame, task: Task, answer: Answer) -> Response:
@@ -279,19 +290,23 @@ def _faults(
             found[suspect.cause, suspect.sign, suspect.rows].append((task, suspect))
     for (cause, sign, rows), group in found.items():
         families = {_family(task) for task, _ in group}
-        against = sum(
-            _speaks_for(answer, rows, cause)
+        others = [
+            answer
             for task, answer in zip(tasks, answers, strict=True)
-            if _family(task) in families
-        )
-        if against >= len(group):
+            if _family(task) in families and answer.verdict != "cannot tell"
+        ]
+        against = sum(_speaks_for(answer, rows, cause) for answer in others)
+        if against >= len(group) or 2 * len(group) <= len(others):
             continue
+        # What one of several tasks showed and the others could not tell is not plain.
+        count = sum(_family(task) in families for task in tasks)
         first = {_family(task): suspect for task, suspect in reversed(group)}
         yield LeadFault(
             cause=cause,
             sign=sign,
             sites=tuple(frame.sites[row] for row in rows),
-            plain=len(families) > 1 or any(suspect.plain for _, suspect in group),
+            plain=len(families) > 1
+            or (any(suspect.plain for _, suspect in group) and 2 * len(group) > count),
             stretches=tuple((task.onset, task.end) for task, _ in group),
             reason="; ".join(first[family].reason for family in sorted(families)),
             checks=next(iter(first.values())).checks,
@@ -305,5 +320,5 @@ def _family(task: Task) -> str:
 def _speaks_for(answer: Answer, rows: tuple[int, ...], cause: str) -> bool:
     """Whether an answer shows that the sites are sound, or the patient was willing."""
     if cause == "patient":
-        return bool(answer.sound)
+        return not set(rows).isdisjoint(answer.sound)
     return set(rows) <= set(answer.sound)

@@ -27,6 +27,12 @@ SEEN_SHARE = 0.25
 ANSWER_SHARE = 0.3
 """A site answers from this share of what is expected there on: heads differ."""
 
+NEGATIVE_SHARE = 0.5
+"""The same for the reverse, which a restless lead may show by chance."""
+
+UNASKED_UV, UNASKED_COUNT = 80.0, 3
+"""Size and number of blinks that were not asked for, before a lead is blamed by them."""
+
 MOST_BLINKS = 8
 
 CHECKS_SILENT = (
@@ -71,16 +77,21 @@ def judge_blinks(look: Look) -> Answer:
         return _inverted(
             look, targets[toward[targets] & (values[targets] < 0)], values, len(at)
         )
-    sound = strongest_first(targets[(toward & (values > 0))[targets]], values)
-    negative = strongest_first(targets[(toward & (values < 0))[targets]], values)
-    silent = targets[(~toward & (limit <= 0.6 * normal))[targets]]
-    silent = tuple(int(row) for row in silent)
+    positive = toward & (values > 0)
+    reverse = toward & (-values >= np.maximum(1.3 * limit, NEGATIVE_SHARE * normal))
+    sound = strongest_first(targets[positive[targets]], values)
+    negative = strongest_first(targets[reverse[targets]], values)
+    mute = ~positive & ~reverse & (limit <= 0.6 * normal)
+    silent = tuple(int(row) for row in targets[mute[targets]])
     suspects = []
+    # At no known time, frontal slow waves of the brain may pass for blinks.
+    large = float(np.median(common[at])) >= UNASKED_UV and len(at) >= UNASKED_COUNT
+    sure = bool(sound) and (look.task.timed or large)
     number = "one blink" if len(at) == 1 else f"{len(at)} blinks"
     if negative:
         suspects.append(
             Suspect(
-                "placement", "mirrored", negative, len(at) > 1,
+                "placement", "mirrored", negative, sure and len(at) > 1,
                 f"negative in {number} ({look.measured(negative, values)}) where the frontal "
                 "poles become positive", CHECKS_NEGATIVE,
             )
@@ -90,7 +101,7 @@ def judge_blinks(look: Look) -> Answer:
         instead = f", while {look.measured(other, values)}" if other else ""
         suspects.append(
             Suspect(
-                "site", "no response", silent, True,
+                "site", "no response", silent, sure,
                 f"no deflection in {number} of {np.median(common[at]):.0f} uV that other "
                 f"frontal sites show{instead}", CHECKS_SILENT,
             )

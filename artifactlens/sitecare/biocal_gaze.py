@@ -35,8 +35,24 @@ FIRST_SHARE = 0.4
 REST_SHARE = 0.3
 """The other sites confirm a movement from this share of it on."""
 
-TRACK_RATIO = 2.0
-"""How much farther the eyes go to one side than to the other, to be on that side."""
+TRACK_RATIO, MIRRORED_RATIO = 1.5, 3.0
+"""How much farther the eyes go to the named side than to the other, to have answered; and to
+the other side, to be called mirrored."""
+
+ANSWER_UV, SURE = 15.0, 2.5
+"""Least movement that counts at one temple, and the standard errors it exceeds."""
+
+SILENT_SHARE = 0.35
+"""A temple that moves by more than this share of the other is not silent."""
+
+PLAIN_UV = 30.0
+"""Movement from which a lead is blamed plainly, and at all for the wrong way."""
+
+UNASKED_COUNT = 3
+"""Movements that were not asked for, before a lead is blamed by them."""
+
+RESTLESS = 2.0
+"""A temple so many times as restless as the other takes no part in finding movements."""
 
 SETTLED_S = 1.5
 """So long after the announcement before, a movement may still belong to that."""
@@ -98,7 +114,9 @@ def judge_gaze(look: Look) -> Answer:
     sides = _sides(look)
     if sides is None:
         return Answer("cannot tell", (), _why_not(look))
-    seen = _movements(look, sides, look.within(look.traces.time))
+    time = look.traces.time
+    within = (time >= look.task.onset - 0.2) & (time <= look.task.end)
+    seen = _movements(look, sides, within)
     rows = sides.rows
     if seen is None:
         return _nothing(look, rows)
@@ -155,38 +173,43 @@ def _movements(look: Look, sides: _Sides, when: NDArray[np.bool_]) -> _Seen | No
     """Find the movements: where a temple, or their difference, moves beyond its quiet level."""
     from scipy.signal import find_peaks
 
+    quiet = sides.quiet_left, sides.quiet_right
+    limits = [max(MOVE_UV, NOISE_FACTOR * level) for level in quiet]
     half_quiet = float(quiet_level(sides.half[None])[0])
-    limits = [
-        max(MOVE_UV, NOISE_FACTOR * level)
-        for level in (sides.quiet_left, sides.quiet_right)
-    ]
     half_limit = max(0.5 * MOVE_UV, NOISE_FACTOR * half_quiet)
     # A blink that is taken off leaves a rest at either side: no movement of its own.
-    clear = np.abs(sides.blink) <= 0.5 * np.maximum(np.abs(sides.left), np.abs(sides.right))
-    size = np.maximum.reduce([
-        np.where(clear, np.abs(sides.left) / limits[0], 0.0),
-        np.where(clear, np.abs(sides.right) / limits[1], 0.0),
-        np.abs(sides.half) / half_limit,
-    ])  # fmt: skip
-    size = np.where(when, np.nan_to_num(size), 0.0)
-    if size.max(initial=0.0) < 1:
+    both = np.stack([sides.left, sides.right])
+    clear = np.abs(sides.blink) <= 0.5 * np.abs(both).max(axis=0)
+    alone = np.where(clear, np.abs(both) / np.array(limits)[:, None], 0.0)
+    half = np.abs(sides.half) / half_limit
+    size, sign = (
+        (alone[0], -sides.left)
+        if quiet[1] > RESTLESS * quiet[0]
+        else (alone[1], sides.right)
+        if quiet[0] > RESTLESS * quiet[1]
+        else (half, sides.half)
+    )
+    inside = np.where(when, size, 0.0)
+    if not np.nanmax(inside, initial=0.0) >= 1:
+        size, sign = alone.max(axis=0), sides.half
+        inside = np.where(when, size, 0.0)
+    largest = float(np.nanmax(inside, initial=0.0))
+    if largest < 1:
         return None
-    opposed = np.where(when & (np.abs(sides.half) >= half_limit), np.abs(sides.half), 0.0)
-    leader = opposed if opposed.any() else size
-    height = max(FIRST_SHARE * float(leader.max()), 1e-9)
+    # Peaks of the whole trace: what rises towards the edge belongs to the next task.
     at, _ = find_peaks(
-        np.pad(leader, 1),
-        height=height,
+        np.nan_to_num(size),
+        height=max(FIRST_SHARE * largest, 0.5),
         distance=max(1, round(0.25 * look.traces.slow_rate)),
     )
-    at = at - 1
-    way = np.where(sides.half[at] >= 0, 1.0, -1.0)
+    at = at[when[at]]
+    if not len(at):
+        return None
+    way = np.where(sign[at] >= 0, 1.0, -1.0)
     left, right = (float(np.median(way * trace[at])) for trace in (sides.left, sides.right))
-    spread = 3 * 1.25 / np.sqrt(len(at))
-    return _Seen(
-        at, way, left, right,
-        max(MOVE_UV, spread * sides.quiet_left), max(MOVE_UV, spread * sides.quiet_right),
-    )  # fmt: skip
+    spread = SURE * 1.25 / np.sqrt(len(at))
+    answer_limits = [max(ANSWER_UV, spread * level) for level in quiet]
+    return _Seen(at, way, left, right, answer_limits[0], answer_limits[1])
 
 
 def _opposite(look: Look, sides: _Sides, seen: _Seen, values: Array) -> Answer:
@@ -204,12 +227,14 @@ def _opposite(look: Look, sides: _Sides, seen: _Seen, values: Array) -> Answer:
         return Answer("as expected", rows, measured, rows)
     values = -values
     measured = look.measured(rows, values)
-    if away < TRACK_RATIO * towards:
+    if away < MIRRORED_RATIO * towards:
         return Answer("cannot tell", rows, "the eyes went to both sides")
-    if _came_early(look, sides, named, away):
-        return Answer("cannot tell", rows, "the eyes had moved before it was noted")
-    confirmed = float(np.median(seen.way * sides.rest[seen.at]))
     size = (seen.right - seen.left) / 2
+    if _came_early(look, sides, named, size):
+        return Answer("cannot tell", rows, "the eyes had moved before it was noted")
+    if size < PLAIN_UV:
+        return Answer("cannot tell", rows, f"{measured}, too small to tell a side")
+    confirmed = float(np.median(seen.way * sides.rest[seen.at]))
     names = look.names(rows)
     if np.isfinite(confirmed) and confirmed <= -REST_SHARE * size:
         reason = (
@@ -253,11 +278,16 @@ def _same_sign(look: Look, rows: tuple[int, int], values: Array) -> Answer:
 def _one_side(look: Look, sides: _Sides, seen: _Seen, values: Array) -> Answer:
     """One temple moves, the other does not: the silent one is suspect if the rest agrees."""
     left, right = sides.rows
-    moving, silent = (right, left) if abs(seen.right) >= abs(seen.left) else (left, right)
-    size = max(abs(seen.left), abs(seen.right))
-    limit = seen.limit_left if silent == left else seen.limit_right
-    loud = seen.limit_right if silent == left else seen.limit_left
-    if size < loud or limit > size:
+    sizes = {left: abs(seen.left), right: abs(seen.right)}
+    limits = {left: seen.limit_left, right: seen.limit_right}
+    moving = max(sizes, key=lambda row: sizes[row] / limits[row])
+    silent = left if moving == right else right
+    size = sizes[moving]
+    if (
+        size < limits[moving]
+        or limits[silent] > 0.8 * size
+        or sizes[silent] > SILENT_SHARE * size
+    ):
         return Answer("cannot tell", sides.rows, "the temples are too restless to see it")
     confirmed = float(np.median(seen.way * sides.rest[seen.at]))
     agreed = bool(np.isfinite(confirmed) and confirmed >= REST_SHARE * size)
@@ -269,7 +299,9 @@ def _one_side(look: Look, sides: _Sides, seen: _Seen, values: Array) -> Answer:
         f"no deflection with gaze ({look.measured((silent,), values)}) where "
         f"{look.measured((moving,), values)}"
     )
-    suspect = Suspect("site", "no response", (silent,), agreed, reason, CHECKS_SILENT)
+    enough = 1 if look.task.timed else UNASKED_COUNT
+    plain = agreed and size >= PLAIN_UV and len(seen.at) >= enough
+    suspect = Suspect("site", "no response", (silent,), plain, reason, CHECKS_SILENT)
     return Answer("one side missing", (silent,), clause, (moving,), (suspect,))
 
 

@@ -18,6 +18,9 @@ CLENCH_DB = 8.0
 RISE_DB = 6.0
 """Rise from which a site answers (our own choice)."""
 
+SILENT_DB = 3.0
+"""Rise up to which a site is silent; what lies between tells nothing (our own choice)."""
+
 CLENCH_UV = 2.0
 """Amplitude of 20 to 44 Hz that a clench adds at least (common practice)."""
 
@@ -63,23 +66,18 @@ def judge_jaw(look: Look) -> Answer:
     everyone = tuple(int(row) for row in temples)
     if at is None:
         return _nothing(look, everyone)
-    added = (
-        np.sqrt(_smoothed(traces.power)[:, at])
-        if known.all()
-        else np.sqrt(np.where(known, _smoothed(np.nan_to_num(traces.power))[:, at], np.nan))
-    )
     values = rise[:, at]
-    excess = added**2 - 10 ** (usual / 10)
+    quiet = 10 ** (usual / 10)
+    excess = _smoothed(traces.power)[:, at] - quiet
     middle = np.flatnonzero(_midline(look) & known)
     loudest = float(np.max(excess[temples]))
-    if len(middle) and loudest < 10 ** (MIDLINE_DB / 10) * max(
-        float(np.median(excess[middle])), 0
-    ):
-        return Answer(
-            "cannot tell", everyone, "power above 20 Hz rises at the midline as well"
-        )
+    added = max(float(np.median(excess[middle])), 0.0) if len(middle) else 0.0
+    if loudest < 10 ** (MIDLINE_DB / 10) * added:
+        clause = "power above 20 Hz rises at the midline as well"
+        return Answer("cannot tell", everyone, clause)
     answers = (values >= RISE_DB) & (excess >= CLENCH_UV**2)
-    return _compare(look, sides, answers, values)
+    silent = (values <= SILENT_DB) & (quiet <= loudest / 4)
+    return _compare(look, sides, answers, silent, values)
 
 
 def _temples(look: Look) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
@@ -118,33 +116,41 @@ def _moment(look: Look, common: Array, sides: list[Array]) -> int | None:
 
 
 def _compare(
-    look: Look, sides: list[NDArray[np.intp]], answers: NDArray[np.bool_], values: Array
+    look: Look,
+    sides: list[NDArray[np.intp]],
+    answers: NDArray[np.bool_],
+    quiet: NDArray[np.bool_],
+    values: Array,
 ) -> Answer:
-    sound = tuple(int(row) for side in sides for row in side[answers[side]])
-    silent = tuple(int(row) for side in sides for row in side[~answers[side]])
-    if not sound:
-        everyone = tuple(int(row) for side in sides for row in side)
-        return _nothing(look, everyone)
-    levels = ", ".join(
-        f"{look.name(row)} {values[row]:+.0f} dB" for row in (*sound, *silent)[:6]
+    sound = [tuple(int(row) for row in side[answers[side]]) for side in sides]
+    silent = [tuple(int(row) for row in side[quiet[side]]) for side in sides]
+    heard = sound[0] + sound[1]
+    if not heard:
+        return _nothing(look, tuple(int(row) for side in sides for row in side))
+    shown = (heard + silent[0] + silent[1])[:6]
+    levels = (
+        ", ".join(f"{look.name(row)} {values[row]:+.0f} dB" for row in shown)
+        + " above 20 Hz"
     )
-    if not silent:
-        return Answer("as expected", sound, f"{levels} above 20 Hz", sound)
-    whole = [side for side in sides if not answers[side].any()]
-    if whole:
-        rows = tuple(int(row) for row in whole[0])
-        clause = f"{levels} above 20 Hz: one side only"
-        reason = f"a clench is seen on the other side only ({levels})"
-        alone = len(rows) == 1
-        suspect = Suspect(
-            "site" if alone else "patient", "no response", rows, False, reason,
-            CHECKS_SILENT if alone else CHECKS_ONE_SIDE,
-        )  # fmt: skip
-        suspects = (suspect,) if look.task.timed else ()
-        return Answer("one side missing", rows, clause, sound, suspects)
-    reason = f"no rise above 20 Hz with a clench that other sites of both temples show ({levels})"
-    suspect = Suspect("site", "no response", silent, False, reason, CHECKS_SILENT)
-    return Answer("one side missing", silent, f"{levels} above 20 Hz", sound, (suspect,))
+    if all(sound):
+        lacking = silent[0] or silent[1]
+        if not lacking or all(silent):  # a weak clench does not reach all sites
+            return Answer("as expected", heard, levels, heard)
+        reason = f"no rise with a clench that both temples show ({levels})"
+        suspect = Suspect("site", "no response", lacking, False, reason, CHECKS_SILENT)
+        return Answer("one side missing", lacking, levels, heard, (suspect,))
+    lacking = silent[0] if sound[1] else silent[1]
+    if not lacking:
+        return Answer("cannot tell", heard, f"{levels}, on one side only")
+    alone = len(sides[0] if sound[1] else sides[1]) == 1
+    reason = f"a clench is seen on the other side only ({levels})"
+    suspect = Suspect(
+        "site" if alone else "patient", "no response", lacking, False, reason,
+        CHECKS_SILENT if alone else CHECKS_ONE_SIDE,
+    )  # fmt: skip
+    suspects = (suspect,) if look.task.timed else ()
+    clause = f"{levels}: one side only"
+    return Answer("one side missing", lacking, clause, heard, suspects)
 
 
 def _nothing(look: Look, rows: tuple[int, ...]) -> Answer:

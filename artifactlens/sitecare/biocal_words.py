@@ -80,9 +80,10 @@ def protocol_tasks(start: float) -> tuple[Task, ...]:
 # All patterns are matched against words of small letters with one blank between them.
 _SIDE = r"(?P<side>left|right|l|r|lt|rt)(?:wards?)?"
 _BOTH = (
-    r"(?:left (?:and |to |then )?right|right (?:and |to |then )?left|l r|r l|lt rt|rt lt)"
+    r"(?:left (?:and |to |then )?right|right (?:and |to |then )?left|side to side"
+    r"|l r|r l|lt rt|rt lt)"
 )
-_ACROSS = rf"(?:lateral(?:ly)?|horizontal(?:ly)?|side to side|sideways|{_BOTH})"
+_ACROSS = r"(?:lateral(?:ly)?|horizontal(?:ly)?|sideways)"
 _LOOK = r"(?:look|looks|looking|gaze|gazes|gazing|glance|saccades?|eyes|eye movements?)"
 _WAY = r"(?:(?:to|towards?|the|his|her|their|far|all|move|moved|moving|go|turn|turned) )*"
 _BODY = r"(?:arm|hand|leg|foot|side|ear|eye|face|finger|toe|thumb|temporal|frontal|hemi\w*|eeg)s?"
@@ -91,9 +92,10 @@ _BLINKS = re.compile(r"\b(?:blink|blinks|blinked|blinking|eyeblinks?)\b")
 _JAW = re.compile(
     r"\b(?:jaws?|bite|bites|biting|teeth|chew|chews|chewing|clench|clenches|clenched|clenching)\b"
 )
-_GAZE = re.compile(
-    rf"\b(?:{_LOOK} {_WAY}{_ACROSS}"
-    rf"|{_ACROSS} (?:eyes?|gaze|look|looks|saccades?|saccadic)(?: movements?| moves?)?)\b"
+_MOVE = r"(?:eyes?|gaze|look|looks|saccades?|saccadic)(?: movements?| moves?)?"
+_GAZE_BOTH, _GAZE_ACROSS = (
+    re.compile(rf"\b(?:{_LOOK} {_WAY}{manner}|{manner} {_MOVE})\b")
+    for manner in (_BOTH, _ACROSS)
 )
 _GAZE_SIDE = re.compile(
     rf"\b(?:{_LOOK} {_WAY}{_SIDE}(?! {_BODY}\b)"
@@ -128,13 +130,15 @@ def task_words(text: str) -> str | None:
         return "blink"
     if _JAW.search(words):
         return "jaw"
-    if _GAZE.search(words):
+    if _GAZE_BOTH.search(words):
         return "gaze"
     sides = {(match["side"] or match["before"])[0] for match in _GAZE_SIDE.finditer(words)}
     if sides:
         return (
             "gaze" if len(sides) > 1 else {"l": "gaze left", "r": "gaze right"}[sides.pop()]
         )
+    if _GAZE_ACROSS.search(words):
+        return "gaze"
     return UNNAMED if _UNNAMED.search(words) else None
 
 

@@ -32,9 +32,15 @@ REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
 
-DRIFT_DB, DRIFT_WITH_EYES_DB = 12.0, 18.0
+NOISE_OVER_FAST = 4.0
+"""... unless what is slow is this many times what is fast: then it is no muscle alone."""
+
+DRIFT_DB, DRIFT_WITH_EYES_DB = 14.0, 20.0
 DRIFT_UV, DRIFT_PLAIN_UV = 25.0, 50.0
 """How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
+
+MANY_DRIFT = 4
+"""So many sites that wander in one stretch have something in common."""
 
 SMALL_CHAIN_SHARE = 0.58
 """Share of a short chain's power at one of its sites: two thirds if it alone is noisy."""
@@ -123,10 +129,12 @@ def _apart(
     weights = prediction_errors(covariance)
     share, size = unpredicted(covariance, weights)
     level = _level_size(evidence, sites, weights)
-    muscle = log.mean(evidence.muscle())[:, sites]
+    muscle = log.mean(evidence.marked("muscle"))[:, sites] >= MUSCLE_SHARE
+    fast = log.mean(evidence.fast_uv())[:, sites]
     eyes = log.mean(evidence.marked("eye") & evidence.front())[:, sites] >= EYE_SHARE
     there = np.isfinite(share)
-    known = there & (muscle < MUSCLE_SHARE)
+    with np.errstate(invalid="ignore"):
+        known = there & (~muscle | (size >= NOISE_OVER_FAST * fast))
     above, wander = _above_usual(size), _above_usual(level)
     with np.errstate(invalid="ignore"):
         noisy = known & (share >= np.where(eyes, APART_WITH_EYES, APART_SHARE))
@@ -134,7 +142,9 @@ def _apart(
         drifting = there & (wander >= np.where(eyes, DRIFT_WITH_EYES_DB, DRIFT_DB))
         drifting &= level >= DRIFT_UV
     held = noisy | drifting
-    found = []
+    many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
+    found = _sweat(sites, drifting, many, level)
+    held &= ~(many & drifting)
     for index in np.flatnonzero(held.any(axis=0)):
         when = held[:, index]
         drifts = bool(drifting[:, index].sum() > 0.5 * when.sum())
@@ -162,6 +172,36 @@ def _apart(
     return found
 
 
+def _sweat(
+    sites: NDArray[np.intp],
+    drifting: NDArray[np.bool_],
+    many: NDArray[np.bool_],
+    level: Array,
+) -> list[Finding]:
+    """Sites that wander at the same time: the skin or the patient, no electrode."""
+    wet = many & drifting
+    when = wet.any(axis=1)
+    if not when.any():
+        return []
+    rows = np.argsort(-wet.sum(axis=0), kind="stable")
+    rows = rows[wet.any(axis=0)[rows]]
+    return [
+        Finding(
+            cause="patient",
+            sign="drift",
+            rows=tuple(int(sites[row]) for row in rows),
+            held=when,
+            known=np.ones(len(when), dtype=bool),
+            plain=True,
+            weight=float(when.mean()),
+            reason=(
+                f"{len(rows)} sites wander at the same time, by {np.median(level[wet]):.0f} uV, "
+                "consistent with sweat or movement"
+            ),
+        )
+    ]
+
+
 def _above_usual(size: Array) -> Array:
     """Amplitudes over the median site's of the stretch, decibel."""
     usual = median_of_known(size.T).astype(np.float64)[:, None]
@@ -184,7 +224,7 @@ def _small_chains(
         return []
     usual = median_of_known(variance[:, others].T).astype(np.float64)
     eyes = log.mean(evidence.marked("eye"))
-    muscle = log.mean(evidence.muscle())
+    muscle = log.mean(evidence.marked("muscle"))
     found = []
     for number in np.unique(frame.chain[sites]):
         rows = sites[frame.chain[sites] == number]

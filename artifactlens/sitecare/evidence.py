@@ -20,7 +20,6 @@ Array = NDArray[np.float64]
 SMALL_CHAIN = 5
 """With fewer electrodes a chain has too few neighbours for the usual comparisons."""
 
-MUSCLE_FAST_DB = -6.0
 FRONT_Y = 0.35
 """Share of the way to the nose from which a site is near the eyes."""
 
@@ -47,8 +46,8 @@ class Evidence:
         Fastest step.
     step_rise : array, shape (n_epochs, n_sites), decibel
         Fastest step against the site's usual.
-    fast_share : array, shape (n_epochs, n_sites), decibel
-        Power at 18-45 Hz over power at 2-14 Hz.
+    fast_power : array, shape (n_epochs, n_sites), decibel
+        Mean density at 30-45 Hz, uV^2/Hz.
     mains_ratio : array, shape (n_epochs, n_sites), decibel
     line_frequency : float or None
         None where mains is not carried.
@@ -63,7 +62,7 @@ class Evidence:
     swing: NDArray[np.float32]
     step: NDArray[np.float32]
     step_rise: NDArray[np.float32]
-    fast_share: NDArray[np.float32]
+    fast_power: NDArray[np.float32]
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None
 
@@ -77,15 +76,13 @@ class Evidence:
         limit = (self.doubtful if doubtful else self.sure)[row]
         return np.nan_to_num(self.probability[row], nan=-1.0) >= limit
 
-    def muscle(self) -> Bools:
-        """Seconds of muscle that are fast enough to be muscle, (n_epochs, n_sites).
+    def fast_uv(self) -> Array:
+        """Amplitude at 30-45 Hz, microvolt rms, (n_epochs, n_sites); NaN where not carried.
 
         The noise of a poor contact is taken for muscle now and then; it is strongest where
-        muscle is weakest, below 10 Hz.
+        muscle is weakest, so that what is slow is held against this.
         """
-        with np.errstate(invalid="ignore"):
-            slow = self.fast_share < MUSCLE_FAST_DB
-        return self.marked("muscle") & ~slow
+        return np.asarray(np.sqrt(10 ** (self.fast_power.astype(np.float64) / 10) * 15.0))
 
     def front(self) -> Bools:
         """Sites whose place the eyes reach, or whose place is unknown, (n_sites,)."""

@@ -16,8 +16,9 @@ from artifactlens.sitecare.evidence import Evidence, Finding
 
 EVERYWHERE_UV = 0.8
 PLAIN_UV = 4.0
+OF_STRONGEST = 0.08
 """Amplitude (half of peak to peak) at the line from which mains at many sites, or at one,
-is acted upon."""
+is acted upon; a site counts among many if it has that share of the strongest."""
 
 ALONE_UV = 1.0
 ALONE_TIMES = 4.0
@@ -59,7 +60,8 @@ def hums(evidence: Evidence) -> list[Finding]:
     usual = median_of_known(size[:, scalp].T).astype(np.float64)[:, None]
     with np.errstate(divide="ignore", invalid="ignore"):
         hums = known & (ratio >= LEAST_RATIO_DB)
-        held = hums & (size >= EVERYWHERE_UV)
+        least = np.fmax(EVERYWHERE_UV, OF_STRONGEST * np.fmax.reduce(size[:, scalp], axis=1))
+        held = hums & (size >= least[:, None])
         times = size / usual
         alone = hums & (size >= ALONE_UV) & (times >= ALONE_TIMES)
     share = held[:, scalp].sum(axis=1) / np.maximum(known[:, scalp].sum(axis=1), 1)

@@ -58,6 +58,9 @@ several chains leave their means open. The largest in undisturbed recordings at 
 1.0 and 1.6 dB."""
 
 EACH = 1.0
+LIKE=.15
+LIKE_ACROSS=.35
+MODE = "sum"
 QUIET_UV2 = 1e-3
 """Variance of the steps below which a site is without signal."""
 
@@ -289,10 +292,8 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
     inner = inverse[pair[:, :, None], pair[:, None, :]]
     spread = np.linalg.inv(inner)
     residual = moments[n + pair[:, :, None], n + pair[:, None, :]]
-    own = np.einsum("pab,pba->p", inner, spread @ residual @ spread)
-    own_each = np.einsum("paa->pa", spread @ residual @ spread) / np.einsum(
-        "paa->pa", spread
-    )
+    own = np.einsum("pab,pba->p", spread, residual)
+    own_each = np.einsum("paa->pa", spread @ residual @ spread)
 
     # The other's place in the own chain, predicted without the two.
     row = pair[:, ::-1] * n_chains + chain[pair]
@@ -308,12 +309,19 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
     prior = kernel[swapped[:, :, None], swapped[:, None, :]] + noise * np.eye(2)
     due = prior - explained
     other = np.einsum("pab,pba->p", np.linalg.inv(due), varies)
-    other_each = np.einsum("paa->pa", varies) / np.einsum("paa->pa", due)
 
     across = chain[i] != chain[j]
     company = np.bincount(chain)[chain]
     known = (own > 0) & (other > 0)
-    known &= (own_each > EACH * other_each).all(axis=1)
+    likest = (alike - 2 * np.eye(n)).max(axis=1)[pair].min(axis=1)
+    known &= likest >= (LIKE if n_chains==1 else LIKE_ACROSS)
+    raw = np.einsum("paa->pa", varies)
+    if MODE == "sum":
+        known &= raw.sum(axis=1) < EACH * own_each.sum(axis=1)
+    elif MODE == "each":
+        known &= (raw < EACH * own_each).all(axis=1)
+    elif MODE == "max":
+        known &= raw.max(axis=1) < EACH * own_each.max(axis=1)
     known &= ~across | (np.minimum(company[i], company[j]) >= FEWEST_ACROSS)
     gain = np.full((n, n), -np.inf)
     gain[i[known], j[known]] = 10 * np.log10(own[known] / other[known])

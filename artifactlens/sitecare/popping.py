@@ -8,13 +8,16 @@ from numpy.typing import NDArray
 from artifactlens.epochs import median_of_known
 from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
-PLAIN_POPS = 3
-"""From so many pops on an electrode is prepared again; fewer are watched."""
+LEAST_POPS, PLAIN_POPS = 2, 3
+"""From so many pops on an electrode is watched, and prepared again."""
 
 PLAIN_PER_MINUTE = 0.5
 WILD_UV = 150.0
 WILD_RATIO = 5.0
 """A second is wild at a site that swings by this much, and this many times the median site."""
+
+SWING_OVER_FAST = 25.0
+"""Muscle swings by less than this many times its rms at 30-45 Hz."""
 
 LOOSE_SECONDS = 3
 """Wild seconds from which a popping site is called a loose lead."""
@@ -44,7 +47,7 @@ def popping(evidence: Evidence) -> list[Finding]:
         bad = int(wild_stretch[:, row].sum())
         busy = _busiest(log.onset, wild[:, row])
         loose = busy >= LOOSE_SECONDS and (count >= 1 or busy >= 2 * LOOSE_SECONDS)
-        if not (count or loose):
+        if not (count >= LEAST_POPS or loose):
             continue
         held = (per_stretch[:, row] > 0) | (loose & (wild_stretch[:, row] > 0))
         minutes = max(judged[row] / 60, 1 / 6)
@@ -83,7 +86,7 @@ def _pop_cells(evidence: Evidence) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     rows = np.array([row for _, row in pairs], dtype=np.intp)
     onset = evidence.log.onset
     epochs = np.clip(np.searchsorted(onset, moments, side="right") - 1, 0, len(onset) - 1)
-    muscle = evidence.muscle()
+    muscle = evidence.marked("muscle")
     near = muscle.copy()
     for shift in range(1, MUSCLE_NEAR_SECONDS + 1):
         near[shift:] |= muscle[:-shift]
@@ -105,7 +108,8 @@ def _wild(evidence: Evidence) -> NDArray[np.bool_]:
     times = np.where(evidence.marked("eye"), 4.0, 2.0)
     with np.errstate(invalid="ignore"):
         wild = (swing > WILD_UV) & (swing > WILD_RATIO * usual) & (swing > times * second)
-    return np.asarray(wild & ~evidence.muscle())
+        muscle = evidence.marked("muscle") & ~(swing > SWING_OVER_FAST * evidence.fast_uv())
+    return np.asarray(wild & ~muscle)
 
 
 def _small_chain_pops(evidence: Evidence) -> NDArray[np.bool_]:

@@ -21,6 +21,9 @@ LEAST_SHARE = 0.03
 LEAST_STRETCHES = 2
 """What lasts must hold for so many stretches before anybody is sent to the patient."""
 
+SHORT_LOG = 4
+"""With fewer stretches than this a single one is told of, to be watched."""
+
 CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ("ground", "mains"): (
         "check the ground electrode and the cables",
@@ -54,6 +57,7 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
         "ask to rest the eyes, closed if the protocol allows",
         "a folded cloth on the lids if local procedure has it",
     ),
+    ("patient", "drift"): ("cool the room, dry the skin", "ask to rest the head"),
     ("site", "pops"): ("check the lead", "re-prep", "replace the electrode if it goes on"),
     ("site", "loose lead"): ("check lead and plug", "fix the electrode again, re-prep"),
     ("site", "apart"): ("check the lead", "re-prep", "measure the impedance"),
@@ -147,7 +151,7 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     if share < LEAST_SHARE and state != "present":
         return None
     brief = finding.lasting and count < min(LEAST_STRETCHES, known)
-    if brief and share < 0.5 and state != "present":
+    if brief and known >= SHORT_LOG:
         return None
     verdict = "watch"
     if state == "present" and finding.plain and not brief:

@@ -57,8 +57,9 @@ class Outcome:
 def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     """Score the list of one case.
 
-    The *leading* entry is the first that asks for something to be done, or that tells of
-    what was there and is over. Right is, by the true cause:
+    The *leading* entry is the first that asks for something to be done about an electrode, or
+    that tells of what was there and is over; for a mild fault, the first that is not about
+    the patient, for a mild fault may be watched. Right is, by the true cause:
 
     - site: the leading entry has a true site as its first;
     - reference: the leading entry is for the reference; in bipolar derivations, where it
@@ -68,7 +69,8 @@ def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     - placement and patient: nothing is to be prepared again.
     """
     listed = sorted(advice, key=lambda entry: entry.number)
-    leading = next((entry for entry in listed if _leads(entry)), None)
+    mild = truth.strength == "mild"
+    leading = next((entry for entry in listed if _leads(entry, mild=mild)), None)
     innocent = _innocent(truth, listed)
     pairs_named = sum(
         any(entry.cause == "bridge" and pair <= set(entry.sites) for entry in listed)
@@ -102,9 +104,10 @@ def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     )
 
 
-def _leads(entry: Advice) -> bool:
-    over = entry.state != "present" and entry.cause != "patient"
-    return entry.verdict in ACTS or over
+def _leads(entry: Advice, *, mild: bool) -> bool:
+    about_electrodes = entry.cause != "patient"
+    over = entry.state != "present"
+    return about_electrodes and (mild or over or entry.verdict in ACTS)
 
 
 def _names(truth: Truth, entry: Advice) -> bool:
