@@ -11,7 +11,7 @@ from artifactlens.impedances import impedances_of, read_impedances
 from artifactlens.last_minutes import last_minutes_of
 from artifactlens.pipeline import (
     Progress,
-    _check_options,
+    check_options,
     conclude,
     default_folder,
     measure_recording,
@@ -65,7 +65,7 @@ def sites_to_folder(
     from artifactlens.page.sheet import sheet_html
 
     # What can fail at once fails before the long pass over the recording.
-    _check_options("sure", line_frequency)
+    check_options("sure", line_frequency)
     model = load_model()
     whole = open_recording(path)
     recording = whole if last_minutes is None else last_minutes_of(whole, last_minutes)

@@ -28,8 +28,9 @@ from artifactlens.flagging import (
 from artifactlens.frames import Frame, build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
-from artifactlens.result import RecordingFacts, Result, Scores
+from artifactlens.result import RecordingFacts, Result, Scores, finite_or_none
 from artifactlens.sitecare.evidence import Evidence
+from artifactlens.sitecare.setup import setup_check
 from artifactlens.sitecare.shares import site_evidence
 from artifactlens.sitecare.signs import SignKeeper, SignLog, signs_of
 from artifactlens.sitecare.verdicts import advise, site_verdicts
@@ -138,9 +139,25 @@ def _no_signal(
 
 
 def conclude(
-    measured: Measured, model: Model, *, mark: str, line_frequency: float | None
+    measured: Measured,
+    model: Model,
+    *,
+    mark: str,
+    line_frequency: float | None,
+    impedances_kohm: NDArray[np.float64] | None = None,
+    calibration: bool = False,
 ) -> Result:
-    """Judge what was measured and put the result together."""
+    """Judge what was measured and put the result together.
+
+    Parameters
+    ----------
+    measured, model, mark, line_frequency
+        What was measured, and how it is judged.
+    impedances_kohm : array, shape (n_sites,), kilo-ohm, optional
+        NaN where unknown; shown beside the sites, and used for nothing else.
+    calibration : bool
+        Look for the answers to a biological calibration that no annotation announces.
+    """
     recording, frame, conditions = measured.recording, measured.frame, measured.conditions
     amplitude = conditions.amplitude_uv
     implausible = not PLAUSIBLE_UV[0] <= amplitude <= PLAUSIBLE_UV[1]
@@ -165,9 +182,12 @@ def conclude(
     evidence = _evidence(measured, model, judgement)
     advice = advise(evidence)
     verdicts, reasons = site_verdicts(evidence, advice)
+    ohms = np.full(len(sites), np.nan) if impedances_kohm is None else impedances_kohm
     sites = tuple(
-        dataclasses.replace(site, verdict=verdict, why=why)
-        for site, verdict, why in zip(sites, verdicts, reasons, strict=True)
+        dataclasses.replace(
+            site, verdict=verdict, why=why, impedance_kohm=finite_or_none(kohm)
+        )
+        for site, verdict, why, kohm in zip(sites, verdicts, reasons, ohms, strict=True)
     )
     notes = [*recording.notes, *frame.notes]
     if implausible:
@@ -186,6 +206,7 @@ def conclude(
         flags=flags,
         sites=sites,
         advice=advice,
+        setup=setup_check(evidence),
         scores=Scores(
             kinds=KIND_NAMES,
             onset=measured.grid.onset,
@@ -289,7 +310,7 @@ def triage(
     ArtifactlensError
         With what was needed, what was given and what to do.
     """
-    _check_options(mark, line_frequency)
+    check_options(mark, line_frequency)
     model = load_model()
     measured = measure_recording(
         _as_recording(source), line_frequency=line_frequency, progress=progress
@@ -297,7 +318,8 @@ def triage(
     return conclude(measured, model, mark=mark, line_frequency=line_frequency)
 
 
-def _check_options(mark: str, line_frequency: float | None) -> None:
+def check_options(mark: str, line_frequency: float | None) -> None:
+    """Refuse what no triage takes, before any work."""
     if mark not in MARKS:
         raise OptionError(
             f"mark needs to be {' or '.join(MARKS)}; given was {mark!r}.",
@@ -360,7 +382,7 @@ def triage_to_folder(
     from artifactlens.page.sheet import sheet_html
 
     # What can fail at once fails before the long pass over the recording.
-    _check_options(mark, line_frequency)
+    check_options(mark, line_frequency)
     model = load_model()
     recording = open_recording(path)
     target = default_folder(Path(path)) if folder is None else Path(folder)

@@ -13,7 +13,9 @@ from artifactlens.advice import CAUSES, SIGNS
 from artifactlens.errors import SitesError
 from artifactlens.frames import build_frame
 from artifactlens.prefilter import Filters
-from artifactlens.recording import Segment, from_array
+from artifactlens.recording import Segment, from_array, open_recording
+from artifactlens.simulation import eye, muscle
+from artifactlens.simulation.scene import Scene
 from artifactlens.sitecare.biocal import Task, calibrate, respond, steps
 from artifactlens.sitecare.biocal_answers import VERDICTS
 from artifactlens.sitecare.biocal_words import (
@@ -24,6 +26,7 @@ from artifactlens.sitecare.biocal_words import (
     protocol_tasks,
     task_words,
 )
+from artifactlens.sites import site_position
 
 RATE = 256.0
 SECONDS = 40
@@ -472,6 +475,34 @@ def test_eight_sites_tell_blinks_and_jaw_but_no_gaze():
     assert verdicts(found) == ["as expected", "cannot tell", "cannot tell", "as expected"]
 
 
+TEN_TEN = (
+    "Fp1 Fpz Fp2 AF7 AF3 AFz AF4 AF8 F7 F5 F3 F1 Fz F2 F4 F6 F8 FT7 FC5 FC3 FC1 FCz FC2 FC4 "
+    "FC6 FT8 T7 C5 C3 C1 Cz C2 C4 C6 T8 TP7 CP5 CP3 CP1 CPz CP2 CP4 CP6 TP8 P7 P5 P3 P1 Pz P2 "
+    "P4 P6 P8 PO7 PO3 POz PO4 PO8 O1 Oz O2"
+)
+
+
+@pytest.mark.parametrize("lost", [None, "Fp2", "F8"])
+def test_many_sites_and_simulated_eyes(lost):
+    sites = TEN_TEN.split()
+    scene = Scene(np.array([site_position(site) for site in sites]), N, RATE)
+    rng = np.random.default_rng(4)
+    data = noise(len(sites), N, RATE, rms_uv=6.0, seed=2)
+    data += eye.blinks(scene, rng, [11.0, 12.4, 13.6]).potentials
+    data += eye.saccade(scene, 20.7, right_deg=25.0).potentials
+    data += eye.saccade(scene, 26.7, right_deg=-25.0).potentials
+    data += muscle.contraction(scene, rng, "temporalis", 32.5, 2.0, rms_uv=40.0).potentials
+    if lost:
+        data[sites.index(lost)] = noise(1, N, RATE, rms_uv=8.0, seed=9)[0]
+    found = judged(data, *EVERYTHING, labels=sites)
+    named = {fault.sites for fault in found.faults if fault.plain}
+    assert named == ({(lost,)} if lost else set())
+    if lost != "Fp2":
+        assert found.responses[0].verdict == "as expected"
+    if lost is None:
+        assert verdicts(found)[1:3] == ["as expected"] * 2
+
+
 def test_chain_ends_alone_are_not_compared():
     names = ("Fp1-F7", "Fp2-F8", "T7-P7", "T8-P8", "C3-P3", "C4-P4")
     recording = dataclasses.replace(
@@ -620,3 +651,14 @@ def test_the_sampling_rate_changes_no_verdict(rate):
     recording = dataclasses.replace(referential(data, rate), annotations=EVERYTHING)
     frame = build_frame(recording.labels, recording.types, recording.positions)
     assert verdicts(calibrate(recording, frame)) == ["as expected"] * 4
+
+
+@pytest.mark.corpora
+@pytest.mark.parametrize("name", ["Subject12_2.edf", "Subject13_2.edf"])
+def test_recordings_without_calibration_blame_no_lead(corpora, name):
+    recording = open_recording(corpora / "eegmat" / name)
+    frame = build_frame(recording.labels, recording.types, recording.positions)
+    assert calibrate(recording, frame).responses == ()
+    found = calibrate(recording, frame, asked=True)
+    assert len(found.responses) == 3
+    assert found.faults == ()

@@ -7,13 +7,16 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from artifactlens.sitecare.biocal_traces import Array, Bools, Places, Traces
+from artifactlens.sitecare.biocal_traces import Array, Bools, Places, Traces, quiet_level
 from artifactlens.sitecare.biocal_words import Task
 
 VERDICTS = ("as expected", "missing", "mirrored", "one side missing", "cannot tell")
 
 LATE_SECONDS = 5.0
 """Notes are typed by hand: what is not seen after one may have come so far before it."""
+
+
+LEAST_QUIET_S = 2.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,6 +68,17 @@ class Look:
         """Moments just before it that belong to no other task."""
         first = max(self.since, self.task.onset - LATE_SECONDS)
         return np.asarray((time >= first) & (time < self.task.onset - 0.2))
+
+    def quiet(self, values: Array) -> Array:
+        """Usual level at each site: of the seconds before the task, or of all if that is less.
+
+        Many blinks on end leave too little quiet within the task.
+        """
+        everywhere = quiet_level(values)
+        before = values[:, self.traces.time < self.task.onset - 0.2]
+        if np.isfinite(before).any(axis=0).sum() < LEAST_QUIET_S * self.traces.slow_rate:
+            return everywhere
+        return np.asarray(np.fmin(everywhere, quiet_level(before)))
 
     def name(self, row: int) -> str:
         """The file's spelling of a site."""

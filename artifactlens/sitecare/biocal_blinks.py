@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.sitecare.biocal_answers import Answer, Look, Suspect, strongest_first
-from artifactlens.sitecare.biocal_traces import Array, quiet_level
+from artifactlens.sitecare.biocal_traces import Array
 
 BLINK_UV = 30.0
 """Least deflection of the poles: half blinks have about as much (common practice)."""
@@ -68,7 +68,7 @@ def judge_blinks(look: Look) -> Answer:
     rows = tuple(int(row) for row in targets)
     if not len(at):
         return _nothing(look, rows)
-    noise = quiet_level(bumps)
+    noise = look.quiet(bumps)
     values = np.median(bumps[:, at], axis=1)
     limit = np.maximum(SITE_UV, 3 * 1.25 * noise / np.sqrt(len(at)))
     normal = expected * abs(float(np.median(common[at])))
@@ -125,7 +125,7 @@ def judge_blinks(look: Look) -> Answer:
 
 def _moments(look: Look, common: Array) -> tuple[NDArray[np.intp], bool]:
     """Samples at which the frontal sites have their largest common bumps."""
-    limit = max(BLINK_UV, NOISE_FACTOR * float(quiet_level(common[None])[0]))
+    limit = max(BLINK_UV, NOISE_FACTOR * float(look.quiet(common[None])[0]))
     for mask, late in ((look.within, False), (look.before, True)):
         inside = np.where(mask(look.traces.time), np.nan_to_num(common), 0.0)
         up, down = inside.max(initial=0.0), -inside.min(initial=0.0)

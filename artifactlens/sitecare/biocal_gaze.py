@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.sitecare.biocal_answers import LATE_SECONDS, Answer, Look, Suspect
-from artifactlens.sitecare.biocal_traces import Array, quiet_level
+from artifactlens.sitecare.biocal_traces import Array
 
 MOVE_UV = 20.0
 """Least movement at a temple (common practice); 25 degrees give about 60 (our simulation)."""
@@ -35,9 +35,9 @@ FIRST_SHARE = 0.4
 REST_SHARE = 0.3
 """The other sites confirm a movement from this share of it on."""
 
-TRACK_RATIO, MIRRORED_RATIO = 1.5, 3.0
-"""How much farther the eyes go to the named side than to the other, to have answered; and to
-the other side, to be called mirrored."""
+FIRST_TRACK_RATIO, TRACK_RATIO, MIRRORED_RATIO = 0.5, 1.5, 3.0
+"""How much farther the eyes go to the named side than to the other, to have answered, if they
+went there first and if not; and to the other side, to be called mirrored."""
 
 ANSWER_UV, SURE = 15.0, 2.5
 """Least movement that counts at one temple, and the standard errors it exceeds."""
@@ -162,7 +162,7 @@ def _sides(look: Look) -> _Sides | None:
         rest = (
             weight @ (moves[others] - np.median(moves[others], axis=0)) / np.sum(weight**2)
         )
-    quiet = quiet_level(np.stack([left - blink, right - blink]))
+    quiet = look.quiet(np.stack([left - blink, right - blink]))
     return _Sides(
         left - blink, right - blink, blink, rest, float(quiet[0]), float(quiet[1]),
         (main[0], main[1]),
@@ -175,7 +175,7 @@ def _movements(look: Look, sides: _Sides, when: NDArray[np.bool_]) -> _Seen | No
 
     quiet = sides.quiet_left, sides.quiet_right
     limits = [max(MOVE_UV, NOISE_FACTOR * level) for level in quiet]
-    half_quiet = float(quiet_level(sides.half[None])[0])
+    half_quiet = float(look.quiet(sides.half[None])[0])
     half_limit = max(0.5 * MOVE_UV, NOISE_FACTOR * half_quiet)
     # A blink that is taken off leaves a rest at either side: no movement of its own.
     both = np.stack([sides.left, sides.right])
@@ -223,7 +223,9 @@ def _opposite(look: Look, sides: _Sides, seen: _Seen, values: Array) -> Answer:
     named = -1.0 if look.task.kind == "gaze left" else 1.0
     track = np.concatenate([[0.0], np.cumsum(named * sides.half[seen.at])])
     towards, away = float(track.max()), -float(track.min())
-    if towards >= TRACK_RATIO * away:
+    # The way home may look larger than the way out: amplifiers lose what is held.
+    ratio = FIRST_TRACK_RATIO if track[1] > 0 else TRACK_RATIO
+    if towards >= ratio * away:
         return Answer("as expected", rows, measured, rows)
     values = -values
     measured = look.measured(rows, values)

@@ -21,6 +21,9 @@ RISE_DB = 6.0
 SILENT_DB = 3.0
 """Rise up to which a site is silent; what lies between tells nothing (our own choice)."""
 
+STRONG_DB = 12.0
+"""A clench that rises less than this at its strongest site does not reach all sites."""
+
 CLENCH_UV = 2.0
 """Amplitude of 20 to 44 Hz that a clench adds at least (common practice)."""
 
@@ -133,8 +136,10 @@ def _compare(
         + " above 20 Hz"
     )
     if all(sound):
-        lacking = silent[0] or silent[1]
-        if not lacking or all(silent):  # a weak clench does not reach all sites
+        number = 0 if silent[0] else 1
+        lacking = silent[number]
+        weak = float(np.max(values[sides[number]])) < STRONG_DB
+        if not lacking or all(silent) or weak:
             return Answer("as expected", heard, levels, heard)
         reason = f"no rise with a clench that both temples show ({levels})"
         suspect = Suspect("site", "no response", lacking, False, reason, CHECKS_SILENT)

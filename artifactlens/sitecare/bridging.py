@@ -59,9 +59,7 @@ def bridges(evidence: Evidence) -> list[Finding]:
     return _groups(evidence, sites, joined, known, distance, usual)
 
 
-def _steadiness(
-    joined: NDArray[np.bool_], known: NDArray[np.bool_]
-) -> NDArray[np.float64]:
+def _steadiness(joined: NDArray[np.bool_], known: NDArray[np.bool_]) -> NDArray[np.float64]:
     """Share of the stretches between a pair's first and last as a bridge in which it is one."""
     so_far = np.maximum.accumulate(joined, axis=0)
     to_come = np.maximum.accumulate(joined[::-1], axis=0)[::-1]

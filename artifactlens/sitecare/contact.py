@@ -32,11 +32,12 @@ REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
 
-NOISE_OVER_FAST = 4.0
+NOISE_OVER_FAST = 2.2
 """... unless what is slow is this many times what is fast: then it is no muscle alone."""
 
 DRIFT_DB, DRIFT_WITH_EYES_DB = 14.0, 20.0
-DRIFT_UV, DRIFT_PLAIN_UV = 25.0, 50.0
+DRIFT_UV = 25.0
+DRIFT_PLAIN_DB, DRIFT_PLAIN_UV = 18.0, 35.0
 """How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
 
 MANY_DRIFT = 4
@@ -151,7 +152,7 @@ def _apart(
         decibel, uv = (wander, level) if drifts else (above, size)
         decibel = float(np.median(decibel[when, index]))
         uv = float(np.median(uv[when, index]))
-        least = (DRIFT_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
+        least = (DRIFT_PLAIN_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
         found.append(
             Finding(
                 cause="site",

@@ -53,9 +53,7 @@ def state(evidence: Evidence, finding: Finding) -> str:
     return "cured" if _handled(evidence, finding, float(end[-1])) else "past"
 
 
-def _pause(
-    finding: Finding, begin: NDArray[np.float64], end: NDArray[np.float64]
-) -> float:
+def _pause(finding: Finding, begin: NDArray[np.float64], end: NDArray[np.float64]) -> float:
     if finding.lasting or len(begin) < 2:
         return SETTLED_SECONDS if finding.lasting else COMES_BACK_SECONDS
     gaps = np.maximum(begin[1:] - end[:-1], 0)

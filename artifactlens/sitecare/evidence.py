@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -65,6 +65,22 @@ class Evidence:
     fast_power: NDArray[np.float32]
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None
+
+    def first_seconds(self, seconds: float) -> Evidence:
+        """The same of the stretches that begin in the first seconds only."""
+        if not len(self.log):
+            return self
+        n = int(np.searchsorted(self.log.begin, self.log.begin[0] + seconds - 1e-6))
+        log = self.log.first(n)
+        epochs = len(log.onset)
+        columns = ("swing", "step", "step_rise", "fast_power", "mains_ratio")
+        return replace(
+            self,
+            log=log,
+            probability=self.probability[:, :epochs],
+            pops=tuple(pop for pop in self.pops if pop[0] < log.end[-1]),
+            **{name: getattr(self, name)[:epochs] for name in columns},
+        )
 
     def judged(self, kind: str) -> bool:
         """Whether a kind is judged at all."""

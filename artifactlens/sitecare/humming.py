@@ -60,7 +60,9 @@ def hums(evidence: Evidence) -> list[Finding]:
     usual = median_of_known(size[:, scalp].T).astype(np.float64)[:, None]
     with np.errstate(divide="ignore", invalid="ignore"):
         hums = known & (ratio >= LEAST_RATIO_DB)
-        least = np.fmax(EVERYWHERE_UV, OF_STRONGEST * np.fmax.reduce(size[:, scalp], axis=1))
+        least = np.fmax(
+            EVERYWHERE_UV, OF_STRONGEST * np.fmax.reduce(size[:, scalp], axis=1)
+        )
         held = hums & (size >= least[:, None])
         times = size / usual
         alone = hums & (size >= ALONE_UV) & (times >= ALONE_TIMES)
@@ -101,7 +103,9 @@ def hums(evidence: Evidence) -> list[Finding]:
                 f"and {elsewhere:.1g} uV at the usual site beside that"
             )
         else:
-            what = f"mains at {line}, {uv:.2g} uV, where the usual site has {elsewhere:.1g} uV"
+            what = (
+                f"mains at {line}, {uv:.2g} uV, where the usual site has {elsewhere:.1g} uV"
+            )
         found.append(
             Finding(
                 cause="reference" if at_reference else "site",

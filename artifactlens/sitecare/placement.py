@@ -57,10 +57,9 @@ PAIR_DB, ACROSS_DB = 1.3, 1.75
 several chains leave their means open. The largest in undisturbed recordings at hand were
 1.0 and 1.6 dB."""
 
-EACH = 1.0
-LIKE=.15
-LIKE_ACROSS=.35
-MODE = "sum"
+WORSE = 1.5
+"""How many times larger either site's own error (power) may be at the other's place."""
+
 QUIET_UV2 = 1e-3
 """Variance of the steps below which a site is without signal."""
 
@@ -313,16 +312,9 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
     across = chain[i] != chain[j]
     company = np.bincount(chain)[chain]
     known = (own > 0) & (other > 0)
-    likest = (alike - 2 * np.eye(n)).max(axis=1)[pair].min(axis=1)
-    known &= likest >= (LIKE if n_chains==1 else LIKE_ACROSS)
-    raw = np.einsum("paa->pa", varies)
-    if MODE == "sum":
-        known &= raw.sum(axis=1) < EACH * own_each.sum(axis=1)
-    elif MODE == "each":
-        known &= (raw < EACH * own_each).all(axis=1)
-    elif MODE == "max":
-        known &= raw.max(axis=1) < EACH * own_each.max(axis=1)
-    known &= ~across | (np.minimum(company[i], company[j]) >= FEWEST_ACROSS)
+    # A site that fits nowhere gains by the wider margin of a place that is less well known.
+    other_each = np.einsum("paa->pa", varies)
+    known &= (other_each <= WORSE * own_each).all(axis=1)
     gain = np.full((n, n), -np.inf)
     gain[i[known], j[known]] = 10 * np.log10(own[known] / other[known])
     gain[j, i] = gain[i, j]

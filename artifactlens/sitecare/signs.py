@@ -110,6 +110,19 @@ class SignLog:
     def __len__(self) -> int:
         return len(self.begin)
 
+    def first(self, n_stretches: int) -> SignLog:
+        """The log of the first stretches only."""
+        kept = self.stretch < n_stretches
+        signs = {name: getattr(self.signs, name)[kept] for name in Signs.__slots__}
+        return SignLog(
+            signs=Signs(**signs),
+            onset=self.onset[kept],
+            stretch=self.stretch[kept],
+            begin=self.begin[:n_stretches],
+            end=self.end[:n_stretches],
+            covariance=self.covariance[:n_stretches],
+        )
+
     def mean(self, values: NDArray[np.floating]) -> NDArray[np.float64]:
         """Mean over each stretch of (n_epochs, ...) values, NaN left out, NaN where none is."""
         known = np.isfinite(values)
@@ -142,9 +155,7 @@ class SignKeeper:
         self._onset: list[NDArray[np.float64]] = []
         self._sums: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
 
-    def add(
-        self, onset: NDArray[np.float64], signs: Signs, covariance: Array
-    ) -> None:
+    def add(self, onset: NDArray[np.float64], signs: Signs, covariance: Array) -> None:
         """Take in the next epochs, in order of time."""
         number = self._number(onset)
         first = np.flatnonzero(np.diff(number, prepend=-1))

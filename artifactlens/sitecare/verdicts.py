@@ -62,7 +62,11 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ("site", "loose lead"): ("check lead and plug", "fix the electrode again, re-prep"),
     ("site", "apart"): ("check the lead", "re-prep", "measure the impedance"),
     ("site", "drift"): ("check for sweat and drying paste", "re-prep", "cool the room"),
-    ("site", "mains"): ("check the lead and where it runs", "re-prep", "measure the impedance"),
+    ("site", "mains"): (
+        "check the lead and where it runs",
+        "re-prep",
+        "measure the impedance",
+    ),
     ("site", "flat"): ("check that the lead is plugged in", "replace the electrode"),
     ("site", "lost"): ("check the lead and the head box input", "replace the electrode"),
     ("site", "clipped"): ("check the lead", "re-prep", "check the range of the recorder"),
@@ -92,7 +96,17 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
     A bridged site may look apart, a loose lead pops, hums and drifts, and where the whole
     head is lost at once no single site is to blame.
     """
-    rank = ("lost", "flat", "clipped", "loose lead", "bridged", "pops", "drift", "apart", "mains")
+    rank = (
+        "lost",
+        "flat",
+        "clipped",
+        "loose lead",
+        "bridged",
+        "pops",
+        "drift",
+        "apart",
+        "mains",
+    )
     by_site: dict[tuple[str, int], list[Finding]] = {}
     rest = []
     for finding in found:
@@ -103,7 +117,9 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
     bridged = {row for finding in rest if finding.cause == "bridge" for row in finding.rows}
     kept = []
     for (_, row), group in by_site.items():
-        group.sort(key=lambda item: (not item.plain, -int(item.held.sum()), rank.index(item.sign)))
+        group.sort(
+            key=lambda item: (not item.plain, -int(item.held.sum()), rank.index(item.sign))
+        )
         main, others = group[0], group[1:]
         if row in bridged and main.sign not in ("pops", "loose lead", "lost", "clipped"):
             continue
@@ -226,5 +242,3 @@ def site_verdicts(
                 if verdicts[place[name]] in ("leave", "cannot tell"):
                     verdicts[place[name]], reasons[place[name]] = "watch", entry.reason
     return verdicts, reasons
-
-
