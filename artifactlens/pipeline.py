@@ -171,7 +171,7 @@ def conclude(
     )
     sites = site_evidence(
         model,
-        judgement,
+        judgement.probability,
         measured.table,
         frame,
         assessable,
@@ -219,19 +219,14 @@ def conclude(
 def _evidence(measured: Measured, model: Model, judgement: Judgement) -> Evidence:
     """What the search for electrode faults looks at; its operating points are fixed."""
     table, conditions = measured.table, measured.conditions
-    return Evidence(
-        frame=measured.frame,
-        log=measured.log,
-        probability=judgement.probability,
-        doubtful=np.array([head.doubtful for head in model.heads]),
-        sure=np.array([head.sure for head in model.heads]),
-        pops=pop_moments(model, judgement.probability, table.step_at, measured.grid),
-        swing=table.column("swing"),
-        step=table.column("step"),
-        step_rise=table.column("step_rise"),
-        fast_power=table.column("fast_power"),
-        mains_ratio=table.column("mains_ratio"),
-        line_frequency=conditions.line_frequency if mains_is_carried(conditions) else None,
+    return Evidence.of(
+        measured.frame,
+        measured.log,
+        model,
+        judgement.probability,
+        pop_moments(model, judgement.probability, table.step_at, measured.grid),
+        table,
+        conditions.line_frequency if mains_is_carried(conditions) else None,
     )
 
 

@@ -213,22 +213,29 @@ def in_decibel(name: str, values: Array) -> Array:
     return 20 * np.log10(np.maximum(values, amplitude.SMALL_UV))
 
 
+def usual_values(values: Array) -> Array:
+    """Usual value of each measured feature at each site, (n_measured, n_sites).
+
+    ``values`` (n_measured, n_epochs, n_sites) as in :class:`FeatureTable`.
+    """
+    stride = max(1, -(-values.shape[1] // USUAL_EPOCHS))
+    return np.stack(
+        [
+            in_decibel(name, median_of_known(values[row, ::stride]))
+            for row, name in enumerate(MEASURED)
+        ]
+    )
+
+
 def feature_table(parts: list[Measures], segment: NDArray[np.int64]) -> FeatureTable:
     """Join the batches of a recording and find each site's usual values.
 
     ``segment`` (n_epochs,) is that of the grid.
     """
     values = np.concatenate([part.values for part in parts], axis=1)
-    stride = max(1, -(-values.shape[1] // USUAL_EPOCHS))
-    usual = np.stack(
-        [
-            in_decibel(name, median_of_known(values[row, ::stride]))
-            for row, name in enumerate(MEASURED)
-        ]
-    )
     return FeatureTable(
         values=values,
-        usual=usual,
+        usual=usual_values(values),
         pace=np.concatenate([part.pace for part in parts]),
         step_at=np.concatenate([part.step_at for part in parts]),
         front_at=np.concatenate([part.front_at for part in parts]),

@@ -30,6 +30,9 @@ ANSWER_SHARE = 0.3
 NEGATIVE_SHARE = 0.5
 """The same for the reverse, which a restless lead may show by chance."""
 
+PLAIN_UV = 50.0
+"""Blinks from this size on blame a lead plainly; smaller ones may be frontal slow waves."""
+
 UNASKED_UV, UNASKED_COUNT = 80.0, 3
 """Size and number of blinks that were not asked for, before a lead is blamed by them."""
 
@@ -85,8 +88,9 @@ def judge_blinks(look: Look) -> Answer:
     silent = tuple(int(row) for row in targets[mute[targets]])
     suspects = []
     # At no known time, frontal slow waves of the brain may pass for blinks.
-    large = float(np.median(common[at])) >= UNASKED_UV and len(at) >= UNASKED_COUNT
-    sure = bool(sound) and (look.task.timed or large)
+    size = float(np.median(common[at]))
+    large = size >= UNASKED_UV and len(at) >= UNASKED_COUNT
+    sure = bool(sound) and (large or (look.task.timed and size >= PLAIN_UV))
     number = "one blink" if len(at) == 1 else f"{len(at)} blinks"
     if negative:
         suspects.append(
@@ -102,7 +106,7 @@ def judge_blinks(look: Look) -> Answer:
         suspects.append(
             Suspect(
                 "site", "no response", silent, sure,
-                f"no deflection in {number} of {np.median(common[at]):.0f} uV that other "
+                f"no deflection in {number} of {size:.0f} uV that other "
                 f"frontal sites show{instead}", CHECKS_SILENT,
             )
         )  # fmt: skip

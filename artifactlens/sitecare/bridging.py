@@ -86,7 +86,7 @@ def _flat_derivations(evidence: Evidence, sites: NDArray[np.intp]) -> NDArray[np
     place = {int(row): index for index, row in enumerate(sites)}
     there = evidence.present()
     for channel in np.flatnonzero((share >= 0.5).any(axis=0)):
-        first, second = np.flatnonzero(frame.incidence[channel])
+        first, second = (int(row) for row in np.flatnonzero(frame.incidence[channel]))
         if first in place and second in place:
             held = (share[:, channel] >= 0.5) & there[:, first] & there[:, second]
             flat[:, place[first], place[second]] |= held
@@ -117,8 +117,8 @@ def _groups(
             continue  # the whole head alike is no bridge: a dead or shorted input box
         block = np.ix_(np.arange(len(joined)), members, members)
         inside = held_long[np.ix_(members, members)]
-        held = joined[block][:, inside].any(axis=1)
-        tell = known[block][:, inside].any(axis=1) | held
+        held = np.asarray(joined[block][:, inside].any(axis=1))
+        tell = np.asarray(known[block][:, inside].any(axis=1)) | held
         between = np.where(joined[block], np.nan_to_num(distance[block]), np.nan)
         apart = float(median_of_known(between[:, inside][held].ravel()))
         names = " and ".join(evidence.frame.sites[sites[member]] for member in members)

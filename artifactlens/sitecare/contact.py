@@ -149,9 +149,9 @@ def _apart(
     for index in np.flatnonzero(held.any(axis=0)):
         when = held[:, index]
         drifts = bool(drifting[:, index].sum() > 0.5 * when.sum())
-        decibel, uv = (wander, level) if drifts else (above, size)
-        decibel = float(np.median(decibel[when, index]))
-        uv = float(np.median(uv[when, index]))
+        ratio, amplitude = (wander, level) if drifts else (above, size)
+        decibel = float(np.median(ratio[when, index]))
+        uv = float(np.median(amplitude[when, index]))
         least = (DRIFT_PLAIN_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
         found.append(
             Finding(
@@ -181,11 +181,11 @@ def _sweat(
 ) -> list[Finding]:
     """Sites that wander at the same time: the skin or the patient, no electrode."""
     wet = many & drifting
-    when = wet.any(axis=1)
+    when = np.asarray(wet.any(axis=1))
     if not when.any():
         return []
     rows = np.argsort(-wet.sum(axis=0), kind="stable")
-    rows = rows[wet.any(axis=0)[rows]]
+    rows = rows[wet[:, rows].any(axis=0)]
     return [
         Finding(
             cause="patient",

@@ -11,6 +11,8 @@ from numpy.typing import NDArray
 from artifactlens.kinds import KIND_NAMES
 
 if TYPE_CHECKING:
+    from artifactlens.curves import Model
+    from artifactlens.features import FeatureTable
     from artifactlens.frames import Frame
     from artifactlens.sitecare.signs import SignLog
 
@@ -19,6 +21,9 @@ Array = NDArray[np.float64]
 
 SMALL_CHAIN = 5
 """With fewer electrodes a chain has too few neighbours for the usual comparisons."""
+
+COLUMNS = ("swing", "step", "step_rise", "fast_power", "mains_ratio")
+"""Features that the search looks at, by their names in the catalogue."""
 
 FRONT_Y = 0.35
 """Share of the way to the nose from which a site is near the eyes."""
@@ -66,6 +71,29 @@ class Evidence:
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None
 
+    @classmethod
+    def of(
+        cls,
+        frame: Frame,
+        log: SignLog,
+        model: Model,
+        probability: NDArray[np.float32],
+        pops: tuple[tuple[float, tuple[int, ...]], ...],
+        table: FeatureTable,
+        line_frequency: float | None,
+    ) -> Evidence:
+        """Put together from what the stages before have made."""
+        return cls(
+            frame=frame,
+            log=log,
+            probability=probability,
+            doubtful=np.array([head.doubtful for head in model.heads]),
+            sure=np.array([head.sure for head in model.heads]),
+            pops=pops,
+            line_frequency=line_frequency,
+            **{name: table.column(name) for name in COLUMNS},
+        )
+
     def first_seconds(self, seconds: float) -> Evidence:
         """The same of the stretches that begin in the first seconds only."""
         if not len(self.log):
@@ -73,13 +101,12 @@ class Evidence:
         n = int(np.searchsorted(self.log.begin, self.log.begin[0] + seconds - 1e-6))
         log = self.log.first(n)
         epochs = len(log.onset)
-        columns = ("swing", "step", "step_rise", "fast_power", "mains_ratio")
         return replace(
             self,
             log=log,
             probability=self.probability[:, :epochs],
             pops=tuple(pop for pop in self.pops if pop[0] < log.end[-1]),
-            **{name: getattr(self, name)[:epochs] for name in columns},
+            **{name: getattr(self, name)[:epochs] for name in COLUMNS},
         )
 
     def judged(self, kind: str) -> bool:

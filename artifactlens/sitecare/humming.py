@@ -80,7 +80,7 @@ def hums(evidence: Evidence) -> list[Finding]:
                 sign="mains",
                 rows=(),
                 held=everywhere,
-                known=known.any(axis=1),
+                known=np.asarray(known.any(axis=1)),
                 plain=bool(np.median(strongest) >= PLAIN_UV),
                 weight=float(np.median(strongest)),
                 reason=(

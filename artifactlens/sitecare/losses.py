@@ -16,7 +16,7 @@ ALL_AT_ONCE = 0.5
 
 def losses(evidence: Evidence) -> list[Finding]:
     """Flat, clipped and missing sites; one finding where most are lost together."""
-    log, frame = evidence.log, evidence.frame
+    log = evidence.log
     reference = evidence.references()
     signs = log.signs
     found = []

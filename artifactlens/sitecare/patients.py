@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from artifactlens.sitecare.evidence import Evidence, Finding
 
@@ -12,13 +13,13 @@ LEAST_SHARE = 0.2
 
 def patients(evidence: Evidence) -> list[Finding]:
     """Muscle by region of the head, and eyes."""
-    log, frame = evidence.log, evidence.frame
+    log = evidence.log
     reference = evidence.references()
     found = []
     muscle = evidence.marked("muscle")
     muscle[:, reference] = False
     if evidence.judged("muscle") and len(log):
-        seconds = muscle.any(axis=1)
+        seconds = np.asarray(muscle.any(axis=1))
         held = log.mean(seconds) >= LEAST_SHARE
         share = float(seconds.mean())
         if share >= LEAST_SHARE:
@@ -41,7 +42,7 @@ def patients(evidence: Evidence) -> list[Finding]:
     eye = evidence.marked("eye", doubtful=False)
     eye[:, reference] = False
     if evidence.judged("eye") and len(log):
-        seconds = eye.any(axis=1)
+        seconds = np.asarray(eye.any(axis=1))
         share = float(seconds.mean())
         if share >= LEAST_SHARE:
             per_site = eye.mean(axis=0)
@@ -61,14 +62,14 @@ def patients(evidence: Evidence) -> list[Finding]:
     return found
 
 
-def _muscle_words(evidence: Evidence, rows: np.ndarray) -> tuple[str, str]:
+def _muscle_words(evidence: Evidence, rows: NDArray[np.intp]) -> tuple[str, str]:
     """Where the muscle is, and what it is consistent with, by the place of the sites."""
     places = evidence.frame.positions[rows]
     places = places[np.isfinite(places).all(axis=1)]
     if not len(places):
         return "at some sites", "consistent with jaw, brow or neck"
     direction = places / np.linalg.norm(places, axis=1, keepdims=True)
-    x, y, _ = np.median(np.abs(direction[:, 0])), np.median(direction[:, 1]), 0
+    x, y = np.median(np.abs(direction[:, 0])), np.median(direction[:, 1])
     if y > 0.6:
         return "at the front", "consistent with the brow"
     if y < -0.5:

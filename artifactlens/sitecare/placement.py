@@ -7,11 +7,13 @@ taken as what they are in statistics, the best linear prediction of a smooth ran
 unknown mean (Wahba 1990, from memory), which says how large either error should be; where
 derivations fall into several chains, each chain has an unknown mean of its own.
 
-What cannot be seen from correlations alone: all sites exchanged with their mirror images,
-left for right or front for back, have the same neighbours as before. Neither can a site be
-told from another nearby that shows nearly the same, nor one whose neighbours are missing.
-A focal lesion or a skull defect may make a head uneven: a doubt asks for a look at placement
-and labels, it proves nothing.
+What cannot be seen from likeness alone: all sites exchanged with their mirror images, left
+for right or front for back, have the same neighbours as before; half of them exchanged looks
+like the other half exchanged. A site cannot be told from another nearby that shows nearly the
+same. One site on a wrong place without a partner is not named either: in undisturbed
+recordings single sites fit another place by as much. A lesion, a skull defect or a poor
+contact may make a head uneven: a doubt asks for a look at placement and labels, it proves
+nothing. Sites that are known to be faulty or bridged should be left out beforehand.
 
 References
 ----------
@@ -126,7 +128,7 @@ class PlaceDoubt:
         How much smaller the errors of prediction are at the other places, decibel of power,
         each error against what it should be; the largest of the exchanges if there are more.
     reason : str
-        A clause: "F3 fits the place of F4 better than its own, and F4 that of F3".
+        A clause: "F3 and F4 fit each other's places better than their own".
     """
 
     sites: tuple[int, ...]
@@ -145,7 +147,8 @@ def doubtful_places(
     Parameters
     ----------
     covariance : array, shape (n_sites, n_sites)
-        Of :meth:`PlaceMoments.covariance`; NaN where two sites never served together.
+        Of :meth:`PlaceMoments.covariance`; NaN where two sites never served together. Rows
+        and columns of sites that are known to be faulty are best set to NaN.
     frame : Frame
     seconds : float
         Time over which it was taken.
@@ -218,16 +221,12 @@ def _rounds(place: Index) -> list[list[int]]:
 
 def _reason(names: list[str]) -> str:
     if len(names) == 2:
-        first, second = names
-        return (
-            f"{first} fits the place of {second} better than its own, "
-            f"and {second} that of {first}"
-        )
+        return f"{names[0]} and {names[1]} fit each other's places better than their own"
     steps = ", ".join(
         f"{name} that of {following}"
         for name, following in zip(names[1:], [*names[2:], names[0]], strict=True)
     )
-    return f"{names[0]} fits the place of {names[1]} better than its own, {steps}"
+    return f"better than their own {names[0]} fits the place of {names[1]}, {steps}"
 
 
 def spline_kernel(cosine: Array) -> Array:
@@ -272,50 +271,68 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
     directions = places / np.linalg.norm(places, axis=1, keepdims=True)
     kernel = spline_kernel(np.clip(directions @ directions.T, -1, 1))
     noise = NOISE_SHARE * kernel[0, 0]
-    member = np.eye(n_chains)[chain]
-    system = np.zeros((n + n_chains, n + n_chains))
-    system[:n, :n] = kernel + noise * np.eye(n)
-    system[:n, n:], system[n:, :n] = member, member.T
-    inverse = np.linalg.inv(system)
-    i, j = np.triu_indices(n, 1)
-    pair = np.stack([i, j], axis=1)
-
-    # What is asked for at place s in chain c; row s * n_chains + c.
+    inverse = spline_inverse(kernel, noise, chain)
+    # What is asked for at place s in chain c, and the answer of all sites: row s n_chains + c.
     asked = np.concatenate(
         [np.repeat(kernel, n_chains, axis=0), np.tile(np.eye(n_chains), (n, 1))], axis=1
     )
     answer = asked @ inverse
-    # y, B y and the predictions from all sites, and how they vary together.
+    # y, B y and the answers, and how they vary together.
     linear = np.concatenate([np.eye(n), inverse[:n, :n], answer[:, :n]])
     moments = linear @ alike @ linear.T
-    inner = inverse[pair[:, :, None], pair[:, None, :]]
-    spread = np.linalg.inv(inner)
-    residual = moments[n + pair[:, :, None], n + pair[:, None, :]]
-    own = np.einsum("pab,pba->p", spread, residual)
-    own_each = np.einsum("paa->pa", spread @ residual @ spread)
 
-    # The other's place in the own chain, predicted without the two.
+    i, j = np.triu_indices(n, 1)
+    pair = np.stack([i, j], axis=1)
+    due = np.linalg.inv(inverse[_blocks(pair)])
+    error = due @ moments[_blocks(n + pair)] @ due
+    own = _against(due, error)
+
+    # The other's place in the own chain, without the two: y - answer + weight (B y)_S.
     row = pair[:, ::-1] * n_chains + chain[pair]
-    weight = answer[row[:, :, None], pair[:, None, :]] @ spread
-    terms = np.concatenate([pair, 2 * n + row, n + pair], axis=1)
+    weight = answer[row[:, :, None], pair[:, None, :]] @ due
     one = np.broadcast_to(np.eye(2), weight.shape)
-    error = np.concatenate([one, -one, weight], axis=2)
-    between = moments[terms[:, :, None], terms[:, None, :]]
-    varies = error @ between @ error.transpose(0, 2, 1)
-    without = weight @ answer[row[:, :, None], pair[:, None, :]].transpose(0, 2, 1)
-    explained = np.einsum("pax,pbx->pab", answer[row], asked[row]) - without
-    swapped = pair[:, ::-1]
-    prior = kernel[swapped[:, :, None], swapped[:, None, :]] + noise * np.eye(2)
-    due = prior - explained
-    other = np.einsum("pab,pba->p", np.linalg.inv(due), varies)
+    parts = np.concatenate([one, -one, weight], axis=2)
+    terms = np.concatenate([pair, 2 * n + row, n + pair], axis=1)
+    other_error = parts @ moments[_blocks(terms)] @ parts.transpose(0, 2, 1)
+    told = answer[row] @ asked[row].transpose(0, 2, 1)
+    told -= weight @ answer[row[:, :, None], pair[:, None, :]].transpose(0, 2, 1)
+    other_due = kernel[_blocks(pair[:, ::-1])] + noise * np.eye(2) - told
+    other = _against(other_due, other_error)
 
-    across = chain[i] != chain[j]
     company = np.bincount(chain)[chain]
     known = (own > 0) & (other > 0)
-    # A site that fits nowhere gains by the wider margin of a place that is less well known.
-    other_each = np.einsum("paa->pa", varies)
-    known &= (other_each <= WORSE * own_each).all(axis=1)
+    known &= (chain[i] == chain[j]) | (company[pair].min(axis=1) >= FEWEST_ACROSS)
+    # At a place that is less well known much error is due: what fits nowhere must not gain.
+    known &= (_each(other_error) <= WORSE * _each(error)).all(axis=1)
     gain = np.full((n, n), -np.inf)
     gain[i[known], j[known]] = 10 * np.log10(own[known] / other[known])
     gain[j, i] = gain[i, j]
     return gain
+
+
+def spline_inverse(kernel: Array, noise: float, chain: Index) -> Array:
+    """Inverse of the spline system: the sites' weights, then one constant for each chain.
+
+    ``kernel`` (n_sites, n_sites) of :func:`spline_kernel`, ``noise`` on its diagonal; shape
+    (n_sites + n_chains, n_sites + n_chains).
+    """
+    n, n_chains = len(kernel), int(chain.max()) + 1
+    member = np.eye(n_chains)[chain]
+    system = np.zeros((n + n_chains, n + n_chains))
+    system[:n, :n] = kernel + noise * np.eye(n)
+    system[:n, n:], system[n:, :n] = member, member.T
+    return np.linalg.inv(system)
+
+
+def _blocks(rows: Index) -> tuple[Index, Index]:
+    """Index of the square block of each pair's rows."""
+    return rows[:, :, None], rows[:, None, :]
+
+
+def _against(due: Array, error: Array) -> Array:
+    """Size of errors against what is due: trace of due^-1 error, for each pair."""
+    return np.asarray(np.einsum("paa->p", np.linalg.solve(due, error)))
+
+
+def _each(matrices: Array) -> Array:
+    return np.asarray(np.einsum("paa->pa", matrices))

@@ -14,7 +14,6 @@ from artifactlens.result import Assessment, Flag, SiteEvidence, finite_or_none
 if TYPE_CHECKING:
     from artifactlens.curves import Model
     from artifactlens.features import FeatureTable
-    from artifactlens.flagging import Judgement
     from artifactlens.frames import Frame
 
 FAULT_SHARE = 0.02
@@ -23,7 +22,7 @@ FAULT_SHARE = 0.02
 
 def site_evidence(
     model: Model,
-    judgement: Judgement,
+    probability: NDArray[np.float32],
     table: FeatureTable,
     frame: Frame,
     assessable: tuple[Assessment, ...],
@@ -35,6 +34,8 @@ def site_evidence(
 
     Parameters
     ----------
+    probability : array, shape (n_kinds, n_epochs, n_sites)
+        NaN where not judged.
     faults : dict of array, shape (n_used_channels,)
         Share of epochs in which a channel is "flat", "missing" or "clipped".
     mark : str
@@ -45,7 +46,7 @@ def site_evidence(
     minutes = np.maximum(seconds, 1) / 60
     shares = {}
     for row, (head, entry) in enumerate(zip(model.heads, assessable, strict=True)):
-        marked = (judgement.probability[row] >= head.limit(mark)).sum(axis=0)
+        marked = (probability[row] >= head.limit(mark)).sum(axis=0)
         shares[head.kind] = (
             None if entry.verdict == "no" else marked / np.maximum(seconds, 1)
         )

@@ -123,7 +123,7 @@ class SignLog:
             covariance=self.covariance[:n_stretches],
         )
 
-    def mean(self, values: NDArray[np.floating]) -> NDArray[np.float64]:
+    def mean(self, values: NDArray[np.floating | np.bool_]) -> NDArray[np.float64]:
         """Mean over each stretch of (n_epochs, ...) values, NaN left out, NaN where none is."""
         known = np.isfinite(values)
         total = self.total(np.where(known, values, 0.0))

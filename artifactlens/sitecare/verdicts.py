@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import numpy as np
 
 from artifactlens.advice import CAUSES, VERDICTS, Advice
 from artifactlens.sitecare import courses
@@ -220,7 +221,7 @@ def site_verdicts(
     """What is said of each site, and why, in the order of the frame."""
     frame = evidence.frame
     verdicts, reasons = ["leave"] * len(frame.sites), [""] * len(frame.sites)
-    seen = evidence.log.signs.ok.any(axis=0)
+    seen = np.asarray(evidence.log.signs.ok.any(axis=0))
     alone = frame.neighbours.sum(axis=1) == 0
     for row in range(len(frame.sites)):
         if not seen[row]:

@@ -1,0 +1,86 @@
+"""What a watch remembers: the last minute of samples, the last minutes of measures.
+
+Both are of fixed size: a watch of hours takes no more memory than one of minutes.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+class RawWindow:
+    """The last ``seconds`` of samples of one uninterrupted stretch, (n_channels, ...) uV."""
+
+    def __init__(self, n_channels: int, sampling_rate: float, seconds: float) -> None:
+        self._keep = int(seconds * sampling_rate)
+        self._data = np.empty((n_channels, 2 * self._keep), dtype=np.float32)
+        self.restart()
+
+    def restart(self) -> None:
+        """Forget everything: what follows does not follow on what was."""
+        self.first = 0
+        self._filled = 0
+
+    @property
+    def end(self) -> int:
+        """Number of the next sample, counted from the last restart."""
+        return self.first + self._filled
+
+    def add(self, uv: NDArray[np.float32]) -> None:
+        """Take in the next samples, (n_channels, n)."""
+        for low in range(0, uv.shape[1], self._keep):
+            self._add(uv[:, low : low + self._keep])
+
+    def _add(self, uv: NDArray[np.float32]) -> None:
+        n = uv.shape[1]
+        if self._filled + n > self._data.shape[1]:
+            kept = self._keep
+            self._data[:, :kept] = self._data[:, self._filled - kept : self._filled]
+            self.first += self._filled - kept
+            self._filled = kept
+        self._data[:, self._filled : self._filled + n] = uv
+        self._filled += n
+
+    def piece(self, start: int, stop: int) -> NDArray[np.float32]:
+        """Samples ``start`` up to ``stop``, as a view; what is gone or to come is left out."""
+        low, high = max(start - self.first, 0), min(stop - self.first, self._filled)
+        return self._data[:, low:high]
+
+
+class Rolling:
+    """Columns of the last epochs, one row an epoch; old rows go as new ones come."""
+
+    def __init__(self, keep: int) -> None:
+        self._keep = keep
+        self._columns: dict[str, NDArray[Any]] = {}
+        self._first = self._end = 0
+
+    def __len__(self) -> int:
+        return self._end - self._first
+
+    def append(self, row: dict[str, NDArray[Any]]) -> None:
+        """Add an epoch; the first one tells shapes and types."""
+        if not self._columns:
+            self._columns = {
+                name: np.zeros((2 * self._keep, *np.shape(value)), np.asarray(value).dtype)
+                for name, value in row.items()
+            }
+        if self._end == 2 * self._keep:
+            for column in self._columns.values():
+                column[: self._keep] = column[self._keep :]
+            self._first, self._end = 0, self._keep
+        self._end += 1
+        self._first = max(self._first, self._end - self._keep)
+        self.rewrite(-1, row)
+
+    def rewrite(self, place: int, row: dict[str, NDArray[Any]]) -> None:
+        """Replace values of an epoch, counted from the end: -1 is the last one."""
+        for name, value in row.items():
+            self._columns[name][self._end + place] = value
+
+    def column(self, name: str) -> NDArray[Any]:
+        """A column, (n_epochs, ...), as a view."""
+        return self._columns[name][self._first : self._end]
