@@ -29,6 +29,8 @@ from artifactlens.frames import Frame, build_frame
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores, finite_or_none
+from artifactlens.sitecare.answers import answer_findings
+from artifactlens.sitecare.biocal import calibrate
 from artifactlens.sitecare.evidence import Evidence
 from artifactlens.sitecare.setup import setup_check
 from artifactlens.sitecare.shares import site_evidence
@@ -180,7 +182,8 @@ def conclude(
         mark,
     )
     evidence = _evidence(measured, model, judgement)
-    advice = advise(evidence)
+    asked = calibrate(recording, frame, asked=calibration)
+    advice = advise(evidence, answer_findings(asked, frame, measured.log))
     verdicts, reasons = site_verdicts(evidence, advice)
     ohms = np.full(len(sites), np.nan) if impedances_kohm is None else impedances_kohm
     sites = tuple(
@@ -206,7 +209,7 @@ def conclude(
         flags=flags,
         sites=sites,
         advice=advice,
-        setup=setup_check(evidence),
+        setup=setup_check(evidence, asked.sentences),
         scores=Scores(
             kinds=KIND_NAMES,
             onset=measured.grid.onset,

@@ -573,6 +573,15 @@ def test_asked_for_in_vain_is_said_and_no_lead_is_blamed():
     assert found.faults == ()
 
 
+def test_what_nobody_asked_for_blames_no_lead_by_half_a_sign():
+    data = ten_twenty(SECONDS, RATE, rms_uv=6.0, seed=3) + clench(("F7", "T7"))
+    recording = referential(data, RATE)
+    frame = build_frame(recording.labels, recording.types, recording.positions)
+    found = calibrate(recording, frame, asked=True)
+    assert found.responses[2].verdict == "cannot tell"
+    assert found.faults == ()
+
+
 def test_announced_tasks_go_before_the_search():
     recording = dataclasses.replace(referential(answered(), RATE), annotations=(BLINKS,))
     frame = build_frame(recording.labels, recording.types, recording.positions)

@@ -493,7 +493,7 @@ def test_the_demonstration_gives_the_same_bytes_twice(invoke, demo, tmp_path):
         if p.is_file()
     }
     assert set(first) == set(second)
-    assert len(first) == 9
+    assert len(first) == 10
     assert [str(name) for name in first if first[name] != second[name]] == []
 
 

@@ -175,7 +175,7 @@ class Session:
         levels = self._conditions.levels_uv
         batch = next(batches(piece, self.frame, grid, len(grid), levels))
         measures = measure(batch, self.frame, self._leads, self._conditions)
-        signs, covariance = signs_of(batch, self.frame, self._conditions)
+        newest = signs_of(batch, self.frame, self._conditions, newest=1)
         if (
             len(grid) > 1
             and len(self._rows)
@@ -192,10 +192,7 @@ class Session:
                 ),
             }
         )
-        last = {name: getattr(signs, name)[-1:] for name in type(signs).__slots__}
-        self._keeper.add(
-            np.array([onset]), dataclasses.replace(signs, **last), covariance[-1:]
-        )
+        self._keeper.add(np.array([onset]), *newest)
         self._keeper.forget(float(self._rows.column("onset")[0]))
         self._score()
         return 1

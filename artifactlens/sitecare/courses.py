@@ -38,6 +38,8 @@ def stretches(evidence: Evidence, finding: Finding) -> tuple[tuple[float, float]
 
 def state(evidence: Evidence, finding: Finding) -> str:
     """Whether it is "present" at the end, was "cured" by somebody's hand, or is "past"."""
+    if finding.standing:
+        return "present"
     log = evidence.log
     begin, end = log.begin[finding.held], log.end[finding.held]
     known_end = log.end[finding.known | finding.held]

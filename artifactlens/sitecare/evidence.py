@@ -178,6 +178,11 @@ class Finding:
     lasting : bool
         False for what comes and goes, such as pops: it is present until it has been away for
         long.
+    standing : bool
+        True for what was seen at one time and holds until somebody has looked, such as the
+        answers to a calibration.
+    checks : tuple of str
+        What to do; empty for what is usual for cause and sign.
     """
 
     cause: str
@@ -189,3 +194,5 @@ class Finding:
     weight: float
     reason: str
     lasting: bool = True
+    standing: bool = False
+    checks: tuple[str, ...] = ()

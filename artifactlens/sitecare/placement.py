@@ -283,7 +283,7 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
 
     i, j = np.triu_indices(n, 1)
     pair = np.stack([i, j], axis=1)
-    due = np.linalg.inv(inverse[_blocks(pair)])
+    due = np.asarray(np.linalg.inv(inverse[_blocks(pair)]), dtype=np.float64)
     error = due @ moments[_blocks(n + pair)] @ due
     own = _against(due, error)
 
@@ -321,7 +321,7 @@ def spline_inverse(kernel: Array, noise: float, chain: Index) -> Array:
     system = np.zeros((n + n_chains, n + n_chains))
     system[:n, :n] = kernel + noise * np.eye(n)
     system[:n, n:], system[n:, :n] = member, member.T
-    return np.linalg.inv(system)
+    return np.asarray(np.linalg.inv(system), dtype=np.float64)
 
 
 def _blocks(rows: Index) -> tuple[Index, Index]:

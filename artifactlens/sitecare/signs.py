@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 
 from artifactlens.features import mains_is_carried
 from artifactlens.features.spatial import field_covariance, slow_traces
+from artifactlens.sitecare.placement import PlaceMoments, placement_moments
 
 if TYPE_CHECKING:
     from artifactlens.epochs import EpochBatch
@@ -32,6 +33,9 @@ LEVELS_PER_SECOND = 2
 STRETCH_SECONDS = 10.0
 """Time over which sites are compared: long enough for a stable correlation, short enough to
 see when a fault began."""
+
+FADE_PER_EPOCH = float(np.exp(-1 / 600))
+"""In a stream, what tells of the sites' places counts for about ten minutes."""
 
 LONGEST_LOG = 64e6
 """Bytes that the covariances of a recording may take; longer ones get longer stretches."""
@@ -62,12 +66,15 @@ class Signs:
 
 
 def signs_of(
-    batch: EpochBatch, frame: Frame, conditions: Conditions
-) -> tuple[Signs, Array]:
-    """Signs of a batch, and its covariance between sites, (n_epochs, n_sites, n_sites) uV^2.
+    batch: EpochBatch, frame: Frame, conditions: Conditions, *, newest: int | None = None
+) -> tuple[Signs, Array, PlaceMoments]:
+    """Signs of a batch, its covariance between sites, and what tells of their places.
 
-    The covariance is that of the traces smoothed to 50 samples a second, within each epoch.
+    The covariance (n_epochs, n_sites, n_sites) uV^2 is that of the traces smoothed to 50
+    samples a second, within each epoch. ``newest`` keeps only so many epochs of the batch, the
+    last ones.
     """
+    part = slice(-newest if newest else None, None)
     ok = batch.ok[:, 1:-1].T
     n, starts = batch.n_samples, batch.starts[1:-1]
     epochs = batch.windows(starts, n)
@@ -80,14 +87,17 @@ def signs_of(
         turns = conditions.line_frequency * np.arange(n) / batch.sampling_rate
         hum = (epochs @ (window * np.exp(-2j * np.pi * turns)).astype(np.complex64)).T
     signs = Signs(
-        ok=ok,
-        flat=batch.flat.T,
-        missing=batch.missing.T,
-        clipped=batch.clipped.T,
-        level=np.stack(halves).transpose(2, 0, 1).astype(np.float32),
-        hum=hum.astype(np.complex64),
+        ok=ok[part],
+        flat=batch.flat.T[part],
+        missing=batch.missing.T[part],
+        clipped=batch.clipped.T[part],
+        level=np.stack(halves).transpose(2, 0, 1).astype(np.float32)[part],
+        hum=hum.astype(np.complex64)[part],
     )
-    return signs, field_covariance(slow_traces(batch))
+    keep = np.zeros_like(ok)
+    keep[part] = ok[part]
+    slow = slow_traces(batch)
+    return signs, field_covariance(slow)[part], placement_moments(slow, keep)
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,7 +107,8 @@ class SignLog:
     ``onset`` (n_epochs,) seconds; ``stretch`` (n_epochs,) index of the stretch that an epoch
     is of, ``begin`` and ``end`` (n_stretches,) their bounds in seconds, ``covariance``
     (n_stretches, n_sites, n_sites) uV^2, mean over the epochs in which both sites were there,
-    NaN where none was.
+    NaN where none was; ``places`` are sums over all that was seen, of a stream with the
+    older fading.
     """
 
     signs: Signs
@@ -106,6 +117,7 @@ class SignLog:
     begin: NDArray[np.float64]
     end: NDArray[np.float64]
     covariance: Array
+    places: PlaceMoments
 
     def __len__(self) -> int:
         return len(self.begin)
@@ -121,6 +133,7 @@ class SignLog:
             begin=self.begin[:n_stretches],
             end=self.end[:n_stretches],
             covariance=self.covariance[:n_stretches],
+            places=self.places,
         )
 
     def mean(self, values: NDArray[np.floating | np.bool_]) -> NDArray[np.float64]:
@@ -153,18 +166,31 @@ class SignKeeper:
         self.stretch_seconds = max(STRETCH_SECONDS, float(math.ceil(seconds)))
         self._signs: list[Signs] = []
         self._onset: list[NDArray[np.float64]] = []
+        self._fade = FADE_PER_EPOCH if n_epochs is None else 1.0
+        self._places = PlaceMoments(
+            np.zeros((n_sites, n_sites)), np.zeros((n_sites, n_sites))
+        )
         self._sums: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
 
-    def add(self, onset: NDArray[np.float64], signs: Signs, covariance: Array) -> None:
-        """Take in the next epochs, in order of time."""
+    def add(
+        self,
+        onset: NDArray[np.float64],
+        signs: Signs,
+        covariance: Array,
+        places: PlaceMoments,
+    ) -> None:
+        """Take in the next epochs, in order of time; the rest as :func:`signs_of` gives it."""
+        fade = self._fade ** len(onset)
+        before = PlaceMoments(fade * self._places.total, fade * self._places.seconds)
+        self._places = before + places
         number = self._number(onset)
         first = np.flatnonzero(np.diff(number, prepend=-1))
         there = signs.ok.astype(np.float64)
         sums = np.add.reduceat(covariance.astype(np.float64), first, axis=0)
         both = np.add.reduceat(there[:, :, None] * there[:, None], first, axis=0)
         for index, total, count in zip(number[first], sums, both, strict=True):
-            before = self._sums.get(int(index), (0.0, 0.0))
-            self._sums[int(index)] = (before[0] + total, before[1] + count)
+            so_far = self._sums.get(int(index), (0.0, 0.0))
+            self._sums[int(index)] = (so_far[0] + total, so_far[1] + count)
         self._signs.append(signs)
         self._onset.append(onset)
 
@@ -203,6 +229,7 @@ class SignKeeper:
             begin=onset[first[begins]],
             end=onset[last] + 1.0,
             covariance=covariance.astype(np.float32),
+            places=self._places,
         )
 
     def _number(self, onset: NDArray[np.float64]) -> NDArray[np.int64]:

@@ -14,6 +14,7 @@ from artifactlens.sitecare.evidence import Evidence, Finding
 from artifactlens.sitecare.humming import hums
 from artifactlens.sitecare.losses import losses
 from artifactlens.sitecare.patients import patients
+from artifactlens.sitecare.placement import doubtful_places
 from artifactlens.sitecare.popping import popping
 
 LEAST_SHARE = 0.03
@@ -88,7 +89,34 @@ def findings_of(evidence: Evidence) -> list[Finding]:
         *contacts(evidence),
         *patients(evidence),
     ]
-    return _without_echoes(found)
+    return _without_echoes([*found, *_misplaced(evidence, found)])
+
+
+def _misplaced(evidence: Evidence, found: list[Finding]) -> list[Finding]:
+    """Sites that may have been exchanged, those with troubles of their own left out."""
+    faulty = {
+        row for item in found if item.cause in ("site", "bridge") for row in item.rows
+    }
+    moments = evidence.log.places
+    covariance = moments.covariance()
+    covariance[list(faulty)] = np.nan
+    covariance[:, list(faulty)] = np.nan
+    seconds = float(moments.seconds.max(initial=0.0))
+    everywhere = np.ones(len(evidence.log), dtype=bool)
+    return [
+        Finding(
+            cause="placement",
+            sign="swapped",
+            rows=doubt.sites,
+            held=everywhere,
+            known=everywhere,
+            plain=True,
+            weight=doubt.gain_db,
+            reason=doubt.reason,
+            standing=True,
+        )
+        for doubt in doubtful_places(covariance, evidence.frame, seconds)
+    ]
 
 
 def _without_echoes(found: list[Finding]) -> list[Finding]:
@@ -167,7 +195,7 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     state = courses.state(evidence, finding)
     if share < LEAST_SHARE and state != "present":
         return None
-    brief = finding.lasting and count < min(LEAST_STRETCHES, known)
+    brief = finding.lasting and not finding.standing and count < min(LEAST_STRETCHES, known)
     if brief and known >= SHORT_LOG:
         return None
     verdict = "watch"
@@ -178,7 +206,7 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     elif finding.cause == "patient":
         return None
     names = tuple(evidence.frame.sites[row] for row in finding.rows)
-    checks = CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
+    usual = CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
     return Advice(
         number=0,
         verdict=verdict,
@@ -190,7 +218,7 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
         stretches=courses.stretches(evidence, finding),
         share=round(share, 4),
         reason=finding.reason,
-        checks=checks,
+        checks=finding.checks or usual,
     )
 
 
