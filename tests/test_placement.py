@@ -1,6 +1,7 @@
 """Swapped electrodes or labels: what the likeness of neighbours tells of places."""
 
 import dataclasses
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -154,6 +155,18 @@ def test_noise_at_one_electrode_is_no_exchange(heads):
         assert doubts(data) == set()
 
 
+def test_what_fits_nowhere_does_not_gain_by_a_place_that_is_less_well_known(heads):
+    frame = build_frame(BANANA, [None] * len(BANANA), None)
+    data = heads[1].copy()
+    data[row("C4")] = 12 * np.random.default_rng(5).standard_normal(data.shape[1])
+    covariance = moments_of(data, frame).covariance()
+    size = 1 / np.sqrt(np.diag(covariance))
+    alike = covariance * size[:, None] * size
+    noisy, across = frame.sites.index("C4"), frame.sites.index("C3")
+    assert _every_gain(alike, frame.positions, frame.chain)[noisy, across] > 1
+    assert exchange_gain(alike, frame.positions, frame.chain)[noisy, across] == -np.inf
+
+
 def test_exchanging_a_pair_of_one_chain_turns_its_gain_over(heads):
     alike = correlation(heads[0])
     order = np.arange(len(SITES))
@@ -164,11 +177,11 @@ def test_exchanging_a_pair_of_one_chain_turns_its_gain_over(heads):
     assert after > 1
 
 
-def _every_gain(alike):
+def _every_gain(alike, places=PLACES, chain=ONE_CHAIN):
     """Gains with the pairs that fit nowhere left in."""
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(placement, "WORSE", np.inf)
-        return exchange_gain(alike, PLACES, ONE_CHAIN)
+        return exchange_gain(alike, places, chain)
 
 
 def test_gains_are_those_of_leaving_out_two_sites_by_hand(heads):
@@ -251,6 +264,15 @@ def test_one_loud_second_counts_no_more_than_another(heads):
     assert doubts(data) == set()
 
 
+def test_a_straight_slope_has_no_steps_that_vary():
+    slope = np.linspace(0, 1000, 4 * 50, dtype=np.float32).reshape(1, 4, 50)
+    slow = np.tile(slope, (3, 1, 1))
+    slow[2] += np.random.default_rng(0).standard_normal((4, 50)).astype(np.float32)
+    moments = placement_moments(slow, np.ones((2, 3), dtype=bool))
+    np.testing.assert_array_equal(np.diag(moments.seconds), [0, 0, 2])
+    assert moments.total[2, 2] == pytest.approx(2.0)
+
+
 def test_moments_of_two_halves_add_up(heads):
     frame = referential()
     slow = slow_traces(batch_of(solved(heads[0], frame), RATE))
@@ -314,7 +336,7 @@ def test_few_sites_or_little_time_cannot_tell(heads):
 def test_a_chain_of_two_does_not_help_to_tell(heads):
     chain = ("F7", "F3", "Fz", "F4", "F8", "C4", "Cz", "C3", "P3", "Pz", "P4", "P8")
     data = swapped(heads[0], "C3", "C4")
-    joined = [f"{one}-{two}" for one, two in zip(chain, chain[1:], strict=False)]
+    joined = [f"{one}-{two}" for one, two in pairwise(chain)]
     whole = build_frame(joined, [None] * len(joined), None)
     assert doubts(data, whole) == pairs(("C3", "C4"))
     apart = [label for label in joined if label != "Pz-P4"]

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import dataclasses
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -46,6 +45,7 @@ if TYPE_CHECKING:
     from artifactlens.curves import Model
     from artifactlens.features import Measures
     from artifactlens.live.stream_grid import Stretch
+    from artifactlens.live.stream_header import StreamFacts
     from artifactlens.recording import Recording
     from artifactlens.sitecare.evidence import Finding
 
@@ -66,23 +66,12 @@ STEADY_EPOCHS = 2
 CONTEXT_EPOCHS = 2
 
 
-@dataclass(frozen=True, slots=True)
-class Layout:
-    """What the header of a stream says; see :class:`artifactlens.live.inlet.StreamFacts`."""
-
-    name: str
-    sampling_rate: float
-    labels: tuple[str, ...]
-    types: tuple[str | None, ...]
-    set_aside: tuple[tuple[str, str], ...] = ()
-
-
 class Session:
     """Measures and judges a stream as it comes; remembers the last minutes.
 
     Parameters
     ----------
-    layout : Layout
+    layout : StreamFacts
     model : Model
     minutes : float
         How far advice looks back.
@@ -99,7 +88,7 @@ class Session:
 
     def __init__(
         self,
-        layout: Layout,
+        layout: StreamFacts,
         model: Model,
         *,
         minutes: float = 10.0,
@@ -129,6 +118,18 @@ class Session:
     def seconds(self) -> float:
         """End of the last whole epoch, seconds from the first sample of the stream."""
         return float(self._rows.column("onset")[-1]) + 1.0 if len(self._rows) else 0.0
+
+    @property
+    def now(self) -> float:
+        """Time of the next sample, seconds from the first one of the stream."""
+        return self._segment_onset + self._raw.end / self.layout.sampling_rate
+
+    def recent_sites(self) -> tuple[Array, float]:
+        """Site potentials of the last minute (n_sites, n_times), and when they begin."""
+        raw = self._raw
+        data = raw.piece(raw.first, raw.end)[self.frame.channels]
+        start = self._segment_onset + raw.first / self.layout.sampling_rate
+        return self.frame.matrix() @ data, start
 
     def add(self, stretch: Stretch) -> int:
         """Take in samples; returns how many epochs they completed."""
@@ -185,8 +186,8 @@ class Session:
         self._rows.append(
             {
                 **_row(measures, -1),
-                "onset": np.float64(onset),
-                "segment": np.int64(self._segment),
+                "onset": np.array(onset),
+                "segment": np.array(self._segment, dtype=np.int64),
                 "probability": np.full(
                     (len(KIND_NAMES), len(self.frame.sites)), np.nan, dtype=np.float32
                 ),
@@ -241,8 +242,8 @@ class Session:
         sites = np.array([role != "reference" for role in self.frame.roles])
         head = median_of_known(own[:, sites].T)[:, None]
         lean = np.float32(PRIOR_EPOCHS / (n + PRIOR_EPOCHS))
-        self._usual = (1 - lean) * own + lean * np.where(np.isfinite(head), head, own)
-        self._usual_of = n
+        leaning = (1 - lean) * own + lean * np.where(np.isfinite(head), head, own)
+        self._usual, self._usual_of = leaning.astype(np.float32), n
         return self._usual
 
     def _table(self, epochs: int | None = None) -> FeatureTable:

@@ -296,7 +296,7 @@ def exchange_gain(alike: Array, places: Array, chain: Index) -> Array:
     other_error = parts @ moments[_blocks(terms)] @ parts.transpose(0, 2, 1)
     told = answer[row] @ asked[row].transpose(0, 2, 1)
     told -= weight @ answer[row[:, :, None], pair[:, None, :]].transpose(0, 2, 1)
-    other_due = kernel[_blocks(pair[:, ::-1])] + noise * np.eye(2) - told
+    other_due = kernel[_blocks(pair)] + noise * np.eye(2) - told
     other = _against(other_due, other_error)
 
     company = np.bincount(chain)[chain]

@@ -64,6 +64,10 @@ class Signs:
     level: Array
     hum: NDArray[np.complex64]
 
+    def at(self, epochs: Bools) -> Signs:
+        """The same of some epochs only."""
+        return Signs(**{name: getattr(self, name)[epochs] for name in Signs.__slots__})
+
 
 def signs_of(
     batch: EpochBatch, frame: Frame, conditions: Conditions, *, newest: int | None = None
@@ -125,9 +129,8 @@ class SignLog:
     def first(self, n_stretches: int) -> SignLog:
         """The log of the first stretches only."""
         kept = self.stretch < n_stretches
-        signs = {name: getattr(self.signs, name)[kept] for name in Signs.__slots__}
         return SignLog(
-            signs=Signs(**signs),
+            signs=self.signs.at(kept),
             onset=self.onset[kept],
             stretch=self.stretch[kept],
             begin=self.begin[:n_stretches],
@@ -195,12 +198,17 @@ class SignKeeper:
         self._onset.append(onset)
 
     def forget(self, before: float) -> None:
-        """Drop the stretches that end at or before ``before`` seconds."""
-        lowest = int(before // self.stretch_seconds)
-        self._sums = {key: pair for key, pair in self._sums.items() if key >= lowest}
-        limit = lowest * self.stretch_seconds
-        while self._onset and self._onset[0][-1] < limit:
+        """Drop the epochs that begin before ``before`` seconds.
+
+        The covariance of the stretch that is cut through stays that of all its epochs.
+        """
+        while self._onset and self._onset[0][-1] < before:
             del self._onset[0], self._signs[0]
+        if self._onset and self._onset[0][0] < before:
+            later = self._onset[0] >= before
+            self._onset[0], self._signs[0] = self._onset[0][later], self._signs[0].at(later)
+        lowest = int(self._number(np.array([before]))[0])
+        self._sums = {key: pair for key, pair in self._sums.items() if key >= lowest}
 
     def log(self) -> SignLog:
         """All that is kept."""
