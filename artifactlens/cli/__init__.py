@@ -7,8 +7,10 @@ import click
 from artifactlens import __version__
 from artifactlens.cli.demo import demo_command
 from artifactlens.cli.options import EXIT_HELP
+from artifactlens.cli.replay import replay_command
 from artifactlens.cli.sites import sites_command
 from artifactlens.cli.triage import triage_command
+from artifactlens.cli.watch import watch_command
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]}, epilog=EXIT_HELP)
@@ -21,5 +23,11 @@ def main() -> None:
     """
 
 
-for _command in (triage_command, sites_command, demo_command):
+for _command in (
+    triage_command,
+    sites_command,
+    watch_command,
+    replay_command,
+    demo_command,
+):
     main.add_command(_command)

@@ -6,6 +6,7 @@ import threading
 import time
 from collections import deque
 from dataclasses import replace
+from importlib import import_module
 from typing import TYPE_CHECKING, Self
 
 import numpy as np
@@ -92,6 +93,9 @@ class Watch:
         StreamError, SitesError
             If there is none that can be watched.
         """
+        # Imported on first use otherwise, which would make the first result late.
+        for module in ("scipy.fft", "scipy.sparse.csgraph"):
+            import_module(module)
         self._inlet.__enter__()
         try:
             self._begin(self._inlet.facts)

@@ -47,14 +47,24 @@ SMALL_CHAIN_SHARE = 0.58
 """Share of a short chain's power at one of its sites: two thirds if it alone is noisy."""
 
 
-def prediction_errors(covariance: NDArray[np.floating]) -> Array:
+def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp]) -> Array:
     """Weights (n_sites, n_sites) that leave of each site what the sites like it do not show.
 
-    Least squares of each site on the sites that correlate best with it (at most six, and
-    fewer than half of all: in a frame of mean zero all others together predict anything).
-    The weights are those of the whole recording, each stretch weighing alike. A row holds 1
-    for its own site and the negative weights of the others; NaN with fewer than three sites.
-    ``covariance`` (n_stretches, n_sites, n_sites) uV^2, NaN where unknown.
+    Least squares of each site on the sites that correlate best with it: at most six, and of
+    its own chain fewer than half, for in a chain of mean zero all others together predict
+    anything. The weights are those of the whole recording, each stretch weighing alike.
+
+    Parameters
+    ----------
+    covariance : array, shape (n_stretches, n_sites, n_sites), uV^2, NaN where unknown
+    chain : array, shape (n_sites,)
+        Connected component of each site.
+
+    Returns
+    -------
+    array, shape (n_sites, n_sites)
+        A row holds 1 for its own site and the negative weights of the others; NaN with fewer
+        than three sites.
     """
     matrix = np.asarray(covariance, dtype=np.float64)
     n = matrix.shape[1]
@@ -69,11 +79,18 @@ def prediction_errors(covariance: NDArray[np.floating]) -> Array:
     spread = np.sqrt(np.maximum(np.diag(typical), 1e-30))
     alike = np.abs(typical / np.outer(spread, spread))
     np.fill_diagonal(alike, -1.0)
+    together = chain[:, None] == chain[None]
+    place = np.argsort(np.argsort(-np.where(together, alike, -2.0), axis=1), axis=1)
+    allowed = (together.sum(axis=1, keepdims=True) - 1) // 2
+    alike[together & (place >= allowed)] = -1.0
     chosen = np.argsort(-alike, axis=1, kind="stable")[:, :most]
     gram = typical[chosen[:, :, None], chosen[:, None, :]]
     ridge = RIDGE * np.einsum("nkk->n", gram) / most + 1e-12
     gram = gram + ridge[:, None, None] * np.eye(most)
     moment = np.take_along_axis(typical, chosen, axis=1)
+    barred = np.take_along_axis(alike, chosen, axis=1) < 0
+    moment[barred] = 0.0
+    gram[barred[:, :, None] | barred[:, None, :]] = 0.0
     solved = np.linalg.solve(gram, moment[:, :, None])[:, :, 0]
     weights = np.zeros((n, n))
     np.put_along_axis(weights, chosen, -solved, axis=1)
@@ -127,7 +144,7 @@ def _apart(
     evidence: Evidence, sites: NDArray[np.intp], covariance: NDArray[np.floating]
 ) -> list[Finding]:
     log = evidence.log
-    weights = prediction_errors(covariance)
+    weights = prediction_errors(covariance, evidence.frame.chain[sites])
     share, size = unpredicted(covariance, weights)
     level = _level_size(evidence, sites, weights)
     muscle = log.mean(evidence.marked("muscle"))[:, sites] >= MUSCLE_SHARE

@@ -22,7 +22,10 @@ Array = NDArray[np.float64]
 SMALL_CHAIN = 5
 """With fewer electrodes a chain has too few neighbours for the usual comparisons."""
 
-COLUMNS = ("swing", "step", "step_rise", "fast_power", "mains_ratio")
+COLUMNS = (
+    "swing", "step", "step_rise", "step_crest", "step_alone", "step_stays", "fast_power",
+    "mains_ratio",
+)  # fmt: skip
 """Features that the search looks at, by their names in the catalogue."""
 
 FRONT_Y = 0.35
@@ -51,6 +54,10 @@ class Evidence:
         Fastest step.
     step_rise : array, shape (n_epochs, n_sites), decibel
         Fastest step against the site's usual.
+    step_crest, step_alone : array, shape (n_epochs, n_sites), decibel
+        The same against the site's mean step, and against its neighbours' at that instant.
+    step_stays : array, shape (n_epochs, n_sites)
+        Share of it that is left a tenth of a second later.
     fast_power : array, shape (n_epochs, n_sites), decibel
         Mean density at 30-45 Hz, uV^2/Hz.
     mains_ratio : array, shape (n_epochs, n_sites), decibel
@@ -67,6 +74,9 @@ class Evidence:
     swing: NDArray[np.float32]
     step: NDArray[np.float32]
     step_rise: NDArray[np.float32]
+    step_crest: NDArray[np.float32]
+    step_alone: NDArray[np.float32]
+    step_stays: NDArray[np.float32]
     fast_power: NDArray[np.float32]
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 EVERYWHERE_UV = 0.8
 PLAIN_UV = 4.0
@@ -35,16 +35,24 @@ FEW = 0.25
 """Up to this share of the sites, each has its own trouble."""
 
 
-def own_hum(hum: NDArray[np.complexfloating], ok: NDArray[np.bool_]) -> NDArray[np.float64]:
-    """Amplitude of each site beyond the complex median of all, (n_epochs, n_sites), uV.
+def own_hum(
+    hum: NDArray[np.complexfloating], ok: NDArray[np.bool_], chain: NDArray[np.intp]
+) -> NDArray[np.float64]:
+    """Amplitude of each site beyond the complex median of its chain, (n_epochs, n_sites), uV.
 
-    In a frame of mean zero a site with an amplitude A leaks A / n to all others: the median
-    over the sites takes that off again. Median of real and imaginary part.
+    In a chain of mean zero a site with an amplitude A leaks A / n to all others: the median
+    over the sites takes that off again. Median of real and imaginary part; NaN in chains of
+    fewer than five sites, whose median tells nothing.
     """
-    real = median_of_known(np.where(ok, hum.real, np.nan).T)
-    imaginary = median_of_known(np.where(ok, hum.imag, np.nan).T)
-    middle = (real + 1j * imaginary)[:, None]
-    return np.where(ok, np.abs(hum - middle), np.nan)
+    own = np.full(hum.shape, np.nan)
+    for number in np.flatnonzero(np.bincount(chain) >= SMALL_CHAIN):
+        rows = np.flatnonzero(chain == number)
+        part, there = hum[:, rows], ok[:, rows]
+        real = median_of_known(np.where(there, part.real, np.nan).T)
+        imaginary = median_of_known(np.where(there, part.imag, np.nan).T)
+        middle = (real + 1j * imaginary)[:, None]
+        own[:, rows] = np.where(there, np.abs(part - middle), np.nan)
+    return own
 
 
 def hums(evidence: Evidence) -> list[Finding]:
@@ -53,7 +61,7 @@ def hums(evidence: Evidence) -> list[Finding]:
     if evidence.line_frequency is None or len(frame.sites) < 3:
         return []
     reference = evidence.references()
-    size = log.mean(own_hum(log.signs.hum, log.signs.ok & _in_large_chain(evidence)))
+    size = log.mean(own_hum(log.signs.hum, log.signs.ok, frame.chain))
     ratio = log.mean(evidence.mains_ratio)
     known = np.isfinite(size)
     scalp = ~reference
@@ -119,10 +127,3 @@ def hums(evidence: Evidence) -> list[Finding]:
             )
         )
     return found
-
-
-def _in_large_chain(evidence: Evidence) -> NDArray[np.bool_]:
-    """Sites of chains with at least five electrodes: a median of fewer tells nothing."""
-    chain = evidence.frame.chain
-    size = np.bincount(chain)
-    return np.asarray(chain == int(size.argmax())) & (size.max() >= 5)

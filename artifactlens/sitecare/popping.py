@@ -13,8 +13,10 @@ LEAST_POPS, PLAIN_POPS = 2, 3
 
 PLAIN_PER_MINUTE = 0.5
 WILD_UV = 150.0
+REFERENCE_WILD_UV = 80.0
 WILD_RATIO = 5.0
-"""A second is wild at a site that swings by this much, and this many times the median site."""
+"""A second is wild at a site that swings by this much, and this many times the median site; the
+reference's row is a mean of all channels and quiet by itself."""
 
 SWING_OVER_FAST = 25.0
 """Muscle swings by less than this many times its rms at 30-45 Hz."""
@@ -23,6 +25,9 @@ LOOSE_SECONDS = 3
 """Wild seconds from which a popping site is called a loose lead."""
 
 MUSCLE_NEAR_SECONDS = 1
+
+REFERENCE_STEP_UV, REFERENCE_STAYS = 30.0, 0.5
+REFERENCE_ALONE_DB, REFERENCE_CREST_DB = 11.0, 16.0
 
 SMALL_CHAIN_TIMES, SMALL_CHAIN_UV = 1.5, 20.0
 SMALL_CHAIN_RISE_DB, SMALL_CHAIN_CALM_DB = 12.0, 8.0
@@ -35,12 +40,12 @@ def popping(evidence: Evidence) -> list[Finding]:
     epochs, rows = _pop_cells(evidence)
     pops = np.zeros((len(log.onset), n))
     np.add.at(pops, (epochs, rows), 1)
-    pops[(pops == 0) & _small_chain_pops(evidence)] = 1
+    pops[(pops == 0) & (_small_chain_pops(evidence) | _reference_pops(evidence))] = 1
     wild = _wild(evidence)
     per_stretch = log.total(pops)
     wild_stretch = log.total(wild)
     known = evidence.present()
-    judged = np.isfinite(evidence.probability[2]).sum(axis=0)
+    seconds = log.signs.ok.sum(axis=0)
     found = []
     for row in range(n):
         count = int(per_stretch[:, row].sum())
@@ -50,7 +55,7 @@ def popping(evidence: Evidence) -> list[Finding]:
         if not (count >= LEAST_POPS or loose):
             continue
         held = (per_stretch[:, row] > 0) | (loose & (wild_stretch[:, row] > 0))
-        minutes = max(judged[row] / 60, 1 / 6)
+        minutes = max(seconds[row] / 60, 1 / 6)
         often = count >= PLAIN_POPS and _busiest(log.onset, pops[:, row]) >= PLAIN_POPS
         span = _span_words(minutes)
         noun = "pop" if count == 1 else "pops"
@@ -106,10 +111,26 @@ def _wild(evidence: Evidence) -> NDArray[np.bool_]:
     second = np.partition(np.nan_to_num(swing), -2, axis=1)[:, -2:-1]
     # Eye movements may reach one frontal pole twice as much as the other.
     times = np.where(evidence.marked("eye"), 4.0, 2.0)
+    least = np.where(evidence.references(), REFERENCE_WILD_UV, WILD_UV)
     with np.errstate(invalid="ignore"):
-        wild = (swing > WILD_UV) & (swing > WILD_RATIO * usual) & (swing > times * second)
+        wild = (swing > least) & (swing > WILD_RATIO * usual) & (swing > times * second)
         muscle = evidence.marked("muscle") & ~(swing > SWING_OVER_FAST * evidence.fast_uv())
     return np.asarray(wild & ~muscle)
+
+
+def _reference_pops(evidence: Evidence) -> NDArray[np.bool_]:
+    """Plain steps of a reference that no site shares, (n_epochs, n_sites).
+
+    The classifier was made for sites, whose traces are louder than the mean of all.
+    """
+    with np.errstate(invalid="ignore"):
+        plain = (
+            (evidence.step >= REFERENCE_STEP_UV)
+            & (evidence.step_alone >= REFERENCE_ALONE_DB)
+            & (evidence.step_crest >= REFERENCE_CREST_DB)
+            & (evidence.step_stays >= REFERENCE_STAYS)
+        )
+    return np.asarray(plain & evidence.references())
 
 
 def _small_chain_pops(evidence: Evidence) -> NDArray[np.bool_]:
