@@ -50,7 +50,9 @@ def frame_of(labels=REFERENTIAL):
 def places_of(frame):
     """Where each electrode is; the reference, which has no name, behind the vertex."""
     behind = (site_position("Cz") + site_position("Pz")) / 2
-    return np.array([behind if name is None else site_position(name) for name in frame.canonical])
+    return np.array(
+        [behind if name is None else site_position(name) for name in frame.canonical]
+    )
 
 
 def field(frame):

@@ -120,7 +120,9 @@ def test_what_gel_does_not_do_is_no_bridge(sites, noise_uv):
 
 def test_gel_does_not_come_and_go():
     when = np.isin(np.arange(100) // 10, [1, 5, 9])
-    made = evidence(seconds=100, covariance=bridged(FRAME, "C3", "P3", when=when, seconds=100))
+    made = evidence(
+        seconds=100, covariance=bridged(FRAME, "C3", "P3", when=when, seconds=100)
+    )
     assert bridges(made) == []
     since = bridged(FRAME, "C3", "P3", when=slice(40, None), seconds=100)
     found = one(bridges(evidence(seconds=100, covariance=since)))
@@ -136,7 +138,9 @@ def test_a_flat_derivation_between_two_sites_seen_otherwise_is_a_bridge():
     flat = np.zeros((60, len(BANANA)), dtype=bool)
     flat[:, BANANA.index("C3-P3")] = True
     made = evidence(CHAINS, flat=flat)
-    assert named(bridges(made), made) == [("bridge", "bridged", found_names(made, "C3", "P3"))]
+    assert named(bridges(made), made) == [
+        ("bridge", "bridged", found_names(made, "C3", "P3"))
+    ]
     ok = np.ones((60, len(CHAINS.sites)), dtype=bool)
     ok[:, CHAINS.sites.index("P3")] = False
     assert bridges(evidence(CHAINS, flat=flat, ok=ok)) == []
@@ -480,11 +484,11 @@ def test_a_site_that_runs_wild_now_and_then_has_a_loose_lead():
 
 
 def test_wild_seconds_of_two_sites_or_of_eyes_are_no_loose_lead():
-    both = np.maximum(wild("Fp1", [5, 6, 7, 30, 31, 32]), wild("Fp2", [5, 6, 7, 30, 31, 32]))
-    assert popping(evidence(swing=both)) == []
-    unequal = np.maximum(
-        wild("Fp1", slice(None)), wild("Fp2", slice(None), size_uv=200.0)
+    both = np.maximum(
+        wild("Fp1", [5, 6, 7, 30, 31, 32]), wild("Fp2", [5, 6, 7, 30, 31, 32])
     )
+    assert popping(evidence(swing=both)) == []
+    unequal = np.maximum(wild("Fp1", slice(None)), wild("Fp2", slice(None), size_uv=200.0))
     eyes = {"eye": marks(FRAME, 60, ["Fp1", "Fp2"])}
     assert popping(evidence(swing=unequal, probability=eyes)) == []
 

@@ -69,7 +69,7 @@ const judge = () => {
   document.body.classList.toggle("old", old);
   if (!old && !now) return;
   const last = now ? ` The last that was seen is of ${now.time}.` : "";
-  const words = refused || (silent ? "artifactlens does not answer." : "Nothing new comes.");
+  const words = refused || (silent ? "artifactlens does not answer." : "Nothing new from the stream.");
   say("sentence", old ? words : now.sentence);
   say("more", old ? `What stands below is old.${last}` : now.more);
   document.title = `${at("sentence").textContent} - artifactlens watch`;

@@ -96,7 +96,7 @@ def what_to_do_now(state: LiveState) -> tuple[str, str]:
     if state.phase == "waiting":
         return (
             "Waiting for a stream.",
-            "The watch begins by itself as soon as there is one.",
+            "Start the amplifier and its LSL outlet.",
         )
     if state.phase == "lost":
         return (

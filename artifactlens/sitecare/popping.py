@@ -11,15 +11,17 @@ from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 LEAST_POPS, PLAIN_POPS = 2, 3
 """From so many pops on an electrode is watched, and prepared again."""
 
-PLAIN_PER_MINUTE = 0.5
+POPS_WINDOW_SECONDS, LOOSE_WINDOW_SECONDS = 360.0, 120.0
+"""Time within which so many must come."""
+
 WILD_UV = 150.0
 REFERENCE_WILD_UV = 80.0
 WILD_RATIO = 5.0
 """A second is wild at a site that swings by this much, and this many times the median site; the
 reference's row is a mean of all channels and quiet by itself."""
 
-SWING_OVER_FAST = 25.0
-"""Muscle swings by less than this many times its rms at 30-45 Hz."""
+SWING_OVER_FAST, STEP_OVER_FAST = 18.0, 12.0
+"""Muscle swings, and steps, by less than this many times its rms at 30-45 Hz."""
 
 LOOSE_SECONDS = 3
 """Wild seconds from which a popping site is called a loose lead."""
@@ -50,17 +52,20 @@ def popping(evidence: Evidence) -> list[Finding]:
     for row in range(n):
         count = int(per_stretch[:, row].sum())
         bad = int(wild_stretch[:, row].sum())
-        busy = _busiest(log.onset, wild[:, row])
+        busy = _busiest(log.onset, wild[:, row], LOOSE_WINDOW_SECONDS)
         loose = busy >= LOOSE_SECONDS and (count >= 1 or busy >= 2 * LOOSE_SECONDS)
         if not (count >= LEAST_POPS or loose):
             continue
         held = (per_stretch[:, row] > 0) | (loose & (wild_stretch[:, row] > 0))
         minutes = max(seconds[row] / 60, 1 / 6)
-        often = count >= PLAIN_POPS and _busiest(log.onset, pops[:, row]) >= PLAIN_POPS
+        often = (
+            count >= PLAIN_POPS
+            and _busiest(log.onset, pops[:, row], POPS_WINDOW_SECONDS) >= PLAIN_POPS
+        )
         span = _span_words(minutes)
         noun = "pop" if count == 1 else "pops"
         if loose:
-            reason = f"comes and goes: {bad} wild seconds and {count} {noun} in {span}"
+            reason = f"comes and goes: large swings in {bad} s and {count} {noun} in {span}"
         else:
             reason = f"{count} {noun} in {span}"
         at_reference = frame.roles[row] == "reference"
@@ -96,9 +101,11 @@ def _pop_cells(evidence: Evidence) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     for shift in range(1, MUSCLE_NEAR_SECONDS + 1):
         near[shift:] |= muscle[:-shift]
         near[:-shift] |= muscle[shift:]
-    # Muscle at the site alone may be the fault itself; among others it is muscle.
-    among = near.sum(axis=1) >= 2
-    keep = ~(near[epochs, rows] & among[epochs])
+    # Muscle at the site alone may be the fault itself; with a neighbour's it is muscle.
+    beside = near.astype(np.float32) @ evidence.frame.near.astype(np.float32) > 0
+    with np.errstate(invalid="ignore"):
+        spiky = near & beside & ~(evidence.step > STEP_OVER_FAST * evidence.fast_uv())
+    keep = ~spiky[epochs, rows]
     return epochs[keep], rows[keep]
 
 
@@ -159,9 +166,10 @@ def _small_chain_pops(evidence: Evidence) -> NDArray[np.bool_]:
     return found
 
 
-def _busiest(onset: NDArray[np.float64], count: NDArray[np.generic]) -> float:
-    """Most events within any stretch of time in which ``PLAIN_PER_MINUTE`` asks for three."""
-    window = PLAIN_POPS / PLAIN_PER_MINUTE * 60
+def _busiest(
+    onset: NDArray[np.float64], count: NDArray[np.generic], window: float
+) -> float:
+    """Most events within any ``window`` seconds."""
     total = np.concatenate([[0.0], np.cumsum(count, dtype=np.float64)])
     last = np.searchsorted(onset, onset + window)
     return float((total[last] - total[:-1]).max(initial=0.0))

@@ -40,19 +40,19 @@ def setup_check(evidence: Evidence, responses: tuple[str, ...] = ()) -> Setup | 
         if entry.verdict in ("re-prep", "check"):
             for name in entry.sites or (entry.subject,):
                 unfit.setdefault(name, entry.reason)
-    names = evidence.frame.sites
+    frame = evidence.frame
+    # The reference is told of only if something is wrong with it: it is no site.
+    told = {
+        name: verdict
+        for name, verdict, role in zip(frame.sites, verdicts, frame.roles, strict=True)
+        if name not in unfit and role != "reference"
+    }
     return Setup(
         seconds=seconds,
-        fit=tuple(
-            name
-            for name, verdict in zip(names, verdicts, strict=True)
-            if name not in unfit and verdict != "cannot tell"
-        ),
+        fit=tuple(name for name, verdict in told.items() if verdict != "cannot tell"),
         unfit=tuple(unfit.items()),
         cannot_tell=tuple(
-            name
-            for name, verdict in zip(names, verdicts, strict=True)
-            if name not in unfit and verdict == "cannot tell"
+            name for name, verdict in told.items() if verdict == "cannot tell"
         ),
         responses=responses,
     )

@@ -38,7 +38,7 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ),
     ("reference", "any"): (
         "check the reference lead and its plug",
-        "re-prep the reference, not the sites",
+        "re-prep it, not the sites",
         "then the ground",
     ),
     ("bridge", "any"): (
@@ -120,10 +120,10 @@ def _misplaced(evidence: Evidence, found: list[Finding]) -> list[Finding]:
 
 
 def _without_echoes(found: list[Finding]) -> list[Finding]:
-    """One finding per site and time: what another finding already explains goes.
+    """One finding per site, the gravest, with what else there is told along with it.
 
-    A bridged site may look apart, a loose lead pops, hums and drifts, and where the whole
-    head is lost at once no single site is to blame.
+    A loose lead pops, hums and drifts: one thing to look after. A bridged site may look apart:
+    that is told by the bridge.
     """
     rank = (
         "lost",
@@ -155,15 +155,14 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
         for other in others:
             if main.plain and not other.plain:
                 continue
-            if (main.held & other.held).sum() >= 0.5 * other.held.sum():
-                main = replace(
-                    main,
-                    held=main.held | other.held,
-                    weight=main.weight + 0.5 * other.weight,
-                    reason=f"{main.reason}; {other.reason}",
-                )
-            else:
-                kept.append(other)
+            main = replace(
+                main,
+                held=main.held | other.held,
+                known=main.known | other.known,
+                weight=main.weight + 0.5 * other.weight,
+                reason=f"{main.reason}; {other.reason}",
+                lasting=main.lasting and other.lasting,
+            )
         kept.append(main)
     return kept + rest
 
@@ -206,7 +205,6 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     elif finding.cause == "patient":
         return None
     names = tuple(evidence.frame.sites[row] for row in finding.rows)
-    usual = CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
     return Advice(
         number=0,
         verdict=verdict,
@@ -218,8 +216,12 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
         stretches=courses.stretches(evidence, finding),
         share=round(share, 4),
         reason=finding.reason,
-        checks=finding.checks or usual,
+        checks=finding.checks or _usual_checks(finding),
     )
+
+
+def _usual_checks(finding: Finding) -> tuple[str, ...]:
+    return CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
 
 
 def _confidence(evidence: Evidence, finding: Finding, verdict: str) -> str:
