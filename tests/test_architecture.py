@@ -184,12 +184,59 @@ def test_outputs_read_only_the_result(package):
                 if not part_of(other, package)
                 and other not in ("result", "advice", "kinds", "errors")
             }
-            assert foreign == set(), name
+            # What a watch shows is its state, a type like the result.
+            assert foreign <= ({"live.state"} if name == "page.live" else set()), name
+
+
+JUDGED_BY = ("advice", "curves", "epochs", "errors", "features", "frames", "kinds",
+             "recording", "result", "survey")  # fmt: skip
+
+
+def test_the_site_verdicts_know_what_was_measured_and_nothing_of_what_shows_them():
+    members = {name for name in FILES if part_of(name, "sitecare")}
+    assert len(members) > 10
+    for name in members:
+        foreign = {
+            other for other in ARROWS[name] if not part_of(other, "sitecare", *JUDGED_BY)
+        }
+        assert foreign == set(), name
+
+
+def test_only_the_pipeline_and_the_watch_ask_for_site_verdicts():
+    users = {
+        name
+        for name, arrows in ARROWS.items()
+        if any(part_of(other, "sitecare") for other in arrows)
+        and not part_of(name, "sitecare", "live", "training")
+    }
+    assert users == {"pipeline"}
+
+
+def test_only_the_command_line_starts_a_watch():
+    users = {
+        (name, other)
+        for name, arrows in ARROWS.items()
+        for other in arrows
+        if part_of(other, "live") and not part_of(name, "live", "cli")
+    }
+    assert users == {("page.live", "live.state")}
+
+
+@pytest.mark.parametrize(
+    "entry", ["pipeline", "bedside", "closeups", "export", "page", "sitecare"]
+)
+def test_no_recording_needs_a_stream_or_training_to_be_judged(entry):
+    for name in FILES:
+        if part_of(name, entry) and name != "page.live":
+            found = {
+                other for other in reached_from(name) if part_of(other, "live", "training")
+            }
+            assert found == set(), name
 
 
 def test_the_stages_follow_one_another():
     order = ("recording", "frames", "epochs", "features", "curves", "evidence", "flagging",
-             "pipeline", "cli")  # fmt: skip
+             "sitecare", "pipeline", "bedside", "cli")  # fmt: skip
     for place, name in enumerate(order):
         behind = order[place + 1 :]
         for member in FILES:

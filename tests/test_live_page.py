@@ -11,6 +11,7 @@ import re
 import shutil
 import socket
 import subprocess
+import sys
 import threading
 import urllib.error
 import urllib.request
@@ -314,7 +315,7 @@ def test_names_that_could_be_markup_are_text():
         assert not reader.all("script")
         assert not reader.all("img")
         assert not any("onload" in attrs for _, attrs in reader.elements)
-    assert "</script><script>alert(1)</script>" in words(fragments["parts"]["map"])
+    assert "</script><script>alert(…: leave" in words(fragments["parts"]["map"])
     assert "\u202e" not in json.dumps(fragments, ensure_ascii=False)
 
 
@@ -363,7 +364,7 @@ def test_the_token_opens_once(client, door):
     assert "Set-Cookie" not in again.headers
 
 
-def test_a_hundred_at_once_and_one_is_let_in(door):
+def test_of_twenty_at_once_one_is_let_in(door):
     start = threading.Barrier(20)
     let_in = []
 
@@ -397,12 +398,14 @@ def test_a_wrong_cookie_does_not_open(client, door):
 @pytest.mark.parametrize(
     "host", ["evil.example:4711", "127.0.0.1", "127.0.0.1:80", "localhost", "0.0.0.0:4711"]
 )
-def test_only_this_computer_by_its_own_name_and_port(inside, door, host):
+def test_only_this_computer_by_its_own_name_and_port(door, host):
     """A name of somebody else that leads to 127.0.0.1 (DNS rebinding) gets nothing."""
-    assert get(inside, "/now").status_code == 200
+    client = live_app(lambda: HOSTILE_STATE, door).test_client(use_cookies=False)
     cookie = {"Cookie": f"{door.cookie}={door.secret}"}
-    assert get(inside, "/now", host=host, headers=cookie).status_code == 403
-    assert get(inside, "/now", host="localhost:4711", headers=cookie).status_code == 200
+    assert get(client, "/now", host=host, headers=cookie).status_code == 403
+    assert get(client, f"/?token={door.token}", host=host).status_code == 403
+    for own in (HOST, "localhost:4711"):
+        assert get(client, "/now", host=own, headers=cookie).status_code == 200
 
 
 @pytest.mark.parametrize("origin", ["http://evil.example", "null", "http://127.0.0.1:4712"])
@@ -425,7 +428,6 @@ def test_the_page_can_only_be_looked_at(inside, method):
         "/../server.py",
         "/%2e%2e/%2e%2e/etc/passwd",
         "/now/",
-        "//",
     ],
 )
 def test_no_path_leads_to_a_file(inside, path):
@@ -586,7 +588,7 @@ def test_a_taken_port_says_what_to_do(server):
 
 
 def test_a_missing_package_says_what_to_install(monkeypatch):
-    monkeypatch.setitem(__import__("sys").modules, "waitress.server", None)
+    monkeypatch.setitem(sys.modules, "waitress.server", None)
     with pytest.raises(OutputError) as error:
         LiveServer(lambda: HOSTILE_STATE)
     assert "artifactlens[live]" in error.value.remedy
@@ -641,7 +643,7 @@ def test_a_real_browser_shows_the_sentence_the_map_and_the_list_and_runs_no_name
     dom = dom_of(lambda: HOSTILE_STATE)
     assert inner(dom, "sentence") == "Ground: check the ground electrode."
     assert "<title>Ground: check the ground electrode. - artifactlens watch</title>" in dom
-    assert 'class="care"' in inner(dom, "map") or 'class="care"' in dom
+    assert 'data-verdict="re-prep"' in dom
     assert list_rows(dom)[1].startswith("2 2. =HYPERLINK(1)")
     assert "&lt;b&gt;Blink&lt;/b&gt;" in inner(dom, "words")
     assert len(re.findall("<script", dom)) == 1

@@ -113,7 +113,7 @@ def test_covariance_is_the_mean_over_the_seconds_in_which_both_sites_were_there(
 
 
 def test_the_covariance_of_a_recording_is_that_of_its_slow_traces():
-    """A sine of 4 Hz and amplitude a has the variance a^2 / 2; half of it the covariance a^2 / 4."""
+    """A sine of 4 Hz has the variance a^2 / 2; with half of itself the covariance a^2 / 4."""
     wave = np.sin(2 * np.pi * 4 * np.arange(round(12 * RATE)) / RATE)
     data = np.zeros((3, len(wave)))
     data[0], data[1] = 10.0 * wave, 5.0 * wave

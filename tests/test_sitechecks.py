@@ -484,12 +484,12 @@ def test_a_site_is_right_if_the_leading_entry_has_it_first():
         ([entry(1, "re-prep", "site", "T7")], False, "site", False, ("T7",)),
         ([entry(1, "check", "ground")], False, "ground", False, ()),
         ([entry(1, "re-prep", "site")], False, "site", False, ("the site itself",)),
-        # What waits or asks does not lead; the first that acts does.
+        # What asks the patient does not lead; what is watched does.
         ([entry(1, "ask", "patient", "T4"), entry(2, "re-prep", "site", "T3")],
          True, "patient", True, ()),
-        ([entry(1, "watch", "site", "T3")], False, "site", True, ()),
+        ([entry(1, "watch", "site", "T3")], True, "site", True, ()),
         ([entry(1, "watch", "site", "C3"), entry(2, "check", "site", "T3")],
-         True, "site", True, ()),
+         False, "site", True, ()),
         # The number decides, not the place in the list.
         ([entry(2, "re-prep", "site", "T3"), entry(1, "re-prep", "site", "C3")],
          False, "site", True, ("C3",)),
@@ -618,6 +618,33 @@ def test_what_no_preparation_cures_must_not_lead_to_one(fault):
     assert blamed.innocent == ("T3",)
 
 
+@pytest.mark.parametrize(
+    ("leading", "acted"),
+    [
+        (entry(1, "re-prep", "site", "T3"), True),
+        (entry(1, "watch", "site", "T3"), False),
+        (dataclasses.replace(entry(1, "watch", "site", "T3"), state="cured"), True),
+        (entry(1, "re-prep", "site", "C3"), False),
+    ],
+)
+def test_what_is_only_watched_is_told_from_what_is_acted_upon(leading, acted):
+    assert score(truth(), [leading]).acted is acted
+
+
+@pytest.mark.parametrize(
+    ("fault", "what", "montage", "dead"),
+    [
+        ("flat", "dead at 0 uV", "double banana", True),
+        ("flat", "dead at 0 uV", "referential", False),
+        ("clipped", "an offset beyond 200 uV", "double banana", True),
+        ("clipped", "sways to 3 times 200 uV", "double banana", False),
+    ],
+)
+def test_a_dead_input_in_made_derivations_is_told_apart(fault, what, montage, dead):
+    here = dataclasses.replace(truth(fault), what=what, montage=montage)
+    assert here.dead_in_bipolar is dead
+
+
 # Tables --------------------------------------------------------------------------------
 
 
@@ -650,7 +677,10 @@ def test_the_aims_count_what_they_say(some):
     }
     assert found == {
         "plain site fault": (1, 2, False),
+        "... without dead inputs in the double banana": (1, 2, False),
+        "... and of these it is not only watched": (1, 2, False),
         "reference fault, referential": (1, 1, True),
+        "... plain ones": (1, 1, True),
         "mains everywhere": (0, 1, False),
         "bridged pairs named": (1, 3, False),
         "muscle or eye alone": (1, 1, False),

@@ -7,7 +7,7 @@ import threading
 from collections.abc import Callable, Iterator
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, TextIO
+from typing import TYPE_CHECKING, NoReturn, TextIO
 
 import click
 
@@ -123,16 +123,18 @@ def watch_command(
     except KeyboardInterrupt:
         pass
     except ArtifactlensError as error:
-        print_last(last)
-        print_failure(
-            {
-                "recording": "the stream" if stream is None else f"stream {stream}",
-                "problem": error.problem,
-                "remedy": error.remedy,
-            }
-        )
-        raise SystemExit(1) from None
+        _fail(stream, last, error.problem, error.remedy)
+    except Exception as error:
+        problem = f"An error that artifactlens does not know: {type(error).__name__}."
+        _fail(stream, last, problem, "Start it again, and please report what was going on.")
     print_last(last)
+
+
+def _fail(stream: str | None, last: LiveState, problem: str, remedy: str) -> NoReturn:
+    print_last(last)
+    name = "the stream" if stream is None else f"stream {stream}"
+    print_failure({"recording": name, "problem": problem, "remedy": remedy})
+    raise SystemExit(1)
 
 
 def _values(table: TextIO) -> dict[str, float]:

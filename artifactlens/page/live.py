@@ -191,7 +191,7 @@ def _keys(advice: Sequence[Advice]) -> list[str]:
     keys: list[str] = []
     for entry in advice:
         about = (entry.sign,) if entry.cause == "patient" else entry.sites
-        key = "|".join((entry.cause, *about))
+        key = clean("|".join((entry.cause, *about)))
         while key in keys:
             key += "|more"
         keys.append(key)

@@ -73,6 +73,16 @@ class Truth:
         return self.cause == "reference" and self.montage == "double banana"
 
     @property
+    def dead_in_bipolar(self) -> bool:
+        """A dead or railed input in derivations made from referential channels.
+
+        Its two derivations then show the potentials of its neighbours against the reference:
+        the same as an electrode that sits where the reference sits.
+        """
+        dead = self.fault == "flat" or self.what.startswith("an offset")
+        return dead and self.montage == "double banana"
+
+    @property
     def pairs(self) -> tuple[frozenset[str], ...]:
         """Bridged pairs."""
         if self.cause != "bridge":

@@ -25,6 +25,9 @@ class Outcome:
         Cause of the first entry, "none" where there is none.
     right : bool
         Whether the case counts as solved; see :func:`score`.
+    acted : bool
+        Whether it is right and the leading entry asks for something to be done, or tells of
+        what was there and is over: it is not only watched.
     named : bool
         Whether any entry, of whatever verdict, has the cause right and names a true site.
     innocent : tuple of str
@@ -41,6 +44,7 @@ class Outcome:
     truth: Truth
     first: str
     right: bool
+    acted: bool
     named: bool
     innocent: tuple[str, ...]
     pairs_named: int
@@ -57,9 +61,8 @@ class Outcome:
 def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     """Score the list of one case.
 
-    The *leading* entry is the first that asks for something to be done about an electrode, or
-    that tells of what was there and is over; for a mild fault, the first that is not about
-    the patient, for a mild fault may be watched. Right is, by the true cause:
+    The *leading* entry is the first that is not about the patient. Right is, by the true
+    cause:
 
     - site: the leading entry has a true site as its first;
     - reference: the leading entry is for the reference; in bipolar derivations, where it
@@ -69,8 +72,7 @@ def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     - placement and patient: nothing is to be prepared again.
     """
     listed = sorted(advice, key=lambda entry: entry.number)
-    mild = truth.strength == "mild"
-    leading = next((entry for entry in listed if _leads(entry, mild=mild)), None)
+    leading = next((entry for entry in listed if entry.cause != "patient"), None)
     innocent = _innocent(truth, listed)
     pairs_named = sum(
         any(entry.cause == "bridge" and pair <= set(entry.sites) for entry in listed)
@@ -92,6 +94,7 @@ def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
         truth=truth,
         first=listed[0].cause if listed else NOTHING,
         right=right,
+        acted=right and leading is not None and _acts(leading),
         named=match is not None,
         innocent=innocent,
         pairs_named=pairs_named,
@@ -104,10 +107,8 @@ def score(truth: Truth, advice: Sequence[Advice]) -> Outcome:
     )
 
 
-def _leads(entry: Advice, *, mild: bool) -> bool:
-    about_electrodes = entry.cause != "patient"
-    over = entry.state != "present"
-    return about_electrodes and (mild or over or entry.verdict in ACTS)
+def _acts(entry: Advice) -> bool:
+    return entry.verdict in ACTS or entry.state != "present"
 
 
 def _names(truth: Truth, entry: Advice) -> bool:

@@ -55,13 +55,27 @@ def simulated_aims(ran: Sequence[Ran]) -> list[Aim]:
     """What the issue asks of cases with something put in."""
     outcomes = [one.outcome for one in ran]
     sites = [o for o in outcomes if o.truth.cause == "site" and o.truth.strength == "plain"]
+    alive = [o for o in sites if not o.truth.dead_in_bipolar]
     reference = [o for o in outcomes if o.truth.cause == "reference" and not o.truth.hidden]
     ground = [o for o in outcomes if o.truth.cause == "ground"]
     bridges = [o for o in outcomes if o.truth.cause == "bridge"]
     patients = [o for o in outcomes if o.truth.cause == "patient"]
     return [
-        _share("plain site fault: the leading entry names the site", sites, 0.95),
+        _share("plain site fault: the first site of the list is a true one", sites, 0.95),
+        _share("... without dead inputs in the double banana", alive, 0.95),
+        Aim(
+            "... and of these it is not only watched",
+            sum(o.acted for o in alive),
+            len(alive),
+            0.95,
+            True,
+        ),
         _share("reference fault, referential: the leading entry names it", reference, 0.95),
+        _share(
+            "... plain ones",
+            [o for o in reference if o.truth.strength == "plain"],
+            0.95,
+        ),
         _share("mains everywhere: told from the reference", ground, 0.90),
         Aim(
             "bridged pairs named",
