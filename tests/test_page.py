@@ -698,7 +698,7 @@ def test_what_speaks_for_lies_right_and_what_speaks_against_left():
 
 def test_the_site_table_holds_what_was_measured():
     text = Reader(report_html(make_result(4))).text
-    assert "C3 site 2 min 0 0 <1 – 0.5 0.81 1.5 9.5" in text
+    assert "C3 site leave 2 min 0 0 <1 – 0.5 0.81 1.5 9.5" in text
     assert "flat from 90 s on" in text
 
 

@@ -7,7 +7,6 @@ import hashlib
 import math
 from collections.abc import Sequence
 from functools import cache
-from importlib.resources import files
 from typing import TYPE_CHECKING, Any
 
 from markupsafe import Markup
@@ -24,9 +23,10 @@ from artifactlens.page.balance import (
 from artifactlens.page.headmap import head_svg, short_share, unplaced
 from artifactlens.page.need import by_need
 from artifactlens.page.ribbon import line_seconds, ribbon_svg, swatch, textures
+from artifactlens.page.sheet import what_to_do
+from artifactlens.page.template import part, template
 from artifactlens.page.traces import TraceWindow, closeup
 from artifactlens.page.words import (
-    clean,
     clock,
     cut,
     names,
@@ -69,7 +69,7 @@ def report_html(result: Result, traces: Sequence[TraceWindow] = ()) -> str:
         (flag for flag, _ in ranked[FULL_ENTRIES:]),
         key=lambda flag: (flag.onset, flag.number),
     )
-    script = _part("report.js")
+    script = part("report.js")
     digest = base64.b64encode(hashlib.sha256(script.encode()).digest()).decode()
     return _template().render(
         recording=recording,
@@ -92,9 +92,10 @@ def report_html(result: Result, traces: Sequence[TraceWindow] = ()) -> str:
         n_flags=len(result.flags),
         kinds=KIND_NAMES,
         sites=result.sites,
+        sites_words=what_to_do(result)[0],
         gaps=_gaps(recording),
         versions=_versions(result),
-        style=Markup(_part("report.css")),
+        style=Markup(part("report.css")),
         script=Markup(script),
         script_hash=f"sha256-{digest}",
     )
@@ -237,37 +238,17 @@ def _versions(result: Result) -> list[tuple[str, str]]:
     ]
 
 
-def _part(name: str) -> str:
-    return files("artifactlens.page").joinpath(name).read_text(encoding="utf-8")
-
-
 @cache
 def _template() -> Template:
-    from jinja2 import Environment, StrictUndefined
-
-    environment = Environment(
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-        finalize=_printable,
-    )
-    environment.filters.update(
-        bar=bar_svg,
-        clock=clock,
-        cut=cut,
-        names=names,
-        number=number,
-        plain=plain,
-        share=short_share,
-        signed=signed,
-        span=span,
-    )
-    return environment.from_string(_part("report.html.j2"))
-
-
-def _printable(value: Any) -> Any:  # noqa: ANN401  (the template engine passes anything)
-    """Unprintable characters leave every text at the one place all of them pass."""
-    return (
-        clean(value) if isinstance(value, str) and not isinstance(value, Markup) else value
-    )
+    filters = {
+        "bar": bar_svg,
+        "clock": clock,
+        "cut": cut,
+        "names": names,
+        "number": number,
+        "plain": plain,
+        "share": short_share,
+        "signed": signed,
+        "span": span,
+    }
+    return template("report.html.j2", filters)
