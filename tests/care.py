@@ -26,7 +26,7 @@ REFERENTIAL = tuple(f"{site}-REF" for site in SITES)
 FIELD_UV, REACH_M, OWN_UV = 20.0, 0.06, 1.0
 """Invented potentials: their size, how far they are alike, and each electrode's own noise."""
 
-USUAL = {"swing": 60.0, "step": 5.0, "fast_power": -10.0}
+USUAL = {"swing": 60.0, "step": 5.0, "step_stays": 0.8, "fast_power": -10.0}
 """Of features; others are 0."""
 
 CONDITIONS = Conditions(

@@ -173,8 +173,8 @@ def test_the_terminal_shows_sentence_list_marks_setup_and_stream():
     told = seen(state_of(P3, BRIDGE, marked_now={"pop": ("P3",), "eye": ()}), width=200)
     for words in (
         "Re-prep P3. First check the lead.",
-        "1. P3 re-prep: 14 pops in 2 min, unlike its neighbours; check the lead, then re-prep",
-        "2. F4 and C4 re-prep:",
+        "1.  P3 re-prep: 14 pops in 2 min, unlike its neighbours; check the lead, then re-prep",
+        "2.  F4 and C4 re-prep:",
         "marked now  pop P3\n",
         "setup       First 2 min: 17 of 19 sites fit to start.",
         "stream      Stream amp, 0:12:40 seen, none missing",

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import sys
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn, TextIO
@@ -17,6 +17,7 @@ from artifactlens.cli.printing import HANG, detail, echo, place, shown
 
 if TYPE_CHECKING:
     from rich.console import Console, RenderableType
+    from rich.table import Table
 
     from artifactlens.advice import Advice
     from artifactlens.live.state import LiveState
@@ -210,6 +211,7 @@ def picture(state: LiveState) -> RenderableType:
     from rich.text import Text
 
     from artifactlens.page.live import setup_line, stream_words, what_to_do_now
+    from artifactlens.page.words import names
 
     sentence, more = what_to_do_now(state)
     parts: list[RenderableType] = []
@@ -220,25 +222,31 @@ def picture(state: LiveState) -> RenderableType:
             Text.assemble("Say to the patient: ", (ask, "bold reverse"), left),
             Text(),
         ]
-    parts += [Text(shown(sentence), style="bold"), Text(shown(more)), Text()]
-    for line in advice_lines(state):
-        parts.append(Text(line))
-    parts.append(Text())
-    marked = [
-        f"{kind} {', '.join(sites[:8])}"
-        + (f" and {len(sites) - 8} more" if sites[8:] else "")
-        for kind, sites in state.marked_now.items()
-        if sites
+    parts += [Text(shown(sentence), style="bold"), Text(shown(more))]
+    numbered = [tuple(line.split(" ", 1)) for line in advice_lines(state)]
+    marked = "; ".join(f"{k} {names(s, 8)}" for k, s in state.marked_now.items() if s)
+    details = [
+        ("marked now", marked or "no site"),
+        ("setup", setup_line(state)),
+        ("stream", stream_words(state)),
+        *(("note", note) for note in state.notes),
     ]
-    for word, text in (
-        ("marked now", shown("; ".join(marked) or "no site")),
-        ("setup", shown(setup_line(state))),
-        ("stream", shown(stream_words(state))),
-        *(("note", shown(note)) for note in state.notes),
-    ):
-        if text:
-            parts.append(Text(f"{word:<{HANG}}{text}"))
+    parts += [Padding(_columns(numbered, 2), (1, 0)), _columns(details, HANG - 2)]
     return Padding(Group(*parts), (1, 0, 0, 0))
+
+
+def _columns(pairs: Iterable[tuple[str, ...]], width: int) -> Table:
+    """A word and a text beside it, which is broken within its column."""
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table.grid(padding=(0, 2, 0, 0))
+    table.add_column(min_width=width, no_wrap=True)
+    table.add_column()
+    for word, text in pairs:
+        if text:
+            table.add_row(word, Text(shown(text)))
+    return table
 
 
 def advice_lines(state: LiveState) -> list[str]:

@@ -114,7 +114,7 @@ def what_to_do_now(state: LiveState) -> tuple[str, str]:
     total, more = what_to_do(result)
     if not present:
         return total, more
-    if len(present) > 1:
+    if len(present) > 1 and any(entry.verdict != "ask" for entry in present):
         more = f"In all: {total} {more}"
     return _asked_for(min(present, key=lambda entry: entry.number)), more.strip()
 

@@ -20,8 +20,13 @@ WILD_RATIO = 5.0
 """A second is wild at a site that swings by this much, and this many times the median site; the
 reference's row is a mean of all channels and quiet by itself."""
 
-SWING_OVER_FAST, STEP_OVER_FAST = 18.0, 12.0
-"""Muscle swings, and steps, by less than this many times its rms at 30-45 Hz."""
+SWING_OVER_FAST, STEP_OVER_FAST = 18.0, 20.0
+"""Muscle swings, and steps, by less than this many times its rms at 30-45 Hz; a lone step of
+one electrode by about 26 times (a step of height A has a density of 2 (A / 2 pi f)^2 w^2,
+with w the window where it falls)."""
+
+LEAST_STAYS = 0.3
+"""Share of a pop that is left a tenth of a second later: a twitch comes back."""
 
 LOOSE_SECONDS = 3
 """Wild seconds from which a popping site is called a loose lead."""
@@ -101,10 +106,9 @@ def _pop_cells(evidence: Evidence) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     for shift in range(1, MUSCLE_NEAR_SECONDS + 1):
         near[shift:] |= muscle[:-shift]
         near[:-shift] |= muscle[shift:]
-    # Muscle at the site alone may be the fault itself; with a neighbour's it is muscle.
-    beside = near.astype(np.float32) @ evidence.frame.near.astype(np.float32) > 0
     with np.errstate(invalid="ignore"):
-        spiky = near & beside & ~(evidence.step > STEP_OVER_FAST * evidence.fast_uv())
+        twitch = near & ~(evidence.step > STEP_OVER_FAST * evidence.fast_uv())
+        spiky = twitch | (evidence.step_stays < LEAST_STAYS)
     keep = ~spiky[epochs, rows]
     return epochs[keep], rows[keep]
 
