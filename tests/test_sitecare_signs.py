@@ -203,15 +203,15 @@ def test_what_is_forgotten_is_gone_to_the_second(size, before):
     np.testing.assert_allclose(log.covariance, whole[-len(log) :])
 
 
-def test_a_stream_of_hours_keeps_the_last_minutes_only():
+def test_a_stream_keeps_the_last_minutes_only():
     keeper = SignKeeper(None, N_SITES)
     one, matrix = signs(1), covariances([1.0])
     sizes = []
     tracemalloc.start()
-    for second in range(7200):
+    for second in range(3000):
         keeper.add(np.array([float(second)]), one, matrix, places(1))
         keeper.forget(max(second - 599.0, 0.0))
-        if second in (1200, 7199):
+        if second in (1200, 2999):
             sizes.append(tracemalloc.get_traced_memory()[0])
     tracemalloc.stop()
     assert len(keeper.log().onset) == 600
