@@ -77,8 +77,8 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
 reference, montage (common practice)."""
 
 
-def findings_of(evidence: Evidence) -> list[Finding]:
-    """Everything that is wrong, in no order."""
+def findings_of(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> list[Finding]:
+    """Everything that is wrong, in no order, with what other tests have found."""
     if not len(evidence.log):
         return []
     found = [
@@ -89,7 +89,7 @@ def findings_of(evidence: Evidence) -> list[Finding]:
         *contacts(evidence),
         *patients(evidence),
     ]
-    return _without_echoes([*found, *_misplaced(evidence, found)])
+    return _without_echoes([*found, *_misplaced(evidence, found), *extra])
 
 
 def _misplaced(evidence: Evidence, found: list[Finding]) -> list[Finding]:
@@ -135,6 +135,8 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
         "drift",
         "apart",
         "mains",
+        "no response",
+        "mirrored",
     )
     by_site: dict[tuple[str, int], list[Finding]] = {}
     rest = []
@@ -162,6 +164,7 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
                 weight=main.weight + 0.5 * other.weight,
                 reason=f"{main.reason}; {other.reason}",
                 lasting=main.lasting and other.lasting,
+                standing=main.standing or other.standing,
             )
         kept.append(main)
     return kept + rest
@@ -174,10 +177,10 @@ def advise(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> tuple[Advice,
     ----------
     evidence : Evidence
     extra : tuple of Finding
-        What other tests have found: placement, biological calibration.
+        What other tests have found: the biological calibration.
     """
     entries = []
-    for finding in [*findings_of(evidence), *extra]:
+    for finding in findings_of(evidence, extra):
         entry = _entry(evidence, finding)
         if entry is not None:
             entries.append((finding, entry))
@@ -203,7 +206,9 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
             finding.cause, "re-prep"
         )
     elif finding.cause == "patient":
-        return None
+        if not finding.standing:
+            return None
+        verdict = "ask"
     names = tuple(evidence.frame.sites[row] for row in finding.rows)
     return Advice(
         number=0,
