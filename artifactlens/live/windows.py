@@ -47,7 +47,7 @@ class RawWindow:
     def piece(self, start: int, stop: int) -> NDArray[np.float32]:
         """Samples ``start`` up to ``stop``, as a view; what is gone or to come is left out."""
         low, high = max(start - self.first, 0), min(stop - self.first, self._filled)
-        return self._data[:, low:high]
+        return self._data[:, low : max(high, low)]
 
 
 class Rolling:
@@ -80,6 +80,10 @@ class Rolling:
         """Replace values of an epoch, counted from the end: -1 is the last one."""
         for name, value in row.items():
             self._columns[name][self._end + place] = value
+
+    def drop(self, count: int) -> None:
+        """Forget the oldest epochs."""
+        self._first = min(self._first + count, self._end)
 
     def column(self, name: str) -> NDArray[Any]:
         """A column, (n_epochs, ...), as a view."""

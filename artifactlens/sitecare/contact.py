@@ -21,9 +21,9 @@ EYE_SHARE = 0.2
 """The same where eye movements are marked at the site in this part of the stretch: they reach
 the two frontal poles unequally, and the weights may come from times without them."""
 
-APART_DB, PLAIN_DB = 8.0, 10.5
+APART_DB, PLAIN_DB = 9.0, 12.5
 """How far the unpredicted amplitude exceeds the median of all sites': to be named, to be
-acted upon. The largest in undisturbed recordings at hand is about 8 dB with such a share."""
+acted upon. Single stretches of undisturbed recordings at hand reach 12 dB with such a share."""
 
 APART_UV, PLAIN_UV = 7.0, 12.0
 REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
@@ -50,9 +50,11 @@ SMALL_CHAIN_SHARE = 0.58
 def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp]) -> Array:
     """Weights (n_sites, n_sites) that leave of each site what the sites like it do not show.
 
-    Least squares of each site on the sites that correlate best with it: at most six, and of
-    its own chain fewer than half, for in a chain of mean zero all others together predict
-    anything. The weights are those of the whole recording, each stretch weighing alike.
+    Least squares of each site on the sites of its chain that correlate best with it, at most
+    six, with weights that sum to one: what is left is then the same against any reference. (In
+    a chain of mean zero, noise of a site leaks into all others, turned over, and free weights
+    would predict it from there.) The weights are those of the whole recording, each stretch
+    weighing alike.
 
     Parameters
     ----------
@@ -68,7 +70,8 @@ def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp])
     """
     matrix = np.asarray(covariance, dtype=np.float64)
     n = matrix.shape[1]
-    most = min(MOST_PREDICTORS, (n - 1) // 2)
+    together = chain[:, None] == chain[None]
+    most = min(MOST_PREDICTORS, int(together.sum(axis=1).max(initial=0)) - 2)
     if most < 1:
         return np.full((n, n), np.nan)
     variance = np.einsum("bss->bs", matrix)
@@ -78,20 +81,20 @@ def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp])
     typical = np.where(known, scaled, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1)
     spread = np.sqrt(np.maximum(np.diag(typical), 1e-30))
     alike = np.abs(typical / np.outer(spread, spread))
-    np.fill_diagonal(alike, -1.0)
-    together = chain[:, None] == chain[None]
-    place = np.argsort(np.argsort(-np.where(together, alike, -2.0), axis=1), axis=1)
-    allowed = (together.sum(axis=1, keepdims=True) - 1) // 2
-    alike[together & (place >= allowed)] = -1.0
+    alike[~together] = -1.0
+    np.fill_diagonal(alike, -2.0)
     chosen = np.argsort(-alike, axis=1, kind="stable")[:, :most]
-    gram = typical[chosen[:, :, None], chosen[:, None, :]]
+    serves = np.take_along_axis(together, chosen, axis=1)
+    both = serves[:, :, None] & serves[:, None, :]
+    gram = np.where(both, typical[chosen[:, :, None], chosen[:, None, :]], 0.0)
     ridge = RIDGE * np.einsum("nkk->n", gram) / most + 1e-12
-    gram = gram + ridge[:, None, None] * np.eye(most)
-    moment = np.take_along_axis(typical, chosen, axis=1)
-    barred = np.take_along_axis(alike, chosen, axis=1) < 0
-    moment[barred] = 0.0
-    gram[barred[:, :, None] | barred[:, None, :]] = 0.0
-    solved = np.linalg.solve(gram, moment[:, :, None])[:, :, 0]
+    gram += np.where(serves, ridge[:, None], 1.0)[:, :, None] * np.eye(most)
+    moment = np.where(serves, np.take_along_axis(typical, chosen, axis=1), 0.0)
+    ones = serves.astype(np.float64)
+    free, along = np.linalg.solve(gram, np.stack([moment, ones], axis=2)).transpose(2, 0, 1)
+    # Lagrange's multiplier that makes the weights of every site sum to one.
+    reach = np.maximum((along * ones).sum(axis=1), 1e-30)
+    solved = free + along * ((1 - (free * ones).sum(axis=1)) / reach)[:, None]
     weights = np.zeros((n, n))
     np.put_along_axis(weights, chosen, -solved, axis=1)
     weights[np.arange(n), np.arange(n)] = 1.0

@@ -22,6 +22,9 @@ Array = NDArray[np.float64]
 SMALL_CHAIN = 5
 """With fewer electrodes a chain has too few neighbours for the usual comparisons."""
 
+FEWEST_ELSEWHERE = 4
+"""Sites of longer chains from which on those of a short one are held against them."""
+
 COLUMNS = (
     "swing", "step", "step_rise", "step_crest", "step_alone", "step_stays", "fast_power",
     "mains_ratio",
@@ -147,6 +150,10 @@ class Evidence:
         """Which rows are reference electrodes, (n_sites,)."""
         return np.array([role == "reference" for role in self.frame.roles])
 
+    def company(self) -> NDArray[np.intp]:
+        """How many electrodes each hangs together with, itself counted, (n_sites,)."""
+        return np.bincount(self.frame.chain)[self.frame.chain]
+
     def present(self) -> Bools:
         """Which sites were there for most of each stretch, (n_stretches, n_sites)."""
         return self.log.mean(self.log.signs.ok) >= REST_SHARE
@@ -191,6 +198,8 @@ class Finding:
     standing : bool
         True for what was seen at one time and holds until somebody has looked, such as the
         answers to a calibration.
+    one_of : bool
+        True where one of the sites is at fault and nothing tells which.
     checks : tuple of str
         What to do; empty for what is usual for cause and sign.
     """
@@ -205,4 +214,5 @@ class Finding:
     reason: str
     lasting: bool = True
     standing: bool = False
+    one_of: bool = False
     checks: tuple[str, ...] = ()

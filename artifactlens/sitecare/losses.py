@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
-from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 LOST_SHARE = 0.3
 CLIPPED_SHARE = 0.1
@@ -28,9 +29,10 @@ def losses(evidence: Evidence) -> list[Finding]:
         if not fault.any():
             continue
         share = log.mean(evidence.site_faults(fault))
-        share[:, reference] = 0
         held = share >= least
-        together = held.sum(axis=1) > ALL_AT_ONCE * (~reference).sum()
+        count = int((~reference).sum())
+        together = held[:, ~reference].sum(axis=1) > ALL_AT_ONCE * count
+        together &= count >= SMALL_CHAIN
         if together.any():
             found.append(
                 Finding(
@@ -45,21 +47,89 @@ def losses(evidence: Evidence) -> list[Finding]:
                 )
             )
         held &= ~together[:, None]
-        for row in np.flatnonzero(held.any(axis=0)):
-            part = float(share[~together, row].mean())
+        faulty = (log.mean(fault) >= least) & ~together[:, None]
+        for rows in _suspects(evidence, sign, faulty, held):
+            lost = [row for row in rows if held[:, row].any()]
+            part = float(share[~together][:, lost].max(axis=1).mean())
+            reason = f"{_WORDS[sign]} for {100 * part:.0f} % of the time"
+            one_of = len(rows) > 1
+            if one_of:
+                reason += _doubt(sign, [evidence.frame.sites[row] for row in rows])
             found.append(
                 Finding(
                     cause="site",
                     sign=sign,
-                    rows=(int(row),),
-                    held=held[:, row],
+                    rows=rows,
+                    held=np.asarray(held[:, lost].any(axis=1)),
                     known=~together,
                     plain=True,
                     weight=30.0 * part,
-                    reason=f"{_WORDS[sign]} for {100 * part:.0f} % of the time",
+                    reason=reason,
+                    one_of=one_of,
+                    checks=_CHECKS_OF_SEVERAL if one_of else (),
                 )
             )
     return found
 
 
+def _suspects(
+    evidence: Evidence, sign: str, faulty: NDArray[np.bool_], held: NDArray[np.bool_]
+) -> list[tuple[int, ...]]:
+    """Sites without a sound channel, those together of which nothing tells which it is.
+
+    A faulty derivation between a site that has sound ones and a site that has none is laid
+    to the latter. Between two that have none it may be either. At the end of a chain a flat
+    derivation may be the electrode of the end, or its neighbour joined to it.
+
+    Parameters
+    ----------
+    faulty : array, shape (n_stretches, n_channels), bool
+    held : array, shape (n_stretches, n_sites), bool
+        Where all channels of a site are faulty.
+    """
+    frame = evidence.frame
+    own = np.flatnonzero(held.any(axis=0) & ~evidence.references())
+    if frame.montage == "average":
+        return [(int(row),) for row in own]
+    count = (frame.incidence != 0).sum(axis=0)
+    # A reference that serves several channels and is lost would make noise of them.
+    dead = held & ~(evidence.references() & (count > 1))
+    bipolar = frame.montage == "bipolar"
+    told: set[int] = set()
+    pairs = []
+    for channel in np.flatnonzero(faulty.any(axis=0)):
+        pair = [int(row) for row in np.flatnonzero(frame.incidence[channel])]
+        without = dead[:, pair] & faulty[:, [channel]]
+        if without.all(axis=1).any():
+            pairs.append(pair)
+        elif without.any():
+            row = pair[int(without.any(axis=0).argmax())]
+            if sign == "flat" and bipolar and count[row] == 1:
+                pairs.append(pair)
+            else:
+                told.add(row)
+    groups = [{int(row)} for row in own]
+    for pair in pairs:
+        if not set(pair) <= told:
+            touched = [group for group in groups if group & set(pair)]
+            groups = [group for group in groups if group not in touched]
+            groups.append(set(pair).union(*touched))
+    ordered = [tuple(sorted(group, key=lambda row: (-count[row], row))) for group in groups]
+    return sorted(ordered, key=min)
+
+
+def _doubt(sign: str, names: list[str]) -> str:
+    several = f"{', '.join(names[:-1])} and {names[-1]}"
+    if len(names) > 2:
+        return f" in all derivations of {several}; nothing tells which of them it is"
+    either = "a lead, or the two joined" if sign == "flat" else "either of them"
+    return f" in the derivation of {several}, which does not tell one from the other: {either}"
+
+
 _WORDS = {"flat": "flat", "lost": "samples missing", "clipped": "clipped"}
+
+_CHECKS_OF_SEVERAL = (
+    "check their leads and the head box inputs",
+    "look for gel or a cable that joins them",
+    "look at them in another montage",
+)

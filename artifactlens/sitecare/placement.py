@@ -77,6 +77,11 @@ class PlaceMoments:
     total: Array
     seconds: Array
 
+    @classmethod
+    def none(cls, n_sites: int) -> PlaceMoments:
+        """Of nothing seen."""
+        return cls(np.zeros((n_sites, n_sites)), np.zeros((n_sites, n_sites)))
+
     def __add__(self, other: PlaceMoments) -> PlaceMoments:
         """Both stretches together."""
         return PlaceMoments(self.total + other.total, self.seconds + other.seconds)

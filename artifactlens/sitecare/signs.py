@@ -136,7 +136,7 @@ class SignLog:
             begin=self.begin[:n_stretches],
             end=self.end[:n_stretches],
             covariance=self.covariance[:n_stretches],
-            places=self.places,
+            places=PlaceMoments.none(self.covariance.shape[1]),
         )
 
     def mean(self, values: NDArray[np.floating | np.bool_]) -> NDArray[np.float64]:

@@ -10,7 +10,12 @@ from artifactlens.advice import CAUSES, VERDICTS, Advice
 from artifactlens.sitecare import courses
 from artifactlens.sitecare.bridging import bridges
 from artifactlens.sitecare.contact import contacts
-from artifactlens.sitecare.evidence import Evidence, Finding
+from artifactlens.sitecare.evidence import (
+    FEWEST_ELSEWHERE,
+    SMALL_CHAIN,
+    Evidence,
+    Finding,
+)
 from artifactlens.sitecare.humming import hums
 from artifactlens.sitecare.losses import losses
 from artifactlens.sitecare.patients import patients
@@ -141,7 +146,7 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
     by_site: dict[tuple[str, int], list[Finding]] = {}
     rest = []
     for finding in found:
-        if finding.cause in ("site", "reference"):
+        if finding.cause in ("site", "reference") and not finding.one_of:
             by_site.setdefault((finding.cause, finding.rows[0]), []).append(finding)
         else:
             rest.append(finding)
@@ -203,7 +208,7 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     verdict = "watch"
     if state == "present" and finding.plain and not brief:
         verdict = {"ground": "check", "placement": "check", "patient": "ask"}.get(
-            finding.cause, "re-prep"
+            finding.cause, "check" if finding.one_of else "re-prep"
         )
     elif finding.cause == "patient":
         if not finding.standing:
@@ -233,12 +238,29 @@ def _confidence(evidence: Evidence, finding: Finding, verdict: str) -> str:
     """High where it is plain, lasts, and the site has neighbours to be compared with."""
     if finding.cause == "placement" or not finding.plain:
         return "low"
-    near = evidence.frame.near
-    few = finding.cause == "site" and any(near[row].sum() < 2 for row in finding.rows)
-    few = few and finding.sign not in ("flat", "lost", "clipped")
-    if few or verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
+    if verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
         return "moderate"
-    return "high"
+    return "moderate" if _few_to_compare(evidence, finding) else "high"
+
+
+def _few_to_compare(evidence: Evidence, finding: Finding) -> bool:
+    """Whether what the sites concerned hang together with is too little to be sure."""
+    if finding.one_of:
+        return True
+    if finding.sign in ("flat", "lost", "clipped"):
+        return False
+    company = evidence.company()
+    if finding.cause == "ground":
+        return bool(company.max() <= SMALL_CHAIN)
+    rows = list(finding.rows)
+    if finding.cause not in ("site", "patient") or finding.sign == "mains":
+        return bool((company[rows] < SMALL_CHAIN).any())
+    places = evidence.frame.positions
+    apart = np.linalg.norm(places[rows, None] - places[None], axis=2)
+    with np.errstate(invalid="ignore"):
+        beside = evidence.frame.near[rows] & (apart <= NEIGHBOUR_REACH_M)
+    few = (beside.sum(axis=1) < FEWEST_NEIGHBOURS) | (company[rows] < SMALL_CHAIN)
+    return bool(few.any() if finding.cause == "site" else few.all())
 
 
 def _order(finding: Finding, entry: Advice) -> tuple[int, int, float]:
@@ -255,26 +277,47 @@ def site_verdicts(
 ) -> tuple[list[str], list[str]]:
     """What is said of each site, and why, in the order of the frame."""
     frame = evidence.frame
-    verdicts, reasons = ["leave"] * len(frame.sites), [""] * len(frame.sites)
-    seen = np.asarray(evidence.log.signs.ok.any(axis=0))
-    alone = frame.neighbours.sum(axis=1) == 0
-    for row in range(len(frame.sites)):
-        if not seen[row]:
-            verdicts[row], reasons[row] = "cannot tell", "no signal at any time"
-        elif alone[row] and frame.roles[row] != "reference":
-            verdicts[row] = "cannot tell"
-            reasons[row] = "no neighbour in this recording to compare it with"
+    reasons = _why_untold(evidence)
+    verdicts = ["cannot tell" if reason else "leave" for reason in reasons]
     place = {name: row for row, name in enumerate(frame.sites)}
     for entry in sorted(advice, key=lambda item: -item.number):
         if entry.cause in ("ground", "patient", "placement"):
             continue
+        said = {"re-prep": "re-prep", "check": "cannot tell"}.get(entry.verdict, "watch")
         for name in entry.sites:
             row = place[name]
-            verdicts[row] = "re-prep" if entry.verdict == "re-prep" else "watch"
-            reasons[row] = entry.reason
+            if said == "cannot tell" and verdicts[row] in ("re-prep", "watch"):
+                continue  # nothing tells which of several it is, but this one has its own
+            verdicts[row], reasons[row] = said, entry.reason
     for entry in advice:
         if entry.cause == "placement":
             for name in entry.sites:
                 if verdicts[place[name]] in ("leave", "cannot tell"):
                     verdicts[place[name]], reasons[place[name]] = "watch", entry.reason
     return verdicts, reasons
+
+
+def _why_untold(evidence: Evidence) -> list[str]:
+    """Why nothing can be told of a site as long as nothing is found there; "" where it can."""
+    frame = evidence.frame
+    seen = np.asarray(evidence.log.signs.ok.any(axis=0))
+    alone = (frame.neighbours.sum(axis=1) == 0) & ~evidence.references()
+    company = evidence.company()
+    # Short chains are held against long ones, where there are any.
+    elsewhere = (company >= SMALL_CHAIN) & ~evidence.references()
+    helped = elsewhere.sum() >= FEWEST_ELSEWHERE
+    reasons = [""] * len(frame.sites)
+    for row in range(len(frame.sites)):
+        if not seen[row]:
+            reasons[row] = "no signal at any time"
+        elif alone[row]:
+            reasons[row] = "no neighbour in this recording to compare it with"
+        elif company[row] == 2:
+            members = np.flatnonzero(frame.chain == frame.chain[row])
+            (other,) = (frame.sites[member] for member in members if member != row)
+            reasons[row] = f"only the derivation with {other}, which cannot tell the two apart"
+        elif company[row] < SMALL_CHAIN and not helped:
+            reasons[row] = (
+                f"only {company[row]} electrodes to compare with each other, too few to tell"
+            )
+    return reasons
