@@ -158,3 +158,34 @@ def demo(invoke, tmp_path_factory):
     return SimpleNamespace(
         home=home, path=home / "workshop.edf", folder=folder, body=body, printed=done.stdout
     )
+
+
+@pytest.fixture(scope="module")
+def lsl(tmp_path_factory):
+    """The client, kept to this machine and out of the sight of other LSL programs."""
+    from artifactlens.live import lsl_link
+    from artifactlens.live import replay as replay_module
+
+    pylsl = pytest.importorskip("pylsl", reason="the LSL client is not installed")
+    session = f"artifactlens-test-{os.getpid()}"
+    config = tmp_path_factory.mktemp("lsl") / "lsl_api.cfg"
+    config.write_text(
+        "[ports]\nIPv6 = disable\n[multicast]\nResolveScope = machine\n"
+        f"[lab]\nKnownPeers = {{127.0.0.1}}\nSessionID = {session}\n[log]\nlevel = -3\n"
+        # Comparing clocks takes the library 0.6 s otherwise.
+        "[tuning]\nTimeProbeCount = 4\nTimeProbeInterval = 0.01\n"
+        "TimeProbeMaxRTT = 0.05\nTimeUpdateMinProbes = 2\n"
+    )
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("LSLAPICFG", str(config))
+        patch.setattr(lsl_link, "_SETTLE_SECONDS", 0.1)
+        patch.setattr(replay_module, "_LINGER_SECONDS", 0.4)
+        outlet = pylsl.StreamOutlet(
+            pylsl.StreamInfo("reachable", "probe", 1, 1, "float32", "r")
+        )
+        if outlet.get_info().session_id() != session:
+            pytest.skip("LSL was set up in this process before, for another network")
+        if not pylsl.resolve_byprop("name", "reachable", 1, 3.0):
+            pytest.skip("no LSL stream can be found over the loopback of this machine")
+        del outlet
+        yield pylsl

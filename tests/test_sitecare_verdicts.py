@@ -356,7 +356,10 @@ def test_of_a_site_without_neighbours_nothing_can_be_told():
         "cannot tell",
         "no neighbour in this recording to compare it with",
     )
-    assert said["C3"] == ("leave", "")
+    assert said["C3"] == (
+        "cannot tell",
+        "only 3 electrodes to compare with each other, too few to tell",
+    )
 
 
 def test_with_fewer_than_two_neighbours_a_site_is_judged_with_less_confidence():

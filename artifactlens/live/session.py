@@ -10,64 +10,75 @@ from numpy.typing import NDArray
 
 from artifactlens import __version__
 from artifactlens.assessable import assess
-from artifactlens.epochs import EpochGrid, batches, epoch_grid, median_of_known
-from artifactlens.errors import StreamError
+from artifactlens.epochs import EpochGrid, batches
+from artifactlens.errors import OptionError, SamplingRateError, StreamError
 from artifactlens.features import (
     FeatureTable,
     mains_is_carried,
     measure,
-    usual_values,
 )
 from artifactlens.features.spatial import eye_leads
 from artifactlens.flagging import judge, pop_moments
 from artifactlens.frames import build_frame
 from artifactlens.impedances import impedances_of
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.live.windows import RawWindow, Rolling
+from artifactlens.live.outcome import site_table, stream_facts
+from artifactlens.live.usual import leaning_usual
+from artifactlens.live.windows import Rolling, Seconds
 from artifactlens.recording import from_array
 from artifactlens.result import (
     Assessment,
-    RecordingFacts,
     Result,
     Setup,
-    SiteEvidence,
-    finite_or_none,
 )
+from artifactlens.sitecare.answers import answer_findings
+from artifactlens.sitecare.biocal import Calibration
 from artifactlens.sitecare.evidence import Evidence
 from artifactlens.sitecare.setup import SETUP_SECONDS, setup_check
-from artifactlens.sitecare.shares import site_evidence
 from artifactlens.sitecare.signs import STRETCH_SECONDS, SignKeeper, signs_of
-from artifactlens.sitecare.verdicts import advise, site_verdicts
+from artifactlens.sitecare.verdicts import advise
 from artifactlens.survey import PLAUSIBLE_UV, Conditions, survey
 
 if TYPE_CHECKING:
-    from artifactlens.advice import Advice
     from artifactlens.curves import Model
     from artifactlens.features import Measures
     from artifactlens.live.stream_grid import Stretch
     from artifactlens.live.stream_header import StreamFacts
     from artifactlens.recording import Recording
-    from artifactlens.sitecare.evidence import Finding
 
 Array = NDArray[np.float32]
 
-FAULTS = ("flat", "missing", "clipped")
-
+SURVEY_SECONDS = 60
 RAW_SECONDS = 64.0
 """Samples kept for the survey and for the answers to a biological calibration."""
 
 FIRST_SURVEY_SECONDS = 5
-PRIOR_EPOCHS = 10.0
-"""A site's usual value leans on that of the whole head as if on so many seconds."""
+SHORTEST_PAUSE, LONGEST_PAUSE = 10, 20
+"""Seconds between two surveys: few at first, and twice as many after each."""
+
+LINE_CERTAIN_DB = 6.0
+"""Mains that stands out so far shows the frequency of the place, which does not change."""
 
 STEADY_EPOCHS = 2
 """Epochs behind one that its median over five seconds looks at: so many are scored again."""
 
 CONTEXT_EPOCHS = 2
 
+SLOWEST_HZ = 25.0
+"""Of fewer samples a second some features have nothing left to be measured on."""
+
+LEAST_MINUTES, MOST_MINUTES = 0.5, 24 * 60
+
 
 class Session:
     """Measures and judges a stream as it comes; remembers the last minutes.
+
+    Nothing is judged before five seconds have come; they are kept and measured then. No
+    result depends on how the samples are cut into pieces.
+
+    The survey is made anew now and then, and after every second as long as no channel has
+    shown a signal. One that sees no signal does not replace one that did: a head box
+    unplugged for a minute does not undo what is known.
 
     Parameters
     ----------
@@ -84,6 +95,10 @@ class Session:
     ------
     SitesError
         If the stream has fewer than two EEG channels.
+    SamplingRateError
+        If it has fewer than 25 samples a second.
+    OptionError
+        If ``minutes`` is less than half a minute or more than a day.
     """
 
     def __init__(
@@ -95,156 +110,204 @@ class Session:
         line_frequency: float | None = None,
         impedances_kohm: dict[str, float] | None = None,
     ) -> None:
+        if not layout.sampling_rate >= SLOWEST_HZ:
+            raise SamplingRateError(
+                f"A watch needs at least {SLOWEST_HZ:g} samples a second; the stream "
+                f"{layout.name!r} has {layout.sampling_rate:g}.",
+                "Name the stream of the scalp EEG itself.",
+            )
+        if not LEAST_MINUTES <= minutes <= MOST_MINUTES:
+            raise OptionError(
+                f"A watch looks back over {LEAST_MINUTES:g} to {MOST_MINUTES:g} minutes; "
+                f"given were {minutes:g}.",
+                "Give 10, for instance.",
+            )
         self.layout, self.model = layout, model
         self._line = line_frequency
-        self._ohms = impedances_kohm or {}
+        self._place_hz: float | None = None
+        self._look_back = 60.0 * minutes
+        self._seconds = Seconds(len(layout.labels), layout.sampling_rate, RAW_SECONDS)
         self._lay_out()
-        self._raw = RawWindow(len(layout.labels), layout.sampling_rate, RAW_SECONDS)
-        self._samples = int(np.floor(layout.sampling_rate + 1e-9))
-        self._rows = Rolling(int(60 * minutes))
+        self.tell_impedances(impedances_kohm or {})
         self._conditions: Conditions | None = None
-        self._usual: Array | None = None
-        self._usual_of = 0
-        self._epochs = 0
-        self._in_segment = 0
-        self._segment = -1
-        self._segment_onset = 0.0
-        self._origin: float | None = None
-        self._setup: Setup | None = None
-        self._setup_done = False
-        self._surveyed = 0
+        self._epochs = 0  # measured so far
+        self._measured = 0  # of the segment at hand
+        self._unheard = 0  # seconds of segments that ended before the first survey
+        self._next_survey = 0
+        self._pause = SHORTEST_PAUSE
+
+    @property
+    def segment(self) -> int:
+        """Number of the uninterrupted stretch at hand; -1 before the first sample."""
+        return self._seconds.segment
 
     @property
     def seconds(self) -> float:
-        """End of the last whole epoch, seconds from the first sample of the stream."""
+        """End of the last epoch that was judged, seconds from the first sample; or 0."""
         return float(self._rows.column("onset")[-1]) + 1.0 if len(self._rows) else 0.0
 
     @property
     def now(self) -> float:
         """Time of the next sample, seconds from the first one of the stream."""
-        return self._segment_onset + self._raw.end / self.layout.sampling_rate
+        return self._seconds.now
 
-    def recent_sites(self) -> tuple[Array, float]:
-        """Site potentials of the last minute (n_sites, n_times), and when they begin."""
-        raw = self._raw
-        data = raw.piece(raw.first, raw.end)[self.frame.channels]
-        start = self._segment_onset + raw.first / self.layout.sampling_rate
-        return self.frame.matrix() @ data, start
+    def tell_impedances(self, kohm: dict[str, float]) -> None:
+        """Impedances, kilo-ohm by site or channel label, in place of those so far."""
+        self._ohms = kohm
+        self._impedances = impedances_of(self.frame, kohm)
+
+    def come_back(self, seconds_away: float) -> None:
+        """The source was away for so long, by the clock of this computer."""
+        self._seconds.come_back(seconds_away)
 
     def add(self, stretch: Stretch) -> int:
-        """Take in samples; returns how many epochs they completed."""
-        rate = self.layout.sampling_rate
-        if self._origin is None:
-            self._origin = stretch.time
-        if stretch.segment != self._segment:
-            self._segment = stretch.segment
-            self._segment_onset = max(stretch.time - self._origin, self.seconds)
-            self._in_segment = 0
-            self._raw.restart()
+        """Take in samples; returns how many epochs they completed.
+
+        Every whole second is measured and judged, however many come at once.
+        """
+        seconds = self._seconds
+        if stretch.segment != seconds.segment:
+            self.settle()  # while the window still holds what led here
+            if self._conditions is None:
+                self._unheard += seconds.whole
+            seconds.begin_segment(stretch)
+            self._measured = 0
         done = 0
         # A long piece is cut, so that the window holds every epoch when its turn comes.
-        for low in range(0, stretch.uv.shape[1], self._samples):
-            self._raw.add(stretch.uv[:, low : low + self._samples])
-            while self._start_of(self._in_segment) + self._samples <= self._raw.end:
-                done += self._finish_epoch(
-                    self._segment_onset + self._in_segment_time(rate)
-                )
-                self._in_segment += 1
+        for low in range(0, stretch.uv.shape[1], seconds.n_samples):
+            seconds.add(stretch.uv[:, low : low + seconds.n_samples])
+            done += self._measure_whole_seconds()
         return done
 
-    def _in_segment_time(self, rate: float) -> float:
-        return self._start_of(self._in_segment) / rate
-
-    def _start_of(self, epoch: int) -> int:
-        return int(np.rint(epoch * self.layout.sampling_rate))
-
-    def _finish_epoch(self, onset: float) -> int:
-        """Measure and score the epoch that has just ended; the ones before it once more."""
-        self._epochs += 1
+    def _measure_whole_seconds(self) -> int:
+        whole = self._seconds.whole
         if self._conditions is None:
-            if self._epochs < FIRST_SURVEY_SECONDS:
+            if not whole or self._unheard + whole < FIRST_SURVEY_SECONDS:
                 return 0
-            self._survey()
-        number = self._in_segment
-        first = max(number - CONTEXT_EPOCHS, 0)
-        piece = self._recording(
-            self._start_of(first), self._start_of(number) + self._samples
+            self._survey(whole)
+        done = whole - self._measured
+        while self._measured < whole:
+            self.settle()
+            self._measure_next()
+        return done
+
+    def _measure_next(self) -> None:
+        """Measure and score the next epoch; the ones before it once more."""
+        conditions, seconds, number = self._known(), self._seconds, self._measured
+        around = range(max(number - CONTEXT_EPOCHS, 0), number + 1)
+        starts = np.array([seconds.start_of(k) for k in around])
+        onset = np.array([seconds.time_of(starts[-1])])
+        piece = self._recording(int(starts[0]), seconds.end_of(number))
+        # Laid by hand: where a second is no whole number of samples, a grid that begins with
+        # the first of the three would have the others a sample away from their places.
+        grid = EpochGrid(
+            start=starts - starts[0],
+            onset=(starts - starts[0]) / seconds.rate,
+            segment=np.zeros(len(starts), dtype=np.int64),
+            n_samples=seconds.n_samples,
         )
-        if piece is None or self._conditions is None:
-            return 0
-        grid = epoch_grid(piece)
-        levels = self._conditions.levels_uv
-        batch = next(batches(piece, self.frame, grid, len(grid), levels))
-        measures = measure(batch, self.frame, self._leads, self._conditions)
-        newest = signs_of(batch, self.frame, self._conditions, newest=1)
-        if (
-            len(grid) > 1
-            and len(self._rows)
-            and self._rows.column("segment")[-1] == self._segment
-        ):
-            self._rows.rewrite(-1, _row(measures, -2))
-        self._rows.append(
+        batch = next(batches(piece, self.frame, grid, len(grid), conditions.levels_uv))
+        measures = measure(batch, self.frame, self._leads, conditions)
+        newest = signs_of(batch, self.frame, conditions, newest=1)
+        rows = self._rows
+        if len(grid) > 1 and len(rows) and rows.column("segment")[-1] == seconds.segment:
+            rows.rewrite(-1, _row(measures, -2))
+        rows.append(
             {
                 **_row(measures, -1),
-                "onset": np.array(onset),
-                "segment": np.array(self._segment, dtype=np.int64),
+                "onset": onset[0],
+                "segment": np.array(seconds.segment, dtype=np.int64),
                 "probability": np.full(
                     (len(KIND_NAMES), len(self.frame.sites)), np.nan, dtype=np.float32
                 ),
             }
         )
-        self._keeper.add(np.array([onset]), *newest)
-        self._keeper.forget(float(self._rows.column("onset")[0]))
+        # By time, not by number: what was before a long break is old.
+        kept = rows.column("onset") >= onset[0] + 0.5 - self._look_back
+        rows.drop(int(kept.argmax()))
+        self._keeper.add(onset, *newest)
+        self._keeper.forget(float(rows.column("onset")[0]))
+        self._measured += 1
+        self._epochs += 1
         self._score()
-        return 1
 
-    def _recording(self, start: int, stop: int) -> Recording | None:
-        data = self._raw.piece(start, stop)
-        if data.shape[1] < stop - start:
-            return None
+    def _recording(self, start: int, stop: int) -> Recording:
         return from_array(
-            data, self.layout.sampling_rate, self.layout.labels, types=self.layout.types
+            self._seconds.raw.piece(start, stop),
+            self.layout.sampling_rate,
+            self.layout.labels,
+            types=self.layout.types,
         )
 
     def settle(self) -> None:
-        """What may wait until a result is out: survey and usual values, now and then."""
-        if self._conditions is None or not len(self._rows):
+        """What may wait until a result is out: survey and usual values, now and then.
+
+        If it is not called it is made up for before the next epoch.
+        """
+        if self._conditions is None or not self._measured:
             return
-        if self._epochs >= min(2 * self._surveyed, self._surveyed + 60):
-            self._survey()
-        if len(self._rows) >= min(1.1 * self._usual_of, self._usual_of + 30):
+        if self._epochs >= self._next_survey:
+            self._survey(self._measured)
+        next_usual = min(1.1 * self._usual_at, self._usual_at + 30)
+        if len(self._rows) and self._epochs >= next_usual:
             self._learn_usual()
 
-    def _survey(self) -> None:
-        """Look at the last minute, as at stretches of a recording."""
-        recent = self._recording(self._raw.first, self._raw.end)
-        if recent is None or recent.n_samples < self.layout.sampling_rate:
-            return
-        self._surveyed = self._epochs
-        self._conditions = survey(recent, self.frame, self._line)
-        averaged = self._conditions.average_reference
-        if averaged and self.frame.montage == "referential" and not len(self._rows):
+    def _survey(self, epochs: int) -> None:
+        """Look at the last minute up to the end of so many epochs, as at a recording."""
+        stop = self._seconds.end_of(epochs - 1)
+        start = stop - round(SURVEY_SECONDS * self.layout.sampling_rate)
+        recent = self._recording(max(start, self._seconds.raw.first), stop)
+        found = survey(recent, self.frame, self._line)
+        if found.line_found_db >= LINE_CERTAIN_DB:
+            self._place_hz = found.line_frequency
+        elif self._place_hz is not None:
+            found = dataclasses.replace(found, line_frequency=self._place_hz)
+        first = self._conditions is None or not _sees(self._conditions)
+        averaged = found.average_reference and self.frame.montage == "referential"
+        if _sees(found) and first and averaged:
             self._lay_out(measured_average=True)
+        if _sees(found) or self._conditions is None:
+            self._conditions = found
+        self._next_survey = self._epochs + 1
+        if _sees(self._conditions):
+            self._next_survey = self._epochs + self._pause
+            self._pause = min(2 * self._pause, LONGEST_PAUSE)
 
     def _lay_out(self, *, measured_average: bool = False) -> None:
-        """Find the sites of the layout, and what depends on them."""
+        """Find the sites of the layout, and begin with nothing known of them."""
         self.frame = build_frame(
             self.layout.labels, self.layout.types, None, measured_average=measured_average
         )
         self._leads = eye_leads(self.frame)
+        self._rows = Rolling(int(np.ceil(self._look_back)))
         self._keeper = SignKeeper(None, len(self.frame.sites))
-        self._impedances = impedances_of(self.frame, self._ohms)
+        self._usual: Array | None = None
+        self._usual_at = 0
+        self._setup: Setup | None = None
+        self._setup_done = False
+        if measured_average:
+            self.tell_impedances(self._ohms)
 
     def _learn_usual(self) -> Array:
-        """Usual values of the minutes so far, leaning on the head's while they are few."""
-        own = usual_values(self._rows.column("values").transpose(1, 0, 2))
-        n = len(self._rows)
         sites = np.array([role != "reference" for role in self.frame.roles])
-        head = median_of_known(own[:, sites].T)[:, None]
-        lean = np.float32(PRIOR_EPOCHS / (n + PRIOR_EPOCHS))
-        leaning = (1 - lean) * own + lean * np.where(np.isfinite(head), head, own)
-        self._usual, self._usual_of = leaning.astype(np.float32), n
+        values = self._rows.column("values").transpose(1, 0, 2)
+        self._usual, self._usual_at = leaning_usual(values, sites), self._epochs
         return self._usual
+
+    def recent_sites(self) -> tuple[Array, float]:
+        """Site potentials of the last minute (n_sites, n_times), and when they begin.
+
+        NaN where a site was lost; the others are solved from the channels that were there.
+        """
+        raw = self._seconds.raw
+        data = raw.piece(raw.first, raw.end)[self.frame.channels]
+        patterns, which = np.unique(np.isfinite(data), axis=1, return_inverse=True)
+        sites = np.full((len(self.frame.sites), data.shape[1]), np.nan, dtype=np.float32)
+        for number, there in enumerate(patterns.T):
+            at = which.ravel() == number
+            known = np.where(there[:, None], data[:, at], np.float32(0))
+            sites[:, at] = self.frame.matrix(there) @ known
+        return sites, self._seconds.time_of(raw.first)
 
     def _table(self, epochs: int | None = None) -> FeatureTable:
         """The last epochs, or all, with the usual values of all minutes."""
@@ -262,17 +325,17 @@ class Session:
     def _score(self) -> None:
         """Score the last epochs again: features over five seconds look at what follows."""
         count = min(len(self._rows), 3 * STEADY_EPOCHS + 1)
-        judged = judge(
-            self.model, self._table(count), self.frame, self._assessable(self._known())
-        )
+        assessable = self._assessable(self._known())
+        judged = judge(self.model, self._table(count), self.frame, assessable)
         for place in range(-min(count, STEADY_EPOCHS + 1), 0):
             self._rows.rewrite(place, {"probability": judged.probability[:, place]})
 
     def _known(self) -> Conditions:
         if self._conditions is None:
             raise StreamError(
-                "Judging needs a first survey of the stream, and none was made.",
-                "Wait until the session has taken in some seconds.",
+                f"Judging needs {FIRST_SURVEY_SECONDS} seconds of the stream; there are "
+                f"{self._unheard + self._seconds.whole} whole ones.",
+                "Wait until the session has taken them in.",
             )
         return self._conditions
 
@@ -300,15 +363,16 @@ class Session:
 
     def evidence(self) -> Evidence:
         """What the search for electrode faults looks at: the last minutes."""
-        rows, model = self._rows, self.model
-        conditions = self._known()
+        rows, model, conditions = self._rows, self.model, self._known()
+        if not len(rows):
+            raise StreamError("No second was judged yet.", "Take in another one.")
         probability = rows.column("probability").transpose(1, 0, 2)
         onset = rows.column("onset")
         grid = EpochGrid(
             start=np.zeros(len(onset), dtype=np.int64),
             onset=onset,
             segment=rows.column("segment"),
-            n_samples=self._samples,
+            n_samples=self._seconds.n_samples,
         )
         return Evidence.of(
             self.frame,
@@ -320,87 +384,51 @@ class Session:
             conditions.line_frequency if mains_is_carried(conditions) else None,
         )
 
-    def result(
-        self, extra: tuple[Finding, ...] = (), responses: tuple[str, ...] = ()
-    ) -> Result:
+    def result(self, calibration: Calibration | None = None) -> Result:
         """Sites, advice and setup of the last minutes, without flags.
 
         Parameters
         ----------
-        extra : tuple of Finding
-            What other tests have found, such as a biological calibration.
-        responses : tuple of str
-            What that calibration showed.
+        calibration : Calibration, optional
+            The answers of the patient, if they were asked for.
+
+        Raises
+        ------
+        StreamError
+            If no epoch was judged yet.
         """
         evidence = self.evidence()
         conditions = self._known()
+        answers = calibration or Calibration()
+        extra = answer_findings(answers, self.frame, evidence.log)
         advice = advise(evidence, extra)
         if not self._setup_done:
             self._setup = setup_check(evidence)
-            self._setup_done = self.seconds >= SETUP_SECONDS + STRETCH_SECONDS
-        setup = self._setup
+            # What the start was like is known for good, or is about to be forgotten.
+            span = self.seconds - float(evidence.log.onset[0])
+            enough = min(SETUP_SECONDS + STRETCH_SECONDS, self._look_back)
+            self._setup_done = span >= enough - 0.5
+        setup, assessable = self._setup, self._assessable(conditions)
         return Result(
             tool_version=__version__,
             model_name=self.model.name,
             model_sha256=self.model.sha256,
             parameters={"mark": "sure", "line_frequency": f"{self._line or 'auto'}"},
-            recording=self._facts(conditions),
-            assessable=self._assessable(conditions),
+            recording=stream_facts(self.layout, self.frame, conditions, self.seconds),
+            assessable=assessable,
             touched={},
             flags=(),
-            sites=self._sites(evidence, advice),
+            sites=site_table(
+                evidence, advice, self.model, self._table(), assessable, self._impedances
+            ),
             advice=advice,
-            setup=setup and dataclasses.replace(setup, responses=responses),
+            setup=setup and dataclasses.replace(setup, responses=answers.sentences),
         )
 
-    def _sites(
-        self, evidence: Evidence, advice: tuple[Advice, ...]
-    ) -> tuple[SiteEvidence, ...]:
-        verdicts, reasons = site_verdicts(evidence, advice)
-        signs = evidence.log.signs
-        rows = site_evidence(
-            self.model,
-            np.ascontiguousarray(evidence.probability),
-            self._table(),
-            self.frame,
-            self._assessable(self._known()),
-            (),
-            {name: getattr(signs, name).mean(axis=0) for name in FAULTS},
-            "sure",
-        )
-        return tuple(
-            dataclasses.replace(
-                row,
-                verdict=verdict,
-                why=why,
-                impedance_kohm=finite_or_none(kohm),
-                pops_per_minute=None,  # counted from flags, which a watch does not make
-            )
-            for row, verdict, why, kohm in zip(
-                rows, verdicts, reasons, self._impedances, strict=True
-            )
-        )
 
-    def _facts(self, conditions: Conditions) -> RecordingFacts:
-        return RecordingFacts(
-            name=self.layout.name,
-            format="LSL stream",
-            duration=round(self.seconds, 3),
-            sampling_rate=self.layout.sampling_rate,
-            montage=self.frame.montage,
-            high_pass=conditions.high_pass,
-            low_pass=None
-            if conditions.low_pass_source == "sampling rate"
-            else conditions.low_pass,
-            notch=conditions.notch,
-            line_frequency=conditions.line_frequency
-            if mains_is_carried(conditions)
-            else None,
-            gaps=(),
-            set_aside=(*self.layout.set_aside, *self.frame.set_aside),
-            annotation_onsets=(),
-            notes=self.frame.notes,
-        )
+def _sees(conditions: Conditions) -> bool:
+    """Whether the survey found a signal on any channel, and for most of a stretch."""
+    return conditions.amplitude_uv > 0
 
 
 def _row(measures: Measures, place: int) -> dict[str, NDArray[Any]]:

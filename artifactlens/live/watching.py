@@ -17,15 +17,12 @@ from artifactlens.live.inlet import Assembler, Changed, Gone, Inlet, Samples
 from artifactlens.live.session import Session
 from artifactlens.live.state import NOTHING_YET, LiveState, Prompt
 from artifactlens.page.words import clock
-from artifactlens.sitecare.answers import answer_findings
-from artifactlens.sitecare.biocal import Calibration, respond, steps
+from artifactlens.sitecare.biocal import respond, steps
 from artifactlens.sitecare.biocal_words import protocol_tasks
 
 if TYPE_CHECKING:
-    from artifactlens.live.inlet import StreamFacts
-    from artifactlens.live.stream_grid import Stretch
-    from artifactlens.sitecare.biocal import Task
-    from artifactlens.sitecare.evidence import Finding
+    from artifactlens.live.inlet import Piece, StreamFacts
+    from artifactlens.sitecare.biocal import Calibration
 
 PULL_SECONDS = 0.2
 """The state is renewed at least so often, samples or not."""
@@ -36,11 +33,19 @@ NOTES_KEPT = 5
 ANSWER_SECONDS = 2.0
 """After the last request the patient is given so long before the answers are looked at."""
 
+MOST_FAILURES, FAILURES_SECONDS = 3, 60.0
+"""After so many failures within so much stream time the watch gives up."""
+
 
 class Watch:
     """Watches one stream; a context manager.
 
     Nothing of the stream is written anywhere, and what is held in memory does not grow.
+
+    A source that goes is waited for. If it comes back with a layout that cannot be watched,
+    a note says why, nothing is shown of the sites, and the next one is waited for. If
+    judging fails for a reason that nobody thought of, a note says so and the watch begins
+    anew with what comes next; if it fails again and again, :meth:`run` ends with the error.
 
     Parameters
     ----------
@@ -51,12 +56,22 @@ class Watch:
     minutes : float
         How far the advice looks back.
     calibration : bool
-        Lead the patient through the short protocol and judge the answers.
+        Lead the patient through the short protocol and judge the answers; once more if
+        samples are missing meanwhile, or if the source comes back with other channels.
     line_frequency : float or None
         50 or 60 if known.
     impedances : dict of str to float, optional
         Kilo-ohm by site; they go before those that the stream offers.
+
+    Attributes
+    ----------
+    failure : Exception or None
+        What :meth:`run` ended with, for whoever had it run in a thread. The state stands
+        still then, with a note.
     """
+
+    _facts: StreamFacts
+    _grid: Assembler
 
     def __init__(
         self,
@@ -68,6 +83,7 @@ class Watch:
         line_frequency: float | None = None,
         impedances: dict[str, float] | None = None,
     ) -> None:
+        self.failure: Exception | None = None
         self._inlet = Inlet(stream, wait_seconds=wait_seconds)
         self._minutes = minutes
         self._line_frequency = line_frequency
@@ -77,21 +93,24 @@ class Watch:
         self._lock = threading.Lock()
         self._notes: deque[str] = deque(maxlen=NOTES_KEPT)
         self._delays: deque[float] = deque(maxlen=DELAYS_KEPT)
+        self._failures: deque[float] = deque(maxlen=MOST_FAILURES)
+        self._judged_seconds = 0.0  # of all sessions
         self._outages = 0
-        self._filled = 0
         self._lost = False
-        self._ask = calibration
-        self._asked_at: float | None = None
-        self._answers: tuple[Finding, ...] = ()
-        self._sentences: tuple[str, ...] = ()
+        self._heard = 0.0  # when samples came last, by time.monotonic
+        self._wanted = calibration
+        self._filled_before = 0
+        self._now = 0.0
+        # None where the layout cannot be watched.
+        self._session: Session | None = None
 
     def __enter__(self) -> Self:
         """Find the stream.
 
         Raises
         ------
-        StreamError, SitesError
-            If there is none that can be watched.
+        StreamError, SitesError, SamplingRateError, OptionError
+            If there is none, or it cannot be watched so.
         """
         # Imported on first use otherwise, which would make the first result late.
         for module in ("scipy.fft", "scipy.sparse.csgraph"):
@@ -99,9 +118,10 @@ class Watch:
         self._inlet.__enter__()
         try:
             self._begin(self._inlet.facts)
-        except ArtifactlensError:
+        except BaseException:
             self._inlet.__exit__(None, None, None)
             raise
+        self._heard = time.monotonic()
         self._show()
         return self
 
@@ -115,52 +135,94 @@ class Watch:
             return self._state
 
     def run(self, stop: threading.Event) -> None:
-        """Take in what comes until ``stop`` is set."""
-        while not stop.is_set():
-            self.step()
+        """Take in what comes until ``stop`` is set.
+
+        Raises
+        ------
+        Exception
+            If the stream cannot be read any more, or judging fails again and again; it is
+            kept in ``failure``, too.
+        """
+        try:
+            while not stop.is_set():
+                self.step()
+        except Exception as error:
+            self.failure = error
+            self._note(
+                f"The watch has stopped at {clock(self._now)} by a failure of its own "
+                f"({type(error).__name__}); start it again."
+            )
+            self._publish(replace(self.state(), prompt=None, notes=tuple(self._notes)))
+            raise
 
     def step(self) -> None:
         """Take in what came, judge whole seconds, renew the state."""
-        done = 0
         pieces = self._inlet.pull(PULL_SECONDS)
         came = time.perf_counter()
-        for piece in pieces:
-            if isinstance(piece, Samples):
-                self._lost = False
-                for stretch in self._grid.add(piece):
-                    done += self._take(stretch)
-            elif isinstance(piece, Gone):
-                self._lost = True
-                self._outages += 1
-                self._note(f"The source was lost at {clock(self._now)}.")
-            elif isinstance(piece, Changed):
-                self._come_back(piece.facts)
-        self._show(judged=bool(done))
-        if done:
-            self._delays.append(time.perf_counter() - came)
-            with self._lock:
-                self._state = replace(
-                    self._state, delay=self._delays[-1], slowest=max(self._delays)
-                )
-            self._session.settle()
+        try:
+            done = sum(self._take(piece) for piece in pieces)
+            self._show(judged=bool(done))
+            if done:
+                self._judged_seconds += done
+                self._delays.append(time.perf_counter() - came)
+                delay, slowest = self._delays[-1], max(self._delays)
+                self._publish(replace(self.state(), delay=delay, slowest=slowest))
+            if done and self._session is not None:
+                self._session.settle()
+        except Exception as error:
+            self._begin_again(error)
+
+    def _take(self, piece: Piece) -> int:
+        """Take in one piece; returns how many seconds were judged."""
+        if isinstance(piece, Gone):
+            self._lost = True
+            self._outages += 1
+            self._note(f"The source was lost at {clock(self._now)}.")
+        elif isinstance(piece, Changed):
+            self._come_back(piece.facts)
+        elif isinstance(piece, Samples):
+            return self._take_samples(piece)
+        return 0
+
+    def _take_samples(self, samples: Samples) -> int:
+        self._lost = False
+        self._heard = time.monotonic()
+        session = self._session
+        if session is None:
+            return 0
+        done = sum(session.add(stretch) for stretch in self._grid.add(samples))
+        self._now = session.now
+        return done
 
     def _begin(self, facts: StreamFacts) -> None:
-        self._facts = facts
-        offered = dict(zip(facts.labels, facts.impedances_kohm, strict=True))
-        known = {label: float(k) for label, k in offered.items() if np.isfinite(k)}
-        self._grid = Assembler(facts.sampling_rate, len(facts.labels))
-        self._session = Session(
+        """Watch a layout that nothing is known of; changes nothing if it cannot be."""
+        session = Session(
             facts,
             self._model,
             minutes=self._minutes,
             line_frequency=self._line_frequency,
-            impedances_kohm={**known, **self._impedances},
+            impedances_kohm=self._known_impedances(facts),
         )
+        grid = Assembler(facts.sampling_rate, len(facts.labels))
+        if self._session is not None:
+            self._filled_before += self._grid.filled
+        self._facts, self._session, self._grid = facts, session, grid
         self._now = 0.0
+        self._ask = self._wanted
+        self._answers: Calibration | None = None
+        self._asked_at: tuple[int, float] | None = None
+
+    def _known_impedances(self, facts: StreamFacts) -> dict[str, float]:
+        offered = zip(facts.labels, facts.impedances_kohm, strict=True)
+        known = {label: float(kohm) for label, kohm in offered if np.isfinite(kohm)}
+        return {**known, **self._impedances}
 
     def _come_back(self, facts: StreamFacts) -> None:
         self._lost = False
-        if facts.same_layout(self._facts):
+        session = self._session
+        if session is not None and facts.same_layout(self._facts):
+            session.tell_impedances(self._known_impedances(facts))
+            session.come_back(time.monotonic() - self._heard)
             self._note(f"The source came back at {clock(self._now)}.")
             return
         before, after = len(self._facts.labels), len(facts.labels)
@@ -169,58 +231,83 @@ class Watch:
             if after != before
             else "with other channels or another sampling rate"
         )
-        self._filled += self._grid.filled
+        at = clock(self._now)
         try:
             self._begin(facts)
         except ArtifactlensError as error:
+            self._forget(facts)
             self._note(f"The source came back {what}: {error.problem} {error.remedy}")
             return
-        self._note(f"The source came back {what}; the watch began anew.")
-        self._answers, self._sentences, self._asked_at = (), (), None
+        self._note(f"The source came back at {at} {what}; the watch began anew.")
 
-    def _take(self, stretch: Stretch) -> int:
-        done = self._session.add(stretch)
-        self._now = self._session.now
-        return done
+    def _forget(self, facts: StreamFacts) -> None:
+        """What was known of the layout before says nothing of this one."""
+        if self._session is not None:
+            self._filled_before += self._grid.filled
+        self._facts, self._session = facts, None
+
+    def _begin_again(self, error: Exception) -> None:
+        """Go on after a failure, if it is not one of many."""
+        seconds = self._judged_seconds
+        self._failures.append(seconds)
+        recent = sum(seconds - at < FAILURES_SECONDS for at in self._failures)
+        if recent >= MOST_FAILURES:
+            raise error
+        self._note(
+            f"At {clock(self._now)} judging failed ({type(error).__name__}); "
+            "the watch began anew."
+        )
+        ask = self._ask
+        self._begin(self._facts)
+        self._ask = ask  # what was answered, or could not be judged, is not asked for again
+        self._show()
 
     def _note(self, sentence: str) -> None:
         self._notes.append(sentence)
 
-    def _show(self, *, judged: bool = False) -> None:
-        session = self._session
-        prompt = self._prompt()
-        before = self.state()
-        result = before.result
-        if judged:
-            result = session.result(self._answers, self._sentences)
-        elif not session.seconds:
-            result = None
-        phase = "lost" if self._lost else "watching" if result else "gathering"
-        fresh = LiveState(
-            phase=phase,
-            stream=self._facts.name,
-            seconds=self._now,
-            result=result,
-            marked_now=session.marked_now(),
-            filled=self._filled + self._grid.filled,
-            outages=self._outages,
-            delay=before.delay,
-            slowest=before.slowest,
-            prompt=prompt,
-            notes=tuple(self._notes),
-        )
+    def _publish(self, state: LiveState) -> None:
         with self._lock:
-            self._state = fresh
+            self._state = state
 
-    def _prompt(self) -> Prompt | None:
+    def _show(self, *, judged: bool = False) -> None:
+        session, before = self._session, self.state()
+        prompt, result, marked = None, None, {}
+        if session is not None:
+            prompt = self._prompt(session)
+            if judged:
+                result = session.result(self._answers)
+            elif session.seconds:
+                result = before.result
+            marked = {} if self._lost else session.marked_now()
+        phase = "lost" if self._lost else "watching" if result else "gathering"
+        filled = 0 if session is None else self._grid.filled
+        self._publish(
+            LiveState(
+                phase=phase,
+                stream=self._facts.name,
+                seconds=self._now,
+                result=result,
+                marked_now=marked,
+                filled=self._filled_before + filled,
+                outages=self._outages,
+                delay=before.delay,
+                slowest=before.slowest,
+                prompt=prompt,
+                notes=tuple(self._notes),
+            )
+        )
+
+    def _prompt(self, session: Session) -> Prompt | None:
         """Where the patient is in the protocol; judges the answers when it is through."""
-        if not self._ask or self._lost:
+        if not self._ask or self._lost or not session.seconds:
             return None
+        if self._asked_at is not None and self._asked_at[0] != session.segment:
+            self._note("Samples were missing: the calibration begins once more.")
+            self._asked_at = None
         if self._asked_at is None:
-            if not self._session.seconds:
-                return None
-            self._asked_at = self._now
-        since = self._now - self._asked_at
+            self._asked_at = session.segment, self._now
+        begun = self._asked_at[1]
+        since = self._now - begun
         lines = steps()
         for number, line in enumerate(lines, start=1):
             if since < line.seconds:
@@ -228,15 +315,12 @@ class Watch:
             since -= line.seconds
         if since >= ANSWER_SECONDS:
             self._ask = False
-            self._judge_answers(protocol_tasks(self._asked_at))
+            sites_uv, start = session.recent_sites()
+            self._answers = respond(
+                sites_uv,
+                self._facts.sampling_rate,
+                session.frame,
+                protocol_tasks(begun),
+                start=start,
+            )
         return None
-
-    def _judge_answers(self, tasks: tuple[Task, ...]) -> None:
-        sites_uv, start = self._session.recent_sites()
-        answers: Calibration = respond(
-            sites_uv, self._facts.sampling_rate, self._session.frame, tasks, start=start
-        )
-        self._answers = answer_findings(
-            answers, self._session.frame, self._session.evidence().log
-        )
-        self._sentences = answers.sentences

@@ -5,10 +5,13 @@ Both are of fixed size: a watch of hours takes no more memory than one of minute
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
+
+if TYPE_CHECKING:
+    from artifactlens.live.stream_grid import Stretch
 
 
 class RawWindow:
@@ -50,6 +53,85 @@ class RawWindow:
         return self._data[:, low : max(high, low)]
 
 
+class Seconds:
+    """The last samples of a stream and where they lie in time, by whole seconds.
+
+    Times are seconds from the first sample of the stream, and never step back. Where the
+    clock of the source does, the break is taken to have been of no length.
+
+    Parameters
+    ----------
+    n_channels : int
+    sampling_rate : float, hertz
+    keep : float
+        How many seconds of samples are kept at least.
+
+    Attributes
+    ----------
+    raw : RawWindow
+        Samples of the segment at hand.
+    segment : int
+        Its number; -1 before the first sample.
+    whole : int
+        Whole seconds of it so far.
+    n_samples : int
+        Samples that fit into a second.
+    """
+
+    def __init__(self, n_channels: int, sampling_rate: float, keep: float) -> None:
+        self.rate = sampling_rate
+        self.n_samples = int(np.floor(sampling_rate + 1e-9))
+        self.raw = RawWindow(n_channels, sampling_rate, keep)
+        self.segment = -1
+        self.whole = 0
+        self._onset = 0.0
+        self._origin: float | None = None  # of all times, by the clock of the source
+        self._away: float | None = None
+
+    @property
+    def now(self) -> float:
+        """Time of the next sample."""
+        return self.time_of(self.raw.end)
+
+    def time_of(self, sample: int) -> float:
+        """Time of a sample of the segment."""
+        return self._onset + sample / self.rate
+
+    def start_of(self, second: int) -> int:
+        """First sample of a second of the segment."""
+        return int(np.rint(second * self.rate))
+
+    def end_of(self, second: int) -> int:
+        """The sample behind its last one."""
+        return self.start_of(second) + self.n_samples
+
+    def come_back(self, away: float) -> None:
+        """The source was away for so many seconds, by the clock of this computer.
+
+        If a new segment is next, the break before it is of that length: the clock of the
+        source may be another one than before.
+        """
+        self._away = away
+
+    def begin_segment(self, stretch: Stretch) -> None:
+        """Forget the samples so far: those of the stretch do not follow on them."""
+        onset = self.now
+        if self._away is not None:
+            onset += self._away
+        elif self._origin is not None:
+            onset = max(onset, stretch.time - self._origin)
+        self._origin = stretch.time - onset
+        self._onset, self.segment, self.whole = onset, stretch.segment, 0
+        self.raw.restart()
+
+    def add(self, uv: NDArray[np.float32]) -> None:
+        """Take in the next samples of the segment, (n_channels, n)."""
+        self._away = None
+        self.raw.add(uv)
+        while self.end_of(self.whole) <= self.raw.end:
+            self.whole += 1
+
+
 class Rolling:
     """Columns of the last epochs, one row an epoch; old rows go as new ones come."""
 
@@ -71,7 +153,7 @@ class Rolling:
         if self._end == 2 * self._keep:
             for column in self._columns.values():
                 column[: self._keep] = column[self._keep :]
-            self._first, self._end = 0, self._keep
+            self._first, self._end = max(self._first - self._keep, 0), self._keep
         self._end += 1
         self._first = max(self._first, self._end - self._keep)
         self.rewrite(-1, row)

@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
+from artifactlens.sitecare.evidence import FEWEST_ELSEWHERE, SMALL_CHAIN, Evidence, Finding
 
 Array = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 MOST_PREDICTORS = 6
 RIDGE = 1e-3
@@ -40,6 +43,9 @@ DRIFT_UV = 25.0
 DRIFT_PLAIN_DB, DRIFT_PLAIN_UV = 18.0, 35.0
 """How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
 
+BARRED_SHARE = 0.2
+"""A site that is strange in this part of the time must not predict others."""
+
 MANY_DRIFT = 4
 """So many sites that wander in one stretch have something in common."""
 
@@ -47,7 +53,11 @@ SMALL_CHAIN_SHARE = 0.58
 """Share of a short chain's power at one of its sites: two thirds if it alone is noisy."""
 
 
-def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp]) -> Array:
+def prediction_errors(
+    covariance: NDArray[np.floating],
+    chain: NDArray[np.intp],
+    barred: NDArray[np.bool_] | None = None,
+) -> Array:
     """Weights (n_sites, n_sites) that leave of each site what the sites like it do not show.
 
     Least squares of each site on the sites of its chain that correlate best with it, at most
@@ -61,12 +71,14 @@ def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp])
     covariance : array, shape (n_stretches, n_sites, n_sites), uV^2, NaN where unknown
     chain : array, shape (n_sites,)
         Connected component of each site.
+    barred : array, shape (n_sites,), bool, optional
+        Sites that must not predict others, because something is wrong with them.
 
     Returns
     -------
     array, shape (n_sites, n_sites)
-        A row holds 1 for its own site and the negative weights of the others; NaN with fewer
-        than three sites.
+        A row holds 1 for its own site and the negative weights of the others; NaN where too
+        few others are left.
     """
     matrix = np.asarray(covariance, dtype=np.float64)
     n = matrix.shape[1]
@@ -81,14 +93,20 @@ def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp])
     typical = np.where(known, scaled, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1)
     spread = np.sqrt(np.maximum(np.diag(typical), 1e-30))
     alike = np.abs(typical / np.outer(spread, spread))
-    alike[~together] = -1.0
+    may = together if barred is None else together & ~barred
+    alike[~may] = -1.0
     np.fill_diagonal(alike, -2.0)
     chosen = np.argsort(-alike, axis=1, kind="stable")[:, :most]
-    serves = np.take_along_axis(together, chosen, axis=1)
+    serves = np.take_along_axis(alike, chosen, axis=1) >= 0
     both = serves[:, :, None] & serves[:, None, :]
     gram = np.where(both, typical[chosen[:, :, None], chosen[:, None, :]], 0.0)
     ridge = RIDGE * np.einsum("nkk->n", gram) / most + 1e-12
     gram += np.where(serves, ridge[:, None], 1.0)[:, :, None] * np.eye(most)
+    # Means over differing stretches, of sites that were lost for a while, may contradict
+    # each other: no combination of sites has less power than the ridge.
+    power, axes = np.linalg.eigh(gram)
+    power = np.maximum(power, ridge[:, None])
+    gram = (axes * power[:, None]) @ axes.transpose(0, 2, 1)
     moment = np.where(serves, np.take_along_axis(typical, chosen, axis=1), 0.0)
     ones = serves.astype(np.float64)
     free, along = np.linalg.solve(gram, np.stack([moment, ones], axis=2)).transpose(2, 0, 1)
@@ -98,6 +116,7 @@ def prediction_errors(covariance: NDArray[np.floating], chain: NDArray[np.intp])
     weights = np.zeros((n, n))
     np.put_along_axis(weights, chosen, -solved, axis=1)
     weights[np.arange(n), np.arange(n)] = 1.0
+    weights[~serves.any(axis=1)] = np.nan
     return weights
 
 
@@ -143,33 +162,63 @@ def contacts(evidence: Evidence) -> list[Finding]:
     return [*found, *_noisy_reference(evidence, sites)]
 
 
-def _apart(
-    evidence: Evidence, sites: NDArray[np.intp], covariance: NDArray[np.floating]
-) -> list[Finding]:
+class _Look(NamedTuple):
+    """What the sites show that no other does, all (n_stretches, n_sites).
+
+    ``above`` and ``wander``, of ``size`` and ``level`` microvolt, are decibel over the median
+    site's.
+    """
+
+    known: Bools
+    noisy: Bools
+    drifting: Bools
+    size: Array
+    above: Array
+    level: Array
+    wander: Array
+
+
+def _look(
+    evidence: Evidence,
+    sites: NDArray[np.intp],
+    covariance: NDArray[np.floating],
+    barred: Bools | None = None,
+) -> _Look:
     log = evidence.log
-    weights = prediction_errors(covariance, evidence.frame.chain[sites])
+    weights = prediction_errors(covariance, evidence.frame.chain[sites], barred)
     share, size = unpredicted(covariance, weights)
     level = _level_size(evidence, sites, weights)
     muscle = log.mean(evidence.marked("muscle"))[:, sites] >= MUSCLE_SHARE
     fast = log.mean(evidence.fast_uv())[:, sites]
     eyes = log.mean(evidence.marked("eye") & evidence.front())[:, sites] >= EYE_SHARE
     there = np.isfinite(share)
-    with np.errstate(invalid="ignore"):
-        known = there & (~muscle | (size >= NOISE_OVER_FAST * fast))
     above, wander = _above_usual(size), _above_usual(level)
     with np.errstate(invalid="ignore"):
+        known = there & (~muscle | (size >= NOISE_OVER_FAST * fast))
         noisy = known & (share >= np.where(eyes, APART_WITH_EYES, APART_SHARE))
         noisy &= (above >= APART_DB) & (size >= APART_UV)
         drifting = there & (wander >= np.where(eyes, DRIFT_WITH_EYES_DB, DRIFT_DB))
         drifting &= level >= DRIFT_UV
-    held = noisy | drifting
+    return _Look(known, noisy, drifting, size, above, level, wander)
+
+
+def _apart(
+    evidence: Evidence, sites: NDArray[np.intp], covariance: NDArray[np.floating]
+) -> list[Finding]:
+    look = _look(evidence, sites, covariance)
+    barred = (look.noisy | look.drifting).mean(axis=0) >= BARRED_SHARE
+    if barred.any():
+        # A faulty site lends its fault to those that it predicts: once more without it.
+        look = _look(evidence, sites, covariance, barred)
+    known, drifting = look.known, look.drifting
+    held = look.noisy | drifting
     many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
-    found = _sweat(sites, drifting, many, level)
+    found = _sweat(sites, drifting, many, look.level)
     held &= ~(many & drifting)
     for index in np.flatnonzero(held.any(axis=0)):
         when = held[:, index]
         drifts = bool(drifting[:, index].sum() > 0.5 * when.sum())
-        ratio, amplitude = (wander, level) if drifts else (above, size)
+        ratio, amplitude = (look.wander, look.level) if drifts else (look.above, look.size)
         decibel = float(np.median(ratio[when, index]))
         uv = float(np.median(amplitude[when, index]))
         least = (DRIFT_PLAIN_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
@@ -241,7 +290,7 @@ def _small_chains(
     """
     log, frame = evidence.log, evidence.frame
     variance = np.einsum("bss->bs", log.covariance.astype(np.float64))
-    if len(others) < 4:
+    if len(others) < FEWEST_ELSEWHERE:
         return []
     usual = median_of_known(variance[:, others].T).astype(np.float64)
     eyes = log.mean(evidence.marked("eye"))
@@ -289,6 +338,9 @@ def _level_size(evidence: Evidence, sites: NDArray[np.intp], weights: Array) -> 
     """How far each site's half-second levels move on their own, microvolt rms, per stretch."""
     log = evidence.log
     own = log.signs.level[:, :, sites].astype(np.float64) @ weights.T
+    # The level of a site that is lost stands at 0: what it predicts is unknown then.
+    lost = (~log.signs.ok[:, sites]).astype(np.float64) @ (weights != 0).T > 0
+    own = np.where(lost[:, None], np.nan, own)
     mean = log.mean(own.mean(axis=1))
     square = log.mean((own**2).mean(axis=1))
     return np.sqrt(np.maximum(square - mean**2, 0))

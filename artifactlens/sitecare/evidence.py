@@ -25,6 +25,10 @@ SMALL_CHAIN = 5
 FEWEST_ELSEWHERE = 4
 """Sites of longer chains from which on those of a short one are held against them."""
 
+BESIDE_M, FEWEST_BESIDE = 0.09, 2
+"""A site is judged with confidence if so many others stand this near, as nearest neighbours
+of the 10-20 system do."""
+
 COLUMNS = (
     "swing", "step", "step_rise", "step_crest", "step_alone", "step_stays", "fast_power",
     "mains_ratio",

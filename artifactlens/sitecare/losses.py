@@ -66,7 +66,6 @@ def losses(evidence: Evidence) -> list[Finding]:
                     weight=30.0 * part,
                     reason=reason,
                     one_of=one_of,
-                    checks=_CHECKS_OF_SEVERAL if one_of else (),
                 )
             )
     return found
@@ -123,13 +122,9 @@ def _doubt(sign: str, names: list[str]) -> str:
     if len(names) > 2:
         return f" in all derivations of {several}; nothing tells which of them it is"
     either = "a lead, or the two joined" if sign == "flat" else "either of them"
-    return f" in the derivation of {several}, which does not tell one from the other: {either}"
+    return (
+        f" in the derivation of {several}, which does not tell one from the other: {either}"
+    )
 
 
 _WORDS = {"flat": "flat", "lost": "samples missing", "clipped": "clipped"}
-
-_CHECKS_OF_SEVERAL = (
-    "check their leads and the head box inputs",
-    "look for gel or a cable that joins them",
-    "look at them in another montage",
-)

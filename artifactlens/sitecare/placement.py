@@ -62,6 +62,10 @@ several chains leave their means open. The largest in undisturbed recordings at 
 WORSE = 1.5
 """How many times larger either site's own error (power) may be at the other's place."""
 
+FEWEST_PASSES, MOST_PAIRS = 6, 64**3
+"""The search stops after so many exchanges, or when so many pairs have been compared: nets of
+256 electrodes would take minutes if their labels were all wrong."""
+
 QUIET_UV2 = 1e-3
 """Variance of the steps below which a site is without signal."""
 
@@ -176,7 +180,7 @@ def doubtful_places(
     place = np.arange(len(rows))
     bar = PAIR_DB if chain.max() == 0 else ACROSS_DB
     gains: dict[int, float] = {}
-    for _ in range(len(rows) - 1):
+    for _ in range(min(len(rows) - 1, max(FEWEST_PASSES, MOST_PAIRS // len(rows) ** 2))):
         gain = exchange_gain(alike, places[place], chain)
         first, second = np.unravel_index(int(gain.argmax()), gain.shape)
         best = float(gain[first, second])

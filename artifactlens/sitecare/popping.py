@@ -36,7 +36,11 @@ MUSCLE_NEAR_SECONDS = 1
 REFERENCE_STEP_UV, REFERENCE_STAYS = 30.0, 0.5
 REFERENCE_ALONE_DB, REFERENCE_CREST_DB = 11.0, 16.0
 
+STEPS_TOLD_TO = 6
+"""Chains of up to so many electrodes are judged by how a step divides among them."""
+
 SMALL_CHAIN_TIMES, SMALL_CHAIN_UV = 1.5, 20.0
+SMALL_CHAIN_PART = 0.5
 SMALL_CHAIN_RISE_DB, SMALL_CHAIN_CALM_DB = 12.0, 8.0
 
 
@@ -53,6 +57,7 @@ def popping(evidence: Evidence) -> list[Finding]:
     wild_stretch = log.total(wild)
     known = evidence.present()
     seconds = log.signs.ok.sum(axis=0)
+    company = evidence.company()
     found = []
     for row in range(n):
         count = int(per_stretch[:, row].sum())
@@ -74,7 +79,14 @@ def popping(evidence: Evidence) -> list[Finding]:
         else:
             reason = f"{count} {noun} in {span}"
         at_reference = frame.roles[row] == "reference"
-        reason += " in every channel alike" if at_reference else ", unlike its neighbours"
+        if company[row] < SMALL_CHAIN:
+            reason += (
+                ", largest there; so few electrodes cannot tell for sure which one it is"
+            )
+        else:
+            reason += (
+                " in every channel alike" if at_reference else ", unlike its neighbours"
+            )
         found.append(
             Finding(
                 cause="reference" if at_reference else "site",
@@ -148,24 +160,28 @@ def _small_chain_pops(evidence: Evidence) -> NDArray[np.bool_]:
     """Steps in chains too small for neighbours to speak, (n_epochs, n_sites).
 
     A step at one electrode of a chain of three is solved as two thirds there and one third,
-    turned over, at each of the other two. It is a pop if its electrode has the largest part
-    of it, far above its usual, while no other chain steps.
+    turned over, at each of the other two; of a chain of n as n - 1 parts there and one at
+    each other. It is a pop if its electrode has the largest part of it, far above its usual,
+    while no other chain steps.
     """
     chain = evidence.frame.chain
     sizes = np.bincount(chain)
     step = np.nan_to_num(evidence.step, nan=0.0)
     rise = np.nan_to_num(evidence.step_rise, nan=-99.0)
+    stays = np.nan_to_num(evidence.step_stays, nan=-1.0)
     found = np.zeros(step.shape, dtype=bool)
-    for number in np.flatnonzero((sizes < SMALL_CHAIN) & (sizes >= 3)):
+    for number in np.flatnonzero((sizes <= STEPS_TOLD_TO) & (sizes >= 3)):
         rows = np.flatnonzero(chain == number)
         others = rise[:, chain != number]
         calm = others.max(axis=1, initial=-99.0) < SMALL_CHAIN_CALM_DB
         order = np.argsort(-step[:, rows], axis=1)
         first = np.take_along_axis(step[:, rows], order, axis=1)
-        lead = (first[:, 0] >= SMALL_CHAIN_TIMES * first[:, 1]) & calm
+        times = max(SMALL_CHAIN_TIMES, SMALL_CHAIN_PART * (len(rows) - 1))
+        lead = (first[:, 0] >= times * first[:, 1]) & calm
         at = rows[order[:, 0]]
         epochs = np.arange(len(step))
         lead &= (rise[epochs, at] >= SMALL_CHAIN_RISE_DB) & (first[:, 0] >= SMALL_CHAIN_UV)
+        lead &= stays[epochs, at] >= LEAST_STAYS
         found[epochs[lead], at[lead]] = True
     return found
 

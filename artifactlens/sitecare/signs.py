@@ -163,17 +163,15 @@ class SignKeeper:
     """
 
     def __init__(self, n_epochs: int | None, n_sites: int) -> None:
-        size = max(n_sites, 1) ** 2 * 4
+        size = max(n_sites, 1) ** 2 * 8  # a sum and a count, four bytes each
         most = max(60, int(LONGEST_LOG / size))
         seconds = 0.0 if n_epochs is None else n_epochs / most
         self.stretch_seconds = max(STRETCH_SECONDS, float(math.ceil(seconds)))
         self._signs: list[Signs] = []
         self._onset: list[NDArray[np.float64]] = []
         self._fade = FADE_PER_EPOCH if n_epochs is None else 1.0
-        self._places = PlaceMoments(
-            np.zeros((n_sites, n_sites)), np.zeros((n_sites, n_sites))
-        )
-        self._sums: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
+        self._places = PlaceMoments.none(n_sites)
+        self._sums: dict[int, tuple[Array, Array]] = {}
 
     def add(
         self,
@@ -188,12 +186,14 @@ class SignKeeper:
         self._places = before + places
         number = self._number(onset)
         first = np.flatnonzero(np.diff(number, prepend=-1))
-        there = signs.ok.astype(np.float64)
-        sums = np.add.reduceat(covariance.astype(np.float64), first, axis=0)
+        there = signs.ok.astype(np.float32)
+        sums = np.add.reduceat(covariance, first, axis=0)
         both = np.add.reduceat(there[:, :, None] * there[:, None], first, axis=0)
         for index, total, count in zip(number[first], sums, both, strict=True):
-            so_far = self._sums.get(int(index), (0.0, 0.0))
-            self._sums[int(index)] = (so_far[0] + total, so_far[1] + count)
+            if int(index) in self._sums:
+                earlier, fewer = self._sums[int(index)]
+                total, count = earlier + total, fewer + count
+            self._sums[int(index)] = (total, count)
         self._signs.append(signs)
         self._onset.append(onset)
 
@@ -236,7 +236,7 @@ class SignKeeper:
             stretch=group[stretch.ravel()].astype(np.intp),
             begin=onset[first[begins]],
             end=onset[last] + 1.0,
-            covariance=covariance.astype(np.float32),
+            covariance=covariance,
             places=self._places,
         )
 

@@ -11,6 +11,8 @@ from artifactlens.sitecare import courses
 from artifactlens.sitecare.bridging import bridges
 from artifactlens.sitecare.contact import contacts
 from artifactlens.sitecare.evidence import (
+    BESIDE_M,
+    FEWEST_BESIDE,
     FEWEST_ELSEWHERE,
     SMALL_CHAIN,
     Evidence,
@@ -80,6 +82,20 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
 }
 """In the order of the trade: cables, electrode, placement, bridge, impedance, ground and
 reference, montage (common practice)."""
+
+CHECKS_OF_SEVERAL: dict[str, tuple[str, ...]] = {
+    "mains": (
+        "check the leads and where they run, and the ground",
+        "move or unplug devices and power cords near the patient",
+        "look at the sites in another montage",
+    ),
+    "any": (
+        "check their leads and the head box inputs",
+        "look for gel or a cable that joins them",
+        "look at the sites in another montage",
+    ),
+}
+"""By sign, where one of several sites is at fault and nothing tells which."""
 
 
 def findings_of(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> list[Finding]:
@@ -215,6 +231,9 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
             return None
         verdict = "ask"
     names = tuple(evidence.frame.sites[row] for row in finding.rows)
+    reason = finding.reason
+    if finding.sign == "muscle" and _few_to_compare(evidence, finding):
+        reason += "; too few sites to tell it from the noise of a poor contact"
     return Advice(
         number=0,
         verdict=verdict,
@@ -225,12 +244,14 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
         state=state,
         stretches=courses.stretches(evidence, finding),
         share=round(share, 4),
-        reason=finding.reason,
+        reason=reason,
         checks=finding.checks or _usual_checks(finding),
     )
 
 
 def _usual_checks(finding: Finding) -> tuple[str, ...]:
+    if finding.one_of:
+        return CHECKS_OF_SEVERAL.get(finding.sign, CHECKS_OF_SEVERAL["any"])
     return CHECKS.get((finding.cause, finding.sign)) or CHECKS[(finding.cause, "any")]
 
 
@@ -247,19 +268,20 @@ def _few_to_compare(evidence: Evidence, finding: Finding) -> bool:
     """Whether what the sites concerned hang together with is too little to be sure."""
     if finding.one_of:
         return True
+    frame, rows = evidence.frame, list(finding.rows)
     if finding.sign in ("flat", "lost", "clipped"):
-        return False
+        # At the end of a chain one derivation is all that tells of the site.
+        own = (frame.incidence[:, rows] != 0).sum(axis=0)
+        return frame.montage == "bipolar" and bool((own == 1).any())
     company = evidence.company()
     if finding.cause == "ground":
         return bool(company.max() <= SMALL_CHAIN)
-    rows = list(finding.rows)
     if finding.cause not in ("site", "patient") or finding.sign == "mains":
         return bool((company[rows] < SMALL_CHAIN).any())
-    places = evidence.frame.positions
-    apart = np.linalg.norm(places[rows, None] - places[None], axis=2)
+    apart = np.linalg.norm(frame.positions[rows, None] - frame.positions[None], axis=2)
     with np.errstate(invalid="ignore"):
-        beside = evidence.frame.near[rows] & (apart <= NEIGHBOUR_REACH_M)
-    few = (beside.sum(axis=1) < FEWEST_NEIGHBOURS) | (company[rows] < SMALL_CHAIN)
+        beside = frame.near[rows] & (apart <= BESIDE_M) & ~evidence.references()
+    few = (beside.sum(axis=1) < FEWEST_BESIDE) | (company[rows] < SMALL_CHAIN)
     return bool(few.any() if finding.cause == "site" else few.all())
 
 
@@ -315,7 +337,9 @@ def _why_untold(evidence: Evidence) -> list[str]:
         elif company[row] == 2:
             members = np.flatnonzero(frame.chain == frame.chain[row])
             (other,) = (frame.sites[member] for member in members if member != row)
-            reasons[row] = f"only the derivation with {other}, which cannot tell the two apart"
+            reasons[row] = (
+                f"only the derivation with {other}, which cannot tell the two apart"
+            )
         elif company[row] < SMALL_CHAIN and not helped:
             reasons[row] = (
                 f"only {company[row]} electrodes to compare with each other, too few to tell"
