@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-import tracemalloc
+import pickle
 
 import numpy as np
 import pytest
@@ -14,6 +14,7 @@ from artifactlens.curves import load_model
 from artifactlens.errors import OptionError, SamplingRateError, SitesError, StreamError
 from artifactlens.features.catalogue import MEASURED
 from artifactlens.kinds import KIND_NAMES
+from artifactlens.live import session as session_module
 from artifactlens.live.session import Session
 from artifactlens.live.stream_grid import Stretch
 from artifactlens.live.stream_header import StreamFacts
@@ -183,9 +184,9 @@ def test_young_usual_values_lean_on_the_head_by_a_sites_own_seconds():
 @pytest.fixture(scope="module")
 def broken_stream(eeg):
     """Two segments at 8 sites with pops and missing samples, and what they lead to."""
-    uv = few(with_pops(eeg(32, 100.0), (6.3, 13.6, 20.2, 26.7), rate=100.0))
+    uv = few(with_pops(eeg(18, 100.0), (6.3, 9.6, 11.2, 15.7), rate=100.0))
     uv[2, 850:900] = np.nan
-    parts = uv[:, :1740], uv[:, 1740:]
+    parts = uv[:, :940], uv[:, 940:]
 
     def play(sizes):
         session = session_of(FEW, 100.0, line_frequency=None)
@@ -215,26 +216,26 @@ def by_seconds(broken_stream):
 
 
 @given(st.lists(st.integers(1, 500), max_size=12))
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=5, deadline=None)
 def test_no_result_depends_on_how_samples_are_cut(broken_stream, by_seconds, sizes):
     done, session = broken_stream(sizes)
-    assert done == by_seconds[0] == 17 + 14
+    assert done == by_seconds[0] == 9 + 8
     for mine, other in zip(outcome(session), outcome(by_seconds[1]), strict=True):
         np.testing.assert_array_equal(mine, other)
     assert session.result() == by_seconds[1].result()
 
 
-def test_samples_one_by_one_and_a_stall_of_half_a_minute_come_to_the_same(
+def test_samples_one_by_one_and_a_stall_of_many_seconds_come_to_the_same(
     broken_stream, by_seconds
 ):
-    for sizes in ([1] * 1740, [3200]):
+    for sizes in ([1] * 940, [3200]):
         done, session = broken_stream(sizes)
-        assert done == 31  # every second is judged, however many come at once
+        assert done == 17  # every second is judged, however many come at once
         assert session.result() == by_seconds[1].result()
 
 
 def test_whether_settling_is_left_to_the_next_second_makes_no_difference(eeg):
-    uv = few(eeg(30, 100.0))
+    uv = few(eeg(14, 100.0))
     kept = []
     for settle in (True, False):
         session = session_of(FEW, 100.0)
@@ -250,10 +251,10 @@ def test_whether_settling_is_left_to_the_next_second_makes_no_difference(eeg):
 
 @pytest.mark.parametrize("rate", [250.0, 160.0, 128.0, 333.3])
 def test_a_stream_is_judged_as_the_whole_recording_is(quiet_eeg, rate):
-    uv = quiet_eeg(48, rate, seed=5, blinks_at=(9.0, 21.0, 37.0))
-    uv = with_pops(uv, (12.4, 25.3, 33.7, 40.1), rate=rate).astype(np.float32)
+    uv = quiet_eeg(32, rate, seed=5, blinks_at=(9.0, 21.0, 27.0))
+    uv = with_pops(uv, (12.4, 15.3, 23.7, 30.1), rate=rate).astype(np.float32)
     session = session_of(rate=rate)
-    assert feed(session, uv, seconds=0.77) == 48
+    assert feed(session, uv, seconds=0.77) == 32
     live = session.evidence()
     recording = from_array(uv, rate, session.layout.labels)
     whole = triage(recording, line_frequency=50.0)
@@ -265,7 +266,7 @@ def test_a_stream_is_judged_as_the_whole_recording_is(quiet_eeg, rate):
         assert (mine == other).mean() >= 0.99, head.kind
         if head.kind in ("eye", "pop"):
             assert other.any(), head.kind
-    away = np.abs(live.probability - offline)[:, -20:]
+    away = np.abs(live.probability - offline)[:, -15:]
     assert np.nanmax(away) < 0.1
     assert np.nanmean(away) < 0.002
     # What is measured is the same but for the last second, which has nothing behind it yet;
@@ -358,7 +359,7 @@ def test_impedances_are_found_by_label_or_site_and_may_be_told_later(eeg):
     feed(session, eeg(8))
 
     def known():
-        sites = {entry.name: entry.impedance_kohm for entry in session.result().sites}
+        sites = {entry.site: entry.impedance_kohm for entry in session.result().sites}
         return {name: kohm for name, kohm in sites.items() if kohm is not None}
 
     assert known() == {"P3": 4.0, "Cz": 12.5, "reference": 7.0}
@@ -369,46 +370,51 @@ def test_impedances_are_found_by_label_or_site_and_may_be_told_later(eeg):
 # ------------------------------------------------------------------------ no signal yet
 
 
-@pytest.mark.parametrize("averaged", [False, True])
-@pytest.mark.parametrize("nothing", [0.0, np.nan])
+@pytest.mark.parametrize(("nothing", "averaged"), [(0.0, True), (np.nan, False)])
 def test_a_stream_that_begins_with_nothing_is_judged_once_a_signal_is_there(
     eeg, nothing, averaged
 ):
-    uv = with_pops(eeg(64) + 2000.0, (38.3, 45.6, 52.2, 58.9))
+    uv = with_pops(eeg(44) + 2000.0, (26.3, 31.6, 37.2, 41.9))
     if averaged:
         uv -= uv.mean(axis=0)
-    uv[:, : int(30 * RATE)] = nothing
+    uv[:, : int(20 * RATE)] = nothing
     session = session_of(line_frequency=None)
-    feed(session, uv[:, : int(30 * RATE)])
+    feed(session, uv[:, : int(20 * RATE)])
     told = session.result()
     sign = "flat" if nothing == 0 else "lost"
     assert [(entry.cause, entry.sign) for entry in told.advice] == [("ground", sign)]
     assert {site.verdict for site in told.sites} == {"cannot tell"}
     assert not any(session.marked_now().values())
-    feed(session, uv[:, int(30 * RATE) :], at=1030.0)
+    feed(session, uv[:, int(20 * RATE) :], at=1020.0)
     result = session.result()
     assert session.frame.montage == ("average" if averaged else "referential")
     assert named(result) == ["P3"]
-    verdicts = {site.name: site.verdict for site in result.sites}
+    verdicts = {site.site: site.verdict for site in result.sites}
     assert verdicts["P3"] == "re-prep"
     assert verdicts["C4"] == "leave"
     assert not any(a.verdict == "no" for a in result.assessable if a.kind in ("eye", "pop"))
 
 
-def test_a_head_box_unplugged_for_a_minute_does_not_undo_what_is_known(eeg):
-    uv = eeg(100)
-    uv += sine(uv.shape[1], RATE, 60.0, 8.0)
-    uv[:, int(20 * RATE) : int(92 * RATE)] = 0.0
-    session = session_of(line_frequency=None)
-    for until, begin in ((20, 0), (90, 20), (100, 90)):
-        feed(session, uv[:, int(begin * RATE) : int(until * RATE)], at=1000.0 + begin)
+def test_a_head_box_unplugged_for_a_while_does_not_undo_what_is_known(eeg, monkeypatch):
+    monkeypatch.setattr(session_module, "SURVEY_SECONDS", 15)
+    rate = 160
+    uv = eeg(56, 160.0)
+    uv += sine(uv.shape[1], rate, 60.0, 8.0)
+    uv[:, 12 * rate : 50 * rate] = 0.0
+    session = session_of(rate=160.0, line_frequency=None)
+    for begin, until in ((0, 12), (12, 50), (50, 56)):
+        feed(session, uv[:, begin * rate : until * rate], at=1000.0 + begin)
         assert round(session.result().recording.line_frequency) == 60, until
-    assert np.isfinite(session.evidence().probability[0, -5:]).all()
+    assert np.isfinite(session.evidence().probability[0, -5:, : len(SITES)]).all()
 
 
-def test_the_line_frequency_of_a_place_stays_when_mains_goes(eeg):
-    uv = eeg(90, 160.0)
-    uv[:, : (20 * 160)] += sine(20 * 160, 160.0, 60.0, 8.0)
+def test_the_line_frequency_of_a_place_stays_when_mains_goes(eeg, monkeypatch):
+    monkeypatch.setattr(session_module, "SURVEY_SECONDS", 15)
+    uv = eeg(56, 160.0)
+    uv[:, : 12 * 160] += sine(12 * 160, 160.0, 60.0, 8.0)
+    uv += sine(
+        uv.shape[1], 160.0, 50.0, 0.15
+    )  # would be the higher one, but no certain one
     session = session_of(rate=160.0, line_frequency=None)
     feed(session, uv)
     assert round(session.result().recording.line_frequency) == 60
@@ -418,20 +424,20 @@ def test_the_line_frequency_of_a_place_stays_when_mains_goes(eeg):
 
 
 def test_after_an_outage_times_are_those_of_the_stream(eeg):
-    uv = with_pops(eeg(60), (31.2, 38.4, 45.3, 52.1))
+    uv = with_pops(eeg(40), (21.2, 26.4, 31.3, 36.1))
     session = session_of()
-    cut = int(20.5 * RATE)
+    cut = int(10.5 * RATE)
     feed(session, uv[:, :cut])
-    feed(session, uv[:, cut:], segment=1, at=1600.0)
+    feed(session, uv[:, cut:], segment=1, at=1300.0)
     evidence = session.evidence()
-    expected = [*np.arange(20.0), *np.arange(600.0, 639.0)]
+    expected = [*np.arange(10.0), *np.arange(300.0, 329.0)]
     np.testing.assert_allclose(evidence.log.onset, expected, atol=1e-9)
-    assert session.seconds == pytest.approx(639.0)
-    assert session.now == pytest.approx(639.5)
+    assert session.seconds == pytest.approx(329.0)
+    assert session.now == pytest.approx(329.5)
     moments = [moment for moment, rows in evidence.pops if row("P3") in rows]
-    shifted = np.array((31.2, 38.4, 45.3, 52.1)) - 20.5 + 600.0
+    shifted = np.array((21.2, 26.4, 31.3, 36.1)) - 10.5 + 300.0
     np.testing.assert_allclose(moments, shifted, atol=0.1)
-    assert entry_of(session.result(), "P3").stretches[0][0] >= 600.0
+    assert entry_of(session.result(), "P3").stretches[0][0] >= 300.0
 
 
 def test_a_clock_that_steps_back_loses_no_time_and_later_breaks_are_measured(eeg):
@@ -457,27 +463,27 @@ def test_a_source_that_was_away_comes_back_by_this_computers_clock(eeg):
 
 
 def test_what_is_older_than_the_minutes_asked_for_is_forgotten(eeg):
-    uv = with_pops(eeg(75), (6.3, 13.6, 20.2, 26.7))
+    uv = with_pops(eeg(62), (6.3, 13.6, 20.2, 26.7))
     session = session_of(minutes=0.5)
     feed(session, uv[:, : int(30 * RATE)])
     assert named(session.result()) == ["P3"]
     feed(session, uv[:, int(30 * RATE) :], at=1030.0)
-    assert session.evidence().log.onset.tolist() == list(np.arange(45.0, 75.0))
+    assert session.evidence().log.onset.tolist() == list(np.arange(32.0, 62.0))
     assert session.result().advice == ()
 
 
 def test_what_was_before_a_long_break_is_forgotten_by_time(eeg):
-    uv = with_pops(eeg(40), (6.3, 13.6, 20.2, 26.7))
+    uv = with_pops(eeg(30), (6.3, 11.6, 15.2, 18.7))
     session = session_of(minutes=1.0)
-    feed(session, uv[:, : int(30 * RATE)])
-    feed(session, uv[:, int(30 * RATE) :], segment=1, at=4600.0)
+    feed(session, uv[:, : int(20 * RATE)])
+    feed(session, uv[:, int(20 * RATE) :], segment=1, at=4600.0)
     np.testing.assert_allclose(session.evidence().log.onset, np.arange(3600.0, 3610.0))
     assert session.result().advice == ()
 
 
 def test_usual_values_follow_when_the_minutes_are_full(eeg):
-    uv = eeg(110)
-    uv[:, int(45 * RATE) :] *= 4
+    uv = eeg(84)
+    uv[:, int(35 * RATE) :] *= 4
     session = session_of(minutes=0.5)
     feed(session, uv)
     rise = np.median(session.evidence().step_rise[:, : len(SITES)])
@@ -485,33 +491,26 @@ def test_usual_values_follow_when_the_minutes_are_full(eeg):
 
 
 def test_memory_does_not_grow_with_the_stream(eeg):
-    uv = few(eeg(75, 64.0))
-    session = session_of(FEW, 64.0, minutes=0.5)
-    feed(session, np.tile(uv, 3)[:, : (140 * 64)])
-    session.result()
-    tracemalloc.start()
-    try:
-        feed(session, np.tile(uv, 2), at=1140.0)
+    uv = few(eeg(75, 32.0))
+    session, sizes = session_of(FEW, 32.0, minutes=0.5), []
+    for times in (2, 4):  # the window of samples is full after 64 s
+        while session.now < 37 * times:
+            piece = uv[:, : 37 * 32]
+            feed(session, piece, at=1000.0 + session.now)
         session.result()
-        first, _ = tracemalloc.get_traced_memory()
-        for part in range(2):
-            feed(session, np.tile(uv, 2), at=1290.0 + 150 * part)
-        session.result()
-        last, _ = tracemalloc.get_traced_memory()
-    finally:
-        tracemalloc.stop()
-    assert last < first + 50_000  # 300 s at 8 sites are 600 kB of samples alone
+        sizes.append(len(pickle.dumps(session)))
+    assert sizes[1] == pytest.approx(sizes[0], rel=0.01)
 
 
 # --------------------------------------------------------------------------- the setup
 
 
 def test_the_setup_is_settled_after_two_minutes(eeg):
-    uv = few(eeg(170, 100.0))
-    for moment in np.arange(136.3, 170, 4.1):
+    uv = few(eeg(150, 100.0))
+    for moment in np.arange(131.3, 150, 3.7):
         uv[FEW.index("P3")] += step(uv.shape[1], 100.0, moment, 200.0, 0.5)
     session, setups = session_of(FEW, 100.0), {}
-    for second in range(170):
+    for second in range(150):
         piece = uv[:, second * 100 : (second + 1) * 100].astype(np.float32)
         if session.add(Stretch(0, second * 100, 60.0 + second, piece)) and second % 10 == 9:
             setups[second + 1] = session.result().setup
@@ -519,12 +518,12 @@ def test_the_setup_is_settled_after_two_minutes(eeg):
     assert setups[60].seconds == 60.0
     assert setups[140].seconds == 120.0
     assert "P3" in setups[140].fit
-    assert setups[170] == setups[140]
+    assert setups[150] == setups[140]
     assert named(session.result()) == ["P3"]
 
 
 def test_a_short_memory_settles_the_setup_before_the_start_is_forgotten(eeg):
-    uv = with_pops(eeg(60), np.arange(36.2, 60, 3.3))
+    uv = with_pops(eeg(46), np.arange(31.2, 46, 3.3))
     session = session_of(minutes=0.5)
     feed(session, uv[:, : int(30 * RATE)])
     at_start = session.result().setup
@@ -538,10 +537,6 @@ def test_a_short_memory_settles_the_setup_before_the_start_is_forgotten(eeg):
 # ------------------------------------------------------------------------------- faults
 
 
-def pops_from(uv, second):
-    return with_pops(uv, np.arange(second + 1.3, 90, 3.7))
-
-
 def flat_from(uv, second):
     uv[row("P3"), int(second * RATE) :] = 17.0
     return uv
@@ -553,65 +548,57 @@ def hum_from(uv, second):
     return uv
 
 
-def noise_from(uv, second):
-    since = slice(int(second * RATE), None)
-    own = np.random.default_rng(3).standard_normal(uv.shape[1]).cumsum()
-    own -= np.convolve(own, np.ones(129) / 129, mode="same")
-    uv[row("P3"), since] += 60 * (own / own.std())[since]
-    return uv
-
-
 @pytest.mark.parametrize(
-    ("fault", "signs"),
+    ("fault", "sign"),
     [
-        (pops_from, {"pops", "loose lead"}),
-        (flat_from, {"flat"}),
-        (hum_from, {"mains"}),
-        (noise_from, {"apart", "drift", "loose lead", "pops"}),
+        (flat_from, "flat"),
+        (hum_from, "mains"),
     ],
 )
-def test_a_fault_that_begins_is_named_within_half_a_minute(eeg, fault, signs):
-    uv = fault(eeg(62), 32.0).astype(np.float32)
+def test_a_fault_that_begins_is_named_within_half_a_minute(eeg, fault, sign):
+    uv = fault(eeg(52), 22.0).astype(np.float32)
     session = session_of(line_frequency=None)
-    feed(session, uv[:, : int(32 * RATE)])
+    feed(session, uv[:, : int(22 * RATE)])
     assert named(session.result()) == []
-    feed(session, uv[:, int(32 * RATE) :], at=1032.0)
+    feed(session, uv[:, int(22 * RATE) :], at=1022.0)
     entry = entry_of(session.result(), "P3")
     assert entry.verdict == "re-prep"
-    assert entry.sign in signs
-    assert entry.stretches[0][0] >= 30.0 - 1e-6  # stretches of ten seconds
+    assert entry.sign == sign
+    assert entry.stretches[0][0] >= 20.0 - 1e-6  # stretches of ten seconds
 
 
 def test_a_fault_that_ends_under_somebodys_hand_is_cured(eeg):
-    uv = hum_from(eeg(110), 20.0)
-    here, after = row("P3"), slice(int(64 * RATE), None)
-    uv[here, after] = eeg(110)[here, after]
-    hands = slice(int(60 * RATE), int(64 * RATE))
-    uv[here, hands] += 800 * np.sin(np.linspace(0, 40, hands.stop - hands.start))
+    uv, here, rate = flat_from(eeg(82), 10.0), row("P3"), int(RATE)
+    uv[here, 44 * rate :] = eeg(82)[here, 44 * rate :]
+    hands = slice(40 * rate, 44 * rate)
+    uv[here, hands] += 800 * np.hanning(4 * rate) * np.sin(np.linspace(0, 40, 4 * rate))
     session = session_of()
-    feed(session, uv[:, : int(58 * RATE)])
+    feed(session, uv[:, : 38 * rate])
     assert named(session.result()) == ["P3"]
-    feed(session, uv[:, int(58 * RATE) :], at=1058.0)
+    feed(session, uv[:, 38 * rate :], at=1038.0)
     entry = entry_of(session.result(), "P3")
-    assert (entry.verdict, entry.state) == ("watch", "cured")
-    assert 50.0 <= entry.stretches[-1][1] <= 80.0
-    (site,) = [site for site in session.result().sites if site.name == "P3"]
+    assert (entry.verdict, entry.sign, entry.state) == ("watch", "flat", "cured")
+    assert 40.0 <= entry.stretches[-1][1] <= 50.0
+    (site,) = [site for site in session.result().sites if site.site == "P3"]
     assert site.verdict == "watch"
 
 
 def test_missing_samples_count_as_missing_and_leave_the_other_sites_judged(eeg):
     uv = eeg(40)
-    uv[row("P3"), int(20 * RATE) : int(30 * RATE) : 7] = np.nan
-    uv[:, int(35.2 * RATE) : int(35.4 * RATE)] = np.nan
+    uv[row("P3"), int(20 * RATE) : int(35 * RATE) : 7] = np.nan
+    uv[:, int(37.2 * RATE) : int(37.4 * RATE)] = np.nan
     session = session_of()
     feed(session, uv)
-    sites = {site.name: site for site in session.result().sites}
-    assert sites["P3"].missing == pytest.approx(11 / 40)
-    assert sites["O1"].missing == pytest.approx(1 / 40)
+    missing = session.evidence().log.signs.missing.mean(axis=0)
+    assert missing[row("P3")] == pytest.approx(16 / 40)
+    assert missing[row("O1")] == pytest.approx(1 / 40)
+    assert [entry.subject for entry in session.result().advice if entry.sign == "lost"] == [
+        "P3"
+    ]
     known = np.isfinite(session.evidence().probability[KIND_NAMES.index("pop")])
-    assert not known[20:30, row("P3")].any()
-    assert known[20:30, row("O1")].all()
-    assert not known[35].any()
+    assert not known[20:35, row("P3")].any()
+    assert known[20:35, row("O1")].all()
+    assert not known[37].any()
 
 
 def test_recent_sites_are_solved_from_the_channels_that_are_there(eeg):
@@ -633,7 +620,7 @@ def test_recent_sites_are_solved_from_the_channels_that_are_there(eeg):
 
 
 def test_answers_of_the_patient_stay_as_the_minutes_go_on(eeg):
-    session, uv = session_of(minutes=1.0), eeg(75)
+    session, uv = session_of(minutes=0.5), eeg(45)
     fault = LeadFault(
         cause="site", sign="no response", sites=("F7",), plain=True, stretches=((6.0, 9.0),),
         reason="F7 does not see the eyes turn", checks=("check the lead",),
@@ -641,7 +628,7 @@ def test_answers_of_the_patient_stay_as_the_minutes_go_on(eeg):
     response = Response("gaze left", 6.0, "one side missing", ("F7",), "0:00:06 nothing.")
     answers = Calibration((response,), (fault,))
     feed(session, uv[:, : int(12 * RATE)])
-    for until in (12, 40, 75):
+    for until in (12, 30, 45):
         feed(
             session,
             uv[:, int(session.now * RATE) : until * int(RATE)],

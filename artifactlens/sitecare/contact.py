@@ -32,6 +32,9 @@ APART_UV, PLAIN_UV = 7.0, 12.0
 REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
 """How far the reference's row exceeds the median site."""
 
+REFERENCE_PLAIN_SITES = 8
+"""Fewer sites may all lie in one region, so that what they share comes from the head."""
+
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
 
@@ -372,7 +375,7 @@ def _noisy_reference(evidence: Evidence, sites: NDArray[np.intp]) -> list[Findin
                 rows=(int(row),),
                 held=held,
                 known=known,
-                plain=decibel >= REFERENCE_PLAIN_DB,
+                plain=decibel >= REFERENCE_PLAIN_DB and len(mates) >= REFERENCE_PLAIN_SITES,
                 weight=decibel * float(held.mean()),
                 reason=(
                     f"{uv:.0f} uV in every channel alike, {10 ** (decibel / 20):.1f} times "

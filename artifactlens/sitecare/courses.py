@@ -73,6 +73,6 @@ def _handled(evidence: Evidence, finding: Finding, stopped: float) -> bool:
     usual = median_of_known(evidence.swing[:, rows])
     with np.errstate(invalid="ignore"):
         touched = (swing[:, rows] > HANDLED_UV) & (swing[:, rows] > HANDLED_RATIO * usual)
-    # Of a site that was lost the loss itself tells nothing of a hand.
-    lost = ~log.signs.ok[near][:, rows] & (finding.sign not in ("flat", "lost"))
+    # A lead that was flat comes back by a hand as well.
+    lost = ~log.signs.ok[near][:, rows]
     return bool(touched.any() or lost.any())

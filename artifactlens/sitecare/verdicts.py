@@ -113,11 +113,19 @@ def findings_of(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> list[Fin
     return _without_echoes([*found, *_misplaced(evidence, found), *extra])
 
 
+_TORN = ("flat", "lost")
+
+
 def _misplaced(evidence: Evidence, found: list[Finding]) -> list[Finding]:
     """Sites that may have been exchanged, those with troubles of their own left out."""
     faulty = {
         row for item in found if item.cause in ("site", "bridge") for row in item.rows
     }
+    if evidence.frame.montage == "bipolar":
+        # Without some of its derivations a chain falls into pieces, each of its own mean.
+        chain = evidence.frame.chain
+        torn = {chain[row] for item in found if item.sign in _TORN for row in item.rows}
+        faulty |= {row for row in range(len(chain)) if chain[row] in torn}
     moments = evidence.log.places
     covariance = moments.covariance()
     covariance[list(faulty)] = np.nan
