@@ -264,10 +264,13 @@ def _usual_checks(finding: Finding) -> tuple[str, ...]:
 
 
 def _confidence(evidence: Evidence, finding: Finding, verdict: str) -> str:
-    """High where it is plain, lasts, and the site has neighbours to be compared with."""
+    """High where it is plain, lasts, and the site has neighbours to be compared with.
+
+    What the patient does is known from doubtful marks of the classifier: never high.
+    """
     if finding.cause == "placement" or not finding.plain:
         return "low"
-    if verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
+    if finding.cause == "patient" or verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
         return "moderate"
     return "moderate" if _few_to_compare(evidence, finding) else "high"
 
