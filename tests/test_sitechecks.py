@@ -684,7 +684,27 @@ def test_the_aims_count_what_they_say(some):
         "mains everywhere": (0, 1, False),
         "bridged pairs named": (1, 3, False),
         "muscle or eye alone": (1, 1, False),
+        "... that was not before they were put in": (1, 1, False),
     }
+
+
+def test_what_was_advised_before_the_patient_did_anything_is_told_apart():
+    blinks = truth("blinks", sites=())
+    blamed = score(blinks, [entry(1, "re-prep", "site", "Fp1")])
+    aims = {
+        aim.name.split(":")[0]: aim.found
+        for aim in table.simulated_aims([Ran(1, "bed", blamed, before=("Fp1",))])
+    }
+    assert aims["muscle or eye alone"] == 1
+    assert aims["... that was not before they were put in"] == 0
+
+
+def test_a_case_brings_the_recording_before_anything_was_put_in(bed):
+    one = case(5, [bed], fault="blinks", strength="plain", montage="referential")
+    n = one.recording.n_samples
+    changed = one.recording.read(0, n) - one.before.read(0, n)
+    assert one.before.labels == one.recording.labels
+    assert np.abs(changed[one.recording.labels.index("EEG Fp1-LE")]).max() > 50
 
 
 @pytest.mark.parametrize(

@@ -5,7 +5,7 @@ from __future__ import annotations
 import base64
 import hashlib
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from functools import cache
 from typing import TYPE_CHECKING, Any
 
@@ -240,7 +240,7 @@ def _versions(result: Result) -> list[tuple[str, str]]:
 
 @cache
 def _template() -> Template:
-    filters = {
+    filters: dict[str, Callable[..., Any]] = {
         "bar": bar_svg,
         "clock": clock,
         "cut": cut,

@@ -35,6 +35,18 @@ REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
 REFERENCE_PLAIN_SITES = 8
 """Fewer sites may all lie in one region, so that what they share comes from the head."""
 
+REFERENCE_BETA_DB, REFERENCE_BETA_PLAIN_DB = 4.5, 6.0
+"""The same of its power at 18-30 Hz, where the mean of all channels is quiet: at most 3 dB in
+the recordings at hand."""
+
+PLAIN_SLOW_DB, BROAD_DB = 16.0, 3.0
+"""Near the eyes, what does not reach into beta by so much must exceed the others by this."""
+
+STEADY_STRETCHES = 3
+"""Nobody is sent to the patient for what a site does for less."""
+
+DRIFT_ANYHOW_UV = 100.0
+
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
 
@@ -214,6 +226,7 @@ def _apart(
         # A faulty site lends its fault to those that it predicts: once more without it.
         look = _look(evidence, sites, covariance, barred)
     known, drifting = look.known, look.drifting
+    broad = ~evidence.front()[sites] | _is_broad(evidence, sites, look.noisy)
     held = look.noisy | drifting
     many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
     found = _sweat(sites, drifting, many, look.level)
@@ -224,7 +237,11 @@ def _apart(
         ratio, amplitude = (look.wander, look.level) if drifts else (look.above, look.size)
         decibel = float(np.median(ratio[when, index]))
         uv = float(np.median(amplitude[when, index]))
-        least = (DRIFT_PLAIN_DB, DRIFT_PLAIN_UV) if drifts else (PLAIN_DB, PLAIN_UV)
+        plain = _is_steady(when) and (
+            (decibel >= DRIFT_PLAIN_DB and uv >= DRIFT_PLAIN_UV) or uv >= DRIFT_ANYHOW_UV
+            if drifts
+            else decibel >= (PLAIN_DB if broad[index] else PLAIN_SLOW_DB) and uv >= PLAIN_UV
+        )
         found.append(
             Finding(
                 cause="site",
@@ -232,7 +249,7 @@ def _apart(
                 rows=(int(sites[index]),),
                 held=when,
                 known=known[:, index] | when,
-                plain=decibel >= least[0] and uv >= least[1],
+                plain=plain,
                 weight=decibel * float(when.mean()),
                 reason=(
                     f"wanders by {uv:.0f} uV on its own"
@@ -243,6 +260,24 @@ def _apart(
             )
         )
     return found
+
+
+def _is_steady(when: Bools) -> bool:
+    """Whether it lasts: most of the time from first to last, and not only for a moment."""
+    first, last = np.flatnonzero(when)[[0, -1]]
+    count = int(when.sum())
+    return count >= min(STEADY_STRETCHES, len(when)) and count >= 0.5 * (last - first + 1)
+
+
+def _is_broad(evidence: Evidence, sites: NDArray[np.intp], noisy: Bools) -> Bools:
+    """Sites whose own activity reaches into beta while they are noisy, (n_sites,).
+
+    Near the eyes, what is slow alone may be what is left of their movements.
+    """
+    beta = evidence.log.mean(evidence.beta_power)[:, sites]
+    excess = beta - median_of_known(beta.T).astype(np.float64)[:, None]
+    when = np.where(noisy, excess, np.nan)
+    return np.nan_to_num(median_of_known(when), nan=-99.0) >= BROAD_DB
 
 
 def _sweat(
@@ -354,6 +389,8 @@ def _noisy_reference(evidence: Evidence, sites: NDArray[np.intp]) -> list[Findin
     log, frame = evidence.log, evidence.frame
     rows = np.flatnonzero(evidence.references())
     variance = np.einsum("bss->bs", log.covariance.astype(np.float64))
+    beta, fast = log.mean(evidence.beta_power), log.mean(evidence.fast_uv())
+    muscle = log.mean(evidence.marked("muscle"))
     found = []
     for row in rows:
         mates = sites[frame.chain[sites] == frame.chain[row]]
@@ -363,9 +400,15 @@ def _noisy_reference(evidence: Evidence, sites: NDArray[np.intp]) -> list[Findin
         with np.errstate(divide="ignore", invalid="ignore"):
             above = 10 * np.log10(variance[:, row] / usual)
         known = np.isfinite(above)
-        held = known & (np.nan_to_num(above, nan=-99) >= REFERENCE_DB)
+        over = beta[:, row] - median_of_known(beta[:, mates].T).astype(np.float64)
+        loud = (muscle[:, row] < MUSCLE_SHARE) | (
+            variance[:, row] > (NOISE_OVER_FAST * fast[:, row]) ** 2
+        )
+        with np.errstate(invalid="ignore"):
+            held = known & ((above >= REFERENCE_DB) | (loud & (over >= REFERENCE_BETA_DB)))
         if not held.any():
             continue
+        beyond = float(median_of_known(over[held]))
         decibel = float(np.median(above[held]))
         uv = float(np.median(np.sqrt(variance[held, row])))
         found.append(
@@ -375,7 +418,8 @@ def _noisy_reference(evidence: Evidence, sites: NDArray[np.intp]) -> list[Findin
                 rows=(int(row),),
                 held=held,
                 known=known,
-                plain=decibel >= REFERENCE_PLAIN_DB and len(mates) >= REFERENCE_PLAIN_SITES,
+                plain=(decibel >= REFERENCE_PLAIN_DB or beyond >= REFERENCE_BETA_PLAIN_DB)
+                and len(mates) >= REFERENCE_PLAIN_SITES,
                 weight=decibel * float(held.mean()),
                 reason=(
                     f"{uv:.0f} uV in every channel alike, {10 ** (decibel / 20):.1f} times "

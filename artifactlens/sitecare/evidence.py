@@ -30,8 +30,8 @@ BESIDE_M, FEWEST_BESIDE = 0.09, 2
 of the 10-20 system do."""
 
 COLUMNS = (
-    "swing", "step", "step_rise", "step_crest", "step_alone", "step_stays", "fast_power",
-    "mains_ratio",
+    "swing", "step", "step_rise", "step_crest", "step_alone", "step_stays", "beta_power",
+    "fast_power", "mains_ratio",
 )  # fmt: skip
 """Features that the search looks at, by their names in the catalogue."""
 
@@ -65,6 +65,8 @@ class Evidence:
         The same against the site's mean step, and against its neighbours' at that instant.
     step_stays : array, shape (n_epochs, n_sites)
         Share of it that is left a tenth of a second later.
+    beta_power : array, shape (n_epochs, n_sites), decibel
+        Mean density at 18-30 Hz, uV^2/Hz.
     fast_power : array, shape (n_epochs, n_sites), decibel
         Mean density at 30-45 Hz, uV^2/Hz.
     mains_ratio : array, shape (n_epochs, n_sites), decibel
@@ -84,6 +86,7 @@ class Evidence:
     step_crest: NDArray[np.float32]
     step_alone: NDArray[np.float32]
     step_stays: NDArray[np.float32]
+    beta_power: NDArray[np.float32]
     fast_power: NDArray[np.float32]
     mains_ratio: NDArray[np.float32]
     line_frequency: float | None

@@ -236,7 +236,7 @@ class SignKeeper:
             stretch=group[stretch.ravel()].astype(np.intp),
             begin=onset[first[begins]],
             end=onset[last] + 1.0,
-            covariance=covariance,
+            covariance=covariance.astype(np.float32),
             places=self._places,
         )
 

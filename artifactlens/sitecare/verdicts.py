@@ -270,7 +270,11 @@ def _confidence(evidence: Evidence, finding: Finding, verdict: str) -> str:
     """
     if finding.cause == "placement" or not finding.plain:
         return "low"
-    if finding.cause == "patient" or verdict == "watch" or finding.held.sum() < LEAST_STRETCHES:
+    if (
+        finding.cause == "patient"
+        or verdict == "watch"
+        or finding.held.sum() < LEAST_STRETCHES
+    ):
         return "moderate"
     return "moderate" if _few_to_compare(evidence, finding) else "high"
 

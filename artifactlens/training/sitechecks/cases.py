@@ -101,11 +101,15 @@ class Truth:
 
 @dataclass(frozen=True, slots=True)
 class Case:
-    """A recording with a fault in it; ``bed`` names the background."""
+    """A recording with a fault in it, and the same ``before`` anything was put in.
+
+    ``bed`` names the background.
+    """
 
     seed: int
     bed: str
     recording: Recording
+    before: Recording
     line_frequency: float
     truth: Truth
 
@@ -169,8 +173,11 @@ def case(
         state=state,
         what=made.what,
     )
-    recording = _as_recording(channels, bed, spelt, bench, montage, f"case-{seed}")
-    return Case(seed, bed.name, recording, bench.line, truth)
+    recording, before = (
+        _as_recording(data, bed, spelt, bench, montage, f"case-{seed}")
+        for data in (channels, bench.channels)
+    )
+    return Case(seed, bed.name, recording, before, bench.line, truth)
 
 
 def _drawn_or(

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 import joblib
 
+from artifactlens.advice import Advice
 from artifactlens.pipeline import triage
 from artifactlens.training.sitechecks.backgrounds import Bed, Source, Untouched
 from artifactlens.training.sitechecks.cases import MIX, PATIENT_MIX, Case, case
@@ -19,11 +20,16 @@ PATIENT_SEEDS = {"development": 1_500_000, "check": 2_500_000}
 
 @dataclass(frozen=True, slots=True)
 class Ran:
-    """One case that was run: how to make it again, its background, and how it went."""
+    """One case that was run: how to make it again, its background, and how it went.
+
+    ``before`` holds the sites that were to be prepared again on the same recording before
+    muscle or eyes were put in; looked for only where the outcome blames somebody.
+    """
 
     seed: int
     bed: str
     outcome: Outcome
+    before: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,7 +85,22 @@ def run_untouched(recordings: Sequence[Untouched], jobs: int) -> list[Left]:
 
 def _run(seed: int, fault: str, sources: Sequence[Source | Bed]) -> Ran:
     one = case(seed, sources, fault=fault)
-    return Ran(seed, one.bed, score_case(one))
+    outcome = score_case(one)
+    blamed: tuple[str, ...] = ()
+    if one.truth.cause == "patient" and outcome.innocent:
+        before = triage(one.before, line_frequency=one.line_frequency)
+        blamed = _prepared(before.advice)
+    return Ran(seed, one.bed, outcome, blamed)
+
+
+def _prepared(advice: Sequence[Advice]) -> tuple[str, ...]:
+    """Sites that are to be prepared again."""
+    return tuple(
+        site
+        for entry in advice
+        if entry.verdict == "re-prep"
+        for site in (entry.sites or (entry.subject,))
+    )
 
 
 def _left(one: Untouched) -> Left:
@@ -90,11 +111,6 @@ def _left(one: Untouched) -> Left:
         corpus=one.corpus,
         montage=one.montage,
         seen=one.seen,
-        re_prep=tuple(
-            site
-            for entry in listed
-            if entry.verdict == "re-prep"
-            for site in (entry.sites or (entry.subject,))
-        ),
+        re_prep=_prepared(listed),
         lines=tuple(f"{entry.number}. {entry.line}" for entry in listed),
     )

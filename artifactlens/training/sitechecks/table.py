@@ -59,7 +59,7 @@ def simulated_aims(ran: Sequence[Ran]) -> list[Aim]:
     reference = [o for o in outcomes if o.truth.cause == "reference" and not o.truth.hidden]
     ground = [o for o in outcomes if o.truth.cause == "ground"]
     bridges = [o for o in outcomes if o.truth.cause == "bridge"]
-    patients = [o for o in outcomes if o.truth.cause == "patient"]
+    patients = [one for one in ran if one.outcome.truth.cause == "patient"]
     return [
         _share("plain site fault: the first site of the list is a true one", sites, 0.95),
         _share("... without dead inputs in the double banana", alive, 0.95),
@@ -86,7 +86,14 @@ def simulated_aims(ran: Sequence[Ran]) -> list[Aim]:
         ),
         Aim(
             "muscle or eye alone: something is to be prepared again",
-            sum(bool(o.innocent) for o in patients),
+            sum(bool(one.outcome.innocent) for one in patients),
+            len(patients),
+            0.0,
+            False,
+        ),
+        Aim(
+            "... that was not before they were put in",
+            sum(bool(set(one.outcome.innocent) - set(one.before)) for one in patients),
             len(patients),
             0.0,
             False,
