@@ -156,6 +156,7 @@ def test_a_loss_is_told_and_the_source_taken_back_with_new_impedances(
         return {s.site: s.impedance_kohm for s in sites if s.impedance_kohm is not None}
 
     with watch:
+        now[0] = 12.0
         take(watch, inlet, pieces_of(eeg(10), 0))
         assert kohm() == {"P3": 40.0, "O1": 5.0}
         before = watch.state().result
@@ -164,7 +165,7 @@ def test_a_loss_is_told_and_the_source_taken_back_with_new_impedances(
         assert lost.marked_now == {}
         assert lost.result is before
         assert lost.notes == ("The source was lost at 0:00:10.",)
-        now[0] = 30.0
+        now[0] = 42.0
         (back,) = take(watch, inlet, [Changed(facts_of(kohm={"P3": 4.0, "O1": 3.0}))])
         assert back.phase == "watching"
         assert back.notes[-1] == "The source came back at 0:00:10."
@@ -371,6 +372,23 @@ def test_a_calibration_begins_again_where_samples_are_missing(scripted, eeg):
         assert states[-1].notes == (
             "Samples were missing: the calibration begins once more.",
         )
+
+
+def test_a_calibration_that_cannot_be_judged_is_not_asked_for_again(
+    scripted, eeg, monkeypatch
+):
+    monkeypatch.setattr(watching, "steps", lambda: steps()[:1])
+    monkeypatch.setattr(watching, "respond", lambda *_, **__: 1 / 0)
+    inlet, watch = scripted(calibration=True)
+    with watch:
+        states = take(watch, inlet, pieces_of(eeg(20), 0))
+    assert [state.prompt is not None for state in states] == [False] * 4 + [True] * 5 + [
+        False
+    ] * 11
+    assert states[-1].notes == (
+        "At 0:00:12 judging failed (ZeroDivisionError); the watch began anew.",
+    )
+    assert states[-1].phase == "watching"
 
 
 def test_a_calibration_is_asked_for_again_when_other_channels_come(scripted, eeg):

@@ -63,7 +63,7 @@ def popping(evidence: Evidence) -> list[Finding]:
         count = int(per_stretch[:, row].sum())
         bad = int(wild_stretch[:, row].sum())
         busy = _busiest(log.onset, wild[:, row], LOOSE_WINDOW_SECONDS)
-        loose = busy >= LOOSE_SECONDS and (count >= 1 or busy >= 2 * LOOSE_SECONDS)
+        loose = busy >= LOOSE_SECONDS and count >= 1
         if not (count >= LEAST_POPS or loose):
             continue
         held = (per_stretch[:, row] > 0) | (loose & (wild_stretch[:, row] > 0))
