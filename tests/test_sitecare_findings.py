@@ -518,12 +518,16 @@ def wild(site, seconds, size_uv=600.0, frame=FRAME):
 
 
 def test_a_site_that_runs_wild_now_and_then_has_a_loose_lead():
-    made = evidence(swing=wild("F3", [5, 6, 7, 30, 31, 32, 50]))
+    swings = wild("F3", [5, 6, 7, 30, 31, 32, 50])
+    pop = ((5.4, (FRAME.sites.index("F3"),)),)
+    made = evidence(swing=swings, pops=pop, step_stays=0.8)
     found = one(popping(made))
     assert named([found], made) == [("site", "loose lead", ("F3",))]
     assert found.reason.startswith("comes and goes")
-    assert "7 s and 0 pops in 60 s" in found.reason
+    assert "7 s and 1 pop in 60 s" in found.reason
     assert found.plain
+    # Large swings without a single step may be muscle.
+    assert popping(evidence(swing=swings)) == []
 
 
 def test_wild_seconds_of_two_sites_or_of_eyes_are_no_loose_lead():

@@ -251,7 +251,7 @@ def test_a_watch_that_fails_again_and_again_stops_and_says_so(scripted, eeg, mon
     with watch:
         take(watch, inlet, pieces[:6])
         monkeypatch.setattr(Session, "result", lambda *_: 1 / 0)
-        inlet.coming = [[piece] for piece in pieces[6:]]
+        inlet.coming = [*([piece] for piece in pieces[6:]), EOFError("went on")]
         with pytest.raises(ZeroDivisionError):
             watch.run(threading.Event())
     assert isinstance(watch.failure, ZeroDivisionError)

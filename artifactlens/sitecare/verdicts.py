@@ -177,9 +177,7 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
     bridged = {row for finding in rest if finding.cause == "bridge" for row in finding.rows}
     kept = []
     for (_, row), group in by_site.items():
-        group.sort(
-            key=lambda item: (not item.plain, -int(item.held.sum()), rank.index(item.sign))
-        )
+        group.sort(key=lambda item: (not item.plain, rank.index(item.sign)))
         main, others = group[0], group[1:]
         if row in bridged and main.sign not in ("pops", "loose lead", "lost", "clipped"):
             continue
