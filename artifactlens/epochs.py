@@ -17,6 +17,9 @@ Bools = NDArray[np.bool_]
 
 BATCH_EPOCHS = 32
 
+SLOWEST_HZ = 25.0
+"""With fewer samples a second no kind and no electrode can be judged."""
+
 FLAT_UV = 0.2
 """Peak-to-peak below which a channel is flat: an amplifier alone makes more noise."""
 

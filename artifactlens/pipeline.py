@@ -13,7 +13,7 @@ import numpy as np
 from artifactlens import __version__
 from artifactlens.assessable import assess
 from artifactlens.curves import Model, load_model
-from artifactlens.epochs import BATCH_EPOCHS, EpochGrid, batches, epoch_grid
+from artifactlens.epochs import BATCH_EPOCHS, SLOWEST_HZ, EpochGrid, batches, epoch_grid
 from artifactlens.errors import OptionError, RecordingError
 from artifactlens.features import FeatureTable, feature_table, mains_is_carried, measure
 from artifactlens.features.spatial import EyeLeads, eye_leads
@@ -83,7 +83,8 @@ def measure_recording(
     Raises
     ------
     RecordingError, SitesError
-        If there is no whole second to judge, no signal, or no electrode site.
+        If there is no whole second to judge, no signal, too few samples a second, or no
+        electrode site.
     """
     frame = build_frame(recording.labels, recording.types, recording.positions)
     grid = epoch_grid(recording)
@@ -92,6 +93,12 @@ def measure_recording(
             f"At least one whole second of signal is needed; {recording.name} has "
             f"{recording.n_samples} samples at {recording.sampling_rate:g} Hz.",
             "Check that the recording was exported completely.",
+        )
+    if recording.sampling_rate < SLOWEST_HZ:
+        raise RecordingError(
+            f"At least {SLOWEST_HZ:g} samples a second are needed; {recording.name} has "
+            f"{recording.sampling_rate:g}.",
+            "Give the recording itself, not a trend of it.",
         )
     conditions = survey(recording, frame, line_frequency)
     if conditions.average_reference and frame.montage == "referential":

@@ -160,13 +160,9 @@ def demo(invoke, tmp_path_factory):
     )
 
 
-@pytest.fixture(scope="module")
-def lsl(tmp_path_factory):
-    """The client, kept to this machine and out of the sight of other LSL programs."""
-    from artifactlens.live import lsl_link
-    from artifactlens.live import replay as replay_module
-
-    pylsl = pytest.importorskip("pylsl", reason="the LSL client is not installed")
+@pytest.fixture(scope="session", autouse=True)
+def lsl_session(tmp_path_factory):
+    """Keep LSL to this machine, out of the sight of other programs, whoever uses it first."""
     session = f"artifactlens-test-{os.getpid()}"
     config = tmp_path_factory.mktemp("lsl") / "lsl_api.cfg"
     config.write_text(
@@ -178,12 +174,23 @@ def lsl(tmp_path_factory):
     )
     with pytest.MonkeyPatch.context() as patch:
         patch.setenv("LSLAPICFG", str(config))
+        yield session
+
+
+@pytest.fixture(scope="module")
+def lsl(lsl_session):
+    """The client, where a stream can be found over the loopback of this machine."""
+    from artifactlens.live import lsl_link
+    from artifactlens.live import replay as replay_module
+
+    pylsl = pytest.importorskip("pylsl", reason="the LSL client is not installed")
+    with pytest.MonkeyPatch.context() as patch:
         patch.setattr(lsl_link, "_SETTLE_SECONDS", 0.1)
         patch.setattr(replay_module, "_LINGER_SECONDS", 0.4)
         outlet = pylsl.StreamOutlet(
             pylsl.StreamInfo("reachable", "probe", 1, 1, "float32", "r")
         )
-        if outlet.get_info().session_id() != session:
+        if outlet.get_info().session_id() != lsl_session:
             pytest.skip("LSL was set up in this process before, for another network")
         if not pylsl.resolve_byprop("name", "reachable", 1, 3.0):
             pytest.skip("no LSL stream can be found over the loopback of this machine")

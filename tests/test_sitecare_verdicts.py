@@ -267,7 +267,7 @@ def test_two_signs_of_one_site_at_one_time_are_one_entry(found):
     assert kept[0].weight == 11.0
 
 
-def test_signs_at_different_times_are_one_entry_too_named_by_the_longer(found):
+def test_signs_at_different_times_are_one_entry_too_named_by_the_graver(found):
     kept = found(
         finding(sign="mains", held=parts("....xx"), known=parts("...xxx"), reason="hums"),
         finding(sign="pops", held=parts("xxx..."), known=parts("xxx..."), reason="pops"),
@@ -276,6 +276,20 @@ def test_signs_at_different_times_are_one_entry_too_named_by_the_longer(found):
     assert kept[0].held.tolist() == parts("xxx.xx")
     assert kept[0].known.all()
     assert kept[0].reason == "pops; hums"
+
+
+@pytest.mark.parametrize(
+    ("when", "is_a_hand"),
+    [("..xx..", True), ("...x..", True), ("x..x..", False), (".....x", False)],
+)
+def test_a_hand_that_ends_a_fault_is_no_loose_lead(found, when, is_a_hand):
+    """Hum for half a minute, then swings within 25 s of its end, or at other times too."""
+    kept = found(
+        finding(sign="mains", held=parts("xxx..."), reason="hums"),
+        finding(sign="loose lead", held=parts(when), lasting=False, reason="swings"),
+    )
+    assert kept[0].sign == ("mains" if is_a_hand else "loose lead")
+    assert ("swings" in kept[0].reason) is not is_a_hand
 
 
 def test_signs_of_two_sites_stay_two(found):

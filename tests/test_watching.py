@@ -144,6 +144,15 @@ def test_a_stall_of_many_seconds_is_made_up_for_in_one_state(scripted, eeg):
         assert named(watch.state()) == ["P3"]
 
 
+def test_what_may_wait_is_done_once_the_state_is_out(scripted, eeg, monkeypatch):
+    inlet, watch = scripted()
+    settled = []
+    monkeypatch.setattr(Session, "settle", lambda _: settled.append(watch.state().seconds))
+    with watch:
+        take(watch, inlet, pieces_of(eeg(8), 0))
+    assert settled[-1] == 8.0
+
+
 def test_a_loss_is_told_and_the_source_taken_back_with_new_impedances(
     scripted, eeg, monkeypatch
 ):
@@ -455,7 +464,7 @@ def running(watch):
     assert ended < 1.5  # a pull and a second's judging, on a slow machine
 
 
-def until(watch, reached, seconds=8.0):
+def until(watch, reached, seconds=20.0):
     """The states seen up to the first one that fits; asked for from this thread."""
     states = []
     last = time.monotonic() + seconds
@@ -490,8 +499,10 @@ def popping(quiet_eeg):
 def replayed(uv, name, speed):
     stop = threading.Event()
     recording = from_array(uv, RATE, LABELS)
-    options = {"name": name, "speed": speed, "wait_for_consumer": 10.0, "stop": stop}
-    thread = threading.Thread(target=replay, args=(recording,), kwargs=options)
+    options = {"name": name, "speed": speed, "loop": True, "wait_for_consumer": 10.0}
+    thread = threading.Thread(
+        target=replay, args=(recording,), kwargs=options | {"stop": stop}
+    )
     thread.start()
     try:
         yield
@@ -564,7 +575,7 @@ def test_a_calibration_is_prompted_at_the_pace_of_the_stream(lsl, popping):
     watch = Watch("asked", wait_seconds=5.0, calibration=True)
     background = np.concatenate([popping, popping], axis=1)
     background[row("P3")] = background[row("Pz")]
-    with replayed(background[:, : 66 * RATE], "asked", 16.0), watch, running(watch):
+    with replayed(background[:, : 66 * RATE], "asked", 13.0), watch, running(watch):
         states = until(
             watch, lambda s: s.result and s.result.setup and s.result.setup.responses
         )

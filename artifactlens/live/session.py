@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from artifactlens import __version__
 from artifactlens.assessable import assess
-from artifactlens.epochs import EpochGrid, batches
+from artifactlens.epochs import SLOWEST_HZ, EpochGrid, batches
 from artifactlens.errors import OptionError, SamplingRateError, StreamError
 from artifactlens.features import (
     FeatureTable,
@@ -63,9 +63,6 @@ STEADY_EPOCHS = 2
 """Epochs behind one that its median over five seconds looks at: so many are scored again."""
 
 CONTEXT_EPOCHS = 2
-
-SLOWEST_HZ = 25.0
-"""Of fewer samples a second some features have nothing left to be measured on."""
 
 LEAST_MINUTES, MOST_MINUTES = 0.5, 24 * 60
 

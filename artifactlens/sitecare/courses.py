@@ -55,6 +55,24 @@ def state(evidence: Evidence, finding: Finding) -> str:
     return "cured" if _handled(evidence, finding, float(end[-1])) else "past"
 
 
+def is_a_hand(evidence: Evidence, finding: Finding, group: list[Finding]) -> bool:
+    """Whether pops and swings are only somebody's hand, which ended another fault there.
+
+    ``group`` holds all findings of the site.
+    """
+    if finding.lasting or not finding.held.any():
+        return False
+    log = evidence.log
+    first, last = log.begin[finding.held][0], log.end[finding.held][-1]
+    ends = [
+        log.end[other.held][-1]
+        for other in group
+        if other.lasting and other.plain and other.held.sum() > 1
+    ]
+    reach = HANDLED_SECONDS + float(np.median(log.end - log.begin))
+    return any(first >= end - reach and last <= end + reach for end in ends)
+
+
 def _pause(finding: Finding, begin: NDArray[np.float64], end: NDArray[np.float64]) -> float:
     if finding.lasting or len(begin) < 2:
         return SETTLED_SECONDS if finding.lasting else COMES_BACK_SECONDS

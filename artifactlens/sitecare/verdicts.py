@@ -110,7 +110,7 @@ def findings_of(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> list[Fin
         *contacts(evidence),
         *patients(evidence),
     ]
-    return _without_echoes([*found, *_misplaced(evidence, found), *extra])
+    return _without_echoes(evidence, [*found, *_misplaced(evidence, found), *extra])
 
 
 _TORN = ("flat", "lost")
@@ -148,7 +148,7 @@ def _misplaced(evidence: Evidence, found: list[Finding]) -> list[Finding]:
     ]
 
 
-def _without_echoes(found: list[Finding]) -> list[Finding]:
+def _without_echoes(evidence: Evidence, found: list[Finding]) -> list[Finding]:
     """One finding per site, the gravest, with what else there is told along with it.
 
     A loose lead pops, hums and drifts: one thing to look after. A bridged site may look apart:
@@ -177,6 +177,7 @@ def _without_echoes(found: list[Finding]) -> list[Finding]:
     bridged = {row for finding in rest if finding.cause == "bridge" for row in finding.rows}
     kept = []
     for (_, row), group in by_site.items():
+        group = [item for item in group if not courses.is_a_hand(evidence, item, group)]
         group.sort(key=lambda item: (not item.plain, rank.index(item.sign)))
         main, others = group[0], group[1:]
         if row in bridged and main.sign not in ("pops", "loose lead", "lost", "clipped"):
