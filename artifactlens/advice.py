@@ -84,9 +84,23 @@ class Advice:
         return self.sites[0] if self.sites else CAUSE_WORDS[self.cause]
 
     @property
+    def to_do(self) -> tuple[str, str]:
+        """What to do now, and then what; empty where there is nothing.
+
+        What is watched asks for a look only, what is over for nothing unless it comes back.
+        """
+        first, then = (*self.checks, "", "")[:2]
+        if self.verdict != "watch":
+            return first, then
+        if self.state == "present":
+            return f"look again; if it goes on: {first}", ""
+        return f"nothing to do now; if it comes back: {first}", ""
+
+    @property
     def line(self) -> str:
         """One line for a list: "P3 re-prep: 14 pops in 10 min; check the lead, ...".
 
         The number is left to the list.
         """
-        return f"{self.subject} {self.verdict}: {self.reason}; {', then '.join(self.checks[:2])}"
+        doing = ", then ".join(part for part in self.to_do if part)
+        return f"{self.subject} {self.verdict}: {self.reason}; {doing}"

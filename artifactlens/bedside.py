@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from artifactlens.curves import load_model
+from artifactlens.errors import OptionError
 from artifactlens.impedances import impedances_of, read_impedances
 from artifactlens.last_minutes import last_minutes_of
 from artifactlens.pipeline import (
@@ -65,6 +66,11 @@ def sites_to_folder(
     from artifactlens.page.sheet import sheet_html
 
     # What can fail at once fails before the long pass over the recording.
+    if calibration and last_minutes is not None:
+        raise OptionError(
+            "A calibration is done at the start; only the last minutes were to be judged.",
+            "Leave out --last, or --calibration.",
+        )
     check_options("sure", line_frequency)
     model = load_model()
     whole = open_recording(path)
@@ -83,7 +89,7 @@ def sites_to_folder(
             impedances_kohm=impedances_of(measured.frame, values) if values else None,
             calibration=calibration,
         )
-        if recording is not whole and not calibration:
+        if recording is not whole:
             result = replace(result, setup=None)  # the start was not looked at
         write_sites(result, target, sites_html=sheet_html(result))
     return result, target

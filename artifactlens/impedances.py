@@ -30,6 +30,8 @@ electrodes have some kilo-ohm, dry ones some hundred)."""
 
 _REFERENCE = "reference"
 _MISSING = frozenset({"", "n/a", "na", "nan", "-", "--", "?"})
+# What meters write where no current flows: no number, so none is made up.
+_OPEN = frozenset({"open", "ol", "o.l.", "inf", "+inf", "infinity", "\u221e"})
 _NUMBER = re.compile(r"[+-]?([0-9]+([.,][0-9]*)?|[.,][0-9]+)(e[+-]?[0-9]{1,2})?", re.I)
 _THOUSANDS = re.compile(r"[+-]?[0-9]{1,3},[0-9]{3}")
 _UNIT = re.compile(
@@ -70,7 +72,7 @@ def read_impedances(recording: Recording, table: Path | None = None) -> dict[str
     BIDS 1.11, "Electrodes description (electrodes.tsv)": ``impedance`` is in kOhm.
     """
     if table is not None:
-        values = parse_impedances(_text_of(table), table.name)
+        values = read_table(table)
         if not _names_a_site(values, recording):
             raise ImpedanceError(
                 f"{table.name} needs to name sites of the recording; it has values for "
@@ -81,7 +83,7 @@ def read_impedances(recording: Recording, table: Path | None = None) -> dict[str
         return values
     for beside in _electrodes_beside(recording.path):
         try:
-            values = parse_impedances(_text_of(beside), beside.name)
+            values = read_table(beside)
         except ImpedanceError:
             continue  # most such tables give positions alone; nobody named this one
         if _names_a_site(values, recording):
@@ -111,6 +113,22 @@ def impedances_of(frame: Frame, values: Mapping[str, float]) -> NDArray[np.float
     return found
 
 
+def read_table(path: Path) -> dict[str, float]:
+    """Read a table of impedances from a file, whatever recording it is of.
+
+    Returns
+    -------
+    dict of str to float, kilo-ohm
+        As :func:`parse_impedances` gives them.
+
+    Raises
+    ------
+    ImpedanceError
+        If the file cannot be read, or not as such a table.
+    """
+    return parse_impedances(_text_of(path), path.name)
+
+
 def parse_impedances(text: str, name: str) -> dict[str, float]:
     """Read a table of impedances.
 
@@ -123,7 +141,7 @@ def parse_impedances(text: str, name: str) -> dict[str, float]:
     Returns
     -------
     dict of str to float, kilo-ohm
-        Sites without a value ("n/a") are left out.
+        Sites without a value ("n/a"), or open ("OL", "inf"), are left out; ">100" is 100.
 
     Raises
     ------
@@ -235,7 +253,16 @@ def _is_header(cells: list[str]) -> bool:
     """Whether a row names columns: no number in it, and no electrode before them."""
     if canonical_site(cells[0]) is not None:
         return False
-    return not any(_NUMBER.fullmatch(c) or c.lower() in _MISSING for c in cells[1:])
+    return not any(_NUMBER.fullmatch(_bare(c)) or _is_missing(c) for c in cells[1:])
+
+
+def _is_missing(cell: str) -> bool:
+    return cell.lower() in _MISSING | _OPEN
+
+
+def _bare(cell: str) -> str:
+    """The number in a cell; a meter writes ">100" at the end of its scale."""
+    return cell.removeprefix(">").lstrip()
 
 
 def _columns(
@@ -281,11 +308,12 @@ def _kilo_ohm_per_unit(header: list[str] | None, column: int, name: str) -> floa
 
 def _number(cell: str, row: int, name: str) -> float | None:
     """An impedance in the unit of the table; None where there is none."""
-    if cell.lower() in _MISSING:
+    if _is_missing(cell):
         return None
+    number = _bare(cell)
     # "1,000" may be one or a thousand.
-    if _NUMBER.fullmatch(cell) and not _THOUSANDS.fullmatch(cell):
-        value = float(cell.replace(",", "."))
+    if _NUMBER.fullmatch(number) and not _THOUSANDS.fullmatch(number):
+        value = float(number.replace(",", "."))
         if value >= 0:
             return value
     raise ImpedanceError(

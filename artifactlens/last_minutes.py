@@ -51,7 +51,7 @@ def last_minutes_of(recording: Recording, minutes: float) -> Recording:
         annotations=tuple(
             entry for entry in recording.annotations if entry[0] + entry[1] >= begin
         ),
-        notes=(*recording.notes, f"Only the last {minutes:g} min are judged."),
+        notes=(*recording.notes, f"Judged: the last {minutes:g} min."),
     )
 
 

@@ -138,8 +138,19 @@ def test_what_is_over_is_told_with_its_time(monkeypatch, invoke, night, result):
     changed = replace(result, advice=(over, unsure))
     monkeypatch.setattr(bedside, "sites_to_folder", lambda *a, **k: (changed, Path("x")))
     lines = invoke("sites", night).stdout.splitlines()
-    assert lines[1] == f"1. {over.line} (0:01:00–0:02:10, cured)"
-    assert lines[2] == f"2. {unsure.line} (low confidence)"
+    assert lines[1] == f"1. {over.line} (gone after handling: 0:01:00–0:02:10)"
+    assert lines[2] == f"2. {unsure.line} (unsure)"
+
+
+def test_impedances_above_what_is_acceptable_are_told_in_a_line(
+    done, invoke, quiet, tmp_path
+):
+    table = tmp_path / "kohm.tsv"
+    table.write_text("site\tkohm\nT4\t250\nO1\t10\nP3\t10.5\n")
+    shown = invoke("sites", quiet, "--impedances", table, "--out", tmp_path)
+    (line,) = lines_of(shown.stdout, "impedance")
+    assert line == "impedance   above 10 kohm: T4 250, P3 10.5"
+    assert lines_of(done.stdout, "impedance") == []
 
 
 def test_quiet_prints_nothing_where_all_went_well(invoke, quiet, tmp_path):
@@ -194,10 +205,12 @@ def test_the_last_minutes_alone_are_judged_and_times_stay_those_of_the_whole(
     assert first["sites"] == [FAULTY]
     assert all(start >= 90.0 for start, _ in first["stretches"])
     assert max(end for _, end in first["stretches"]) <= 150.0
-    assert "Only the last 1 min are judged." in entry["notes"]
+    assert "Judged: the last 1 min." in entry["notes"]
     assert entry["setup"] is None
     table = table_of(night.with_name("night.sites"))
     assert table["O1"]["seconds_judged"] == "60.00"
+    page = night.with_name("night.sites") / "sites.html"
+    assert "<b>judged: the last 1 min</b>" in page.read_text(encoding="utf-8")
 
 
 def test_what_happened_before_the_last_minutes_asks_for_nothing(

@@ -127,8 +127,7 @@ def test_each_change_of_advice_is_one_line_with_the_time_of_the_stream():
         "check the lead, then re-prep (since 0:00:20)",
         "0:01:30 ground check: mains at all sites with differing size, also between neighbours; "
         "check the ground electrode, then cables (since the start)",
-        "0:01:40 P3 watch: 14 pops in 2 min, unlike its neighbours; "
-        "check the lead, then re-prep (until 0:01:58, cured)",
+        f"0:01:40 {cured.line} (until 0:01:58, cured)",
         "0:01:40 P3 re-prep: no longer on the list",
         "0:01:50 ground check: no longer on the list",
         "0:01:50 P3 watch: no longer on the list",
@@ -153,6 +152,22 @@ def test_losses_notes_and_requests_are_told_once():
         "The source is back.",
     ]
     assert sum("P3" in line for line in lines) == 1
+
+
+def test_muscle_is_told_once_whomever_it_marks():
+    others = dataclasses.replace(MUSCLE, sites=MUSCLE.sites[::-1])
+    lines = log_of(*(state_of(entry) for entry in (MUSCLE, others, MUSCLE)), state_of())
+    assert len(lines) == 3
+    assert " ask: " in lines[0]
+    assert lines[1].endswith(" ask: no longer on the list")
+
+
+def test_silence_of_a_paused_source_is_told_once():
+    lines = log_of(*(state_of(P3, silent=s) for s in (0.2, 2.9, 3.1, 4.1, 60.0, 0.1)))
+    assert [line.partition(" ")[2] for line in lines[1:]] == [
+        "Nothing new from the stream for 3 s.",
+        "It goes on.",
+    ]
 
 
 def test_low_confidence_is_told():
@@ -180,6 +195,21 @@ def test_the_terminal_shows_sentence_list_marks_setup_and_stream():
         "stream      Stream amp, 0:12:40 seen, none missing",
     ):
         assert words in re.sub(" +\n", "\n", told)
+
+
+@pytest.mark.parametrize(
+    ("changes", "sentence"),
+    [
+        ({"silent": 12.3}, "Nothing new from the stream for 10 s."),
+        ({"phase": "lost"}, "The source is gone since 0:12:40."),
+        ({"phase": "stopped"}, "The watch has stopped by a failure of its own."),
+    ],
+)
+def test_the_terminal_shows_nothing_old_as_if_it_were_now(changes, sentence):
+    told = seen(state_of(P3, **changes))
+    assert told.strip().startswith(sentence)
+    assert "marked now" not in told
+    assert "marked now  no site" in seen(state_of(P3, silent=2.9))
 
 
 def test_the_terminal_shows_the_request_to_the_patient():
@@ -300,6 +330,13 @@ def test_a_table_of_impedances_that_cannot_be_read_is_a_failure(
     done = invoke("watch", "--no-page", "--impedances", table)
     assert done.exit_code == 1
     assert "ohms.tsv" in done.stderr
+
+
+def test_a_table_of_impedances_that_is_not_there_is_a_failure(invoke, made_up, tmp_path):
+    made_up(state_of())
+    done = invoke("watch", "--no-page", "--impedances", tmp_path / "ohms.tsv")
+    assert done.exit_code == 1
+    assert "ohms.tsv could not be opened" in done.stderr
 
 
 def test_ctrl_c_while_waiting_ends_quietly(invoke, made_up):
@@ -460,6 +497,18 @@ def test_a_recording_that_cannot_be_read_is_a_failure(invoke, tmp_path):
     done = invoke("replay", tmp_path / "missing.edf")
     assert done.exit_code == 1
     assert "missing.edf" in done.stderr
+
+
+def test_an_unknown_error_of_a_replay_is_no_trace(invoke, recording, monkeypatch):
+    def replay(opened, **options):
+        raise KeyError("patient X")
+
+    monkeypatch.setattr("artifactlens.live.replay.replay", replay)
+    done = invoke("replay", recording)
+    assert done.exit_code == 1
+    assert "An error that artifactlens does not know: KeyError." in done.stderr
+    assert "patient X" not in done.output
+    assert "Traceback" not in done.output
 
 
 @pytest.mark.parametrize("speed", ["0", "-1", "fast"])

@@ -11,7 +11,12 @@ from hypothesis import strategies as st
 from artifactlens.demo import DEMO_SITES
 from artifactlens.errors import ImpedanceError
 from artifactlens.frames import build_frame
-from artifactlens.impedances import impedances_of, parse_impedances, read_impedances
+from artifactlens.impedances import (
+    impedances_of,
+    parse_impedances,
+    read_impedances,
+    read_table,
+)
 from artifactlens.recording import from_array, open_recording
 
 SITES = st.sampled_from([*DEMO_SITES, "FT9", "CP5", "A1", "Ref", "Gnd", "E101"])
@@ -63,6 +68,13 @@ def test_a_label_may_hold_blanks_where_blanks_stand_between_the_columns():
     }  # fmt: skip
 
 
+@pytest.mark.parametrize("written", ["open", "OL", "inf", "Inf", "\u221e"])
+@pytest.mark.parametrize("others", ["C3\t5", "C3\t>5", "C3\t> 5"])
+def test_the_end_of_the_scale_is_its_number_and_an_open_site_has_none(written, others):
+    for text in (f"O1\t{written}\n{others}\n", f"{others}\nlead 1\t{written}\n"):
+        assert parse_impedances(text, "z.tsv") == {"C3": 5.0}
+
+
 @pytest.mark.parametrize(
     ("text", "problem", "remedy"),
     [
@@ -73,7 +85,7 @@ def test_a_label_may_hold_blanks_where_blanks_stand_between_the_columns():
         ("name\tx\ty\nFp1\t1\t2\n", "needs a column of impedances", "electrodes.tsv"),
         ("Fp1\tgood\nF3\t4\n", "given was 'good'", "plain numbers"),
         ("F3\t4\nFp1\t-3\n", "Row 2 of z.tsv needs an impedance of 0 or more", "plain"),
-        ("F3\tinf\nF4\t3\n", "given was 'inf'", "plain numbers"),
+        ("F3\t>>9\nF4\t3\n", "given was '>>9'", "plain numbers"),
         ("site;ohm\nFp1;4,200\n", "given was '4,200'", "plain numbers"),
         ("site\tMOhm\nFp1\t1\n", "ohm or kohm; its header says 'MOhm'", "Convert"),
         ("Fp1\t4200\nF3\t5100\nF4\t900\n", "too much for kilo-ohm", "State the unit"),
@@ -114,7 +126,8 @@ def test_any_text_is_read_or_refused_in_plain_words(text, name):
     assert all(math.isfinite(value) and value >= 0 for value in read.values())
 
 
-CELLS = ["Fp1", "T3", "4.2", "n/a", "name", "impedance", "kohm", "ohm", "-1", '"', "", "x"]
+CELLS = ["Fp1", "T3", "4.2", ">4.2", "OL", "n/a", "name", "impedance", "kohm", "ohm", "-1"]
+CELLS += ['"', "", "x"]
 
 
 @settings(deadline=None)
@@ -213,6 +226,12 @@ def brainvision(folder: Path, stem, *lines, unit="kOhm"):
         file.write(f"Impedance [{unit}] at 10:11:12 :\n")
         file.write("\n".join(lines) + "\n")
     return open_recording(header)
+
+
+def test_a_table_is_read_whatever_recording_it_is_of(tmp_path):
+    path = tmp_path / "z.csv"
+    path.write_text("E201,4\n", encoding="utf-8-sig")
+    assert read_table(path) == {"E201": 4.0}
 
 
 @pytest.mark.parametrize(

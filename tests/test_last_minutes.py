@@ -26,7 +26,7 @@ def test_the_last_minute_keeps_its_samples_and_its_times():
     grid = epoch_grid(cut)
     assert (grid.onset[0], grid.onset[-1], len(grid)) == (120.0, 179.0, 60)
     assert cut.read(int(grid.start[0]), int(grid.start[0]) + 1)[0, 0] == 1200.0
-    assert cut.notes == ("Only the last 1 min are judged.",)
+    assert cut.notes == ("Judged: the last 1 min.",)
 
 
 def test_it_begins_at_a_second_of_the_whole_and_keeps_no_less_than_was_asked_for():

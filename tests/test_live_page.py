@@ -24,7 +24,7 @@ from test_page import Reader
 from artifactlens.advice import SITE_VERDICTS, VERDICTS
 from artifactlens.errors import OutputError
 from artifactlens.kinds import KIND_NAMES
-from artifactlens.live.server import HEADERS, Door, LiveServer, News, live_app
+from artifactlens.live.server import HEADERS, Door, LiveServer, live_app
 from artifactlens.live.state import NOTHING_YET, PHASES, LiveState, Prompt
 from artifactlens.page.live import (
     ROWS,
@@ -113,6 +113,16 @@ def test_the_sentence_is_about_the_first_entry_that_still_holds():
         (NOTHING_YET, "Waiting for a stream."),
         (state_of(None, phase="gathering", seconds=3.0), "Listening to the stream."),
         (state_of(phase="lost", seconds=12.4), "The source is gone since 0:00:12."),
+        (state_of(None, phase="refused"), "This stream cannot be watched."),
+        (state_of(phase="stopped"), "The watch has stopped by a failure of its own."),
+        (state_of(silent=3.0), "Ground: check the ground electrode."),
+        (state_of(silent=3.2), "Nothing new from the stream for 3 s."),
+        (state_of(silent=59.9), "Nothing new from the stream for 50 s."),
+        (state_of(silent=200.0), "Nothing new from the stream for 3 min."),
+        (
+            state_of(None, phase="gathering", silent=9.9),
+            "Nothing new from the stream for 9 s.",
+        ),
         (with_entries(), "No site asks for care."),
     ],
 )
@@ -223,26 +233,29 @@ def test_all_kinds_always_stand_there_marked_or_not_or_not_judged():
     assert all(f"c-{kind} " in marked for kind in KIND_NAMES)
 
 
-def test_the_setup_counts_down_two_minutes_and_then_says_how_it_began():
-    early = state_of(dataclasses.replace(ADVISED, setup=None), seconds=34.2)
+def test_the_setup_counts_down_and_then_says_how_it_began():
+    early = state_of(dataclasses.replace(ADVISED, setup=None), setup_left=85.8)
     assert setup_line(early) == "Setup check: 1:26 left."
     assert (
-        setup_line(state_of(None, phase="gathering", seconds=0.0))
-        == "Setup check: 2:00 left."
+        setup_line(state_of(None, phase="gathering", setup_left=130.0))
+        == "Setup check: 2:10 left."
     )
-    late = setup_line(state_of(seconds=120.0))
+    late = setup_line(state_of())
     assert late.startswith("First 2 min: 17 of 19 sites fit to start.")
     assert late.endswith("Blinks were seen at both frontal poles.")
-    assert "left" not in setup_line(state_of(phase="lost", seconds=34.2))
+    assert "left" not in setup_line(state_of(phase="lost", setup_left=85.8))
 
 
 def test_the_quiet_line_tells_name_time_losses_and_delay():
     assert stream_words(state_of()) == (
         "Stream amp, 0:12:40 seen, none missing, no outage, "
-        "judged 0.08 s after each second, slowest 0.21 s."
+        "judged 0.08 s after its samples came, slowest 0.21 s."
     )
     worse = stream_words(state_of(filled=512, outages=2, delay=None))
     assert "512 samples of each channel missing, source gone 2 times." in worse
+    broken = stream_words(state_of(breaks=1, delay=None))
+    assert broken == "Stream amp, 0:12:40 seen, 1 break of more than 2 s."
+    assert "2 breaks of" in stream_words(state_of(breaks=2, outages=1))
     assert stream_words(NOTHING_YET) == "No stream yet."
 
 
@@ -460,10 +473,7 @@ def test_refusals_carry_the_headers_too(client):
 def test_now_gives_the_fragments(inside):
     answer = get(inside, "/now")
     assert answer.content_type == "application/json"
-    assert answer.json == {
-        **json.loads(json.dumps(live_fragments(HOSTILE_STATE))),
-        "age": 0.0,
-    }
+    assert answer.json == json.loads(json.dumps(live_fragments(HOSTILE_STATE)))
     assert b"</script>" not in answer.data.replace(b"&lt;/script", b"").split(b'"parts"')[1]
 
 
@@ -481,49 +491,17 @@ def test_an_error_is_told_without_its_words(door):
 # What is old
 
 
-@pytest.fixture
-def clock(monkeypatch):
-    """A clock that is turned by hand."""
-    hands = [100.0]
-    monkeypatch.setattr("artifactlens.live.server.time.monotonic", lambda: hands[0])
-    return hands
+@pytest.mark.parametrize("phase", ["gathering", "watching"])
+def test_what_is_shown_is_old_once_the_stream_is_silent(phase):
+    assert live_fragments(state_of(phase=phase, silent=3.1))["old"]
+    assert not live_fragments(state_of(phase=phase, silent=2.9))["old"]
+    assert "of 0:12:40" in live_fragments(state_of(phase=phase, silent=3.1))["more"]
 
 
-def age_after(news, clock, seconds):
-    clock[0] += seconds
-    return json.loads(news.json())["age"]
-
-
-def test_a_stream_whose_time_stands_still_grows_old(clock):
-    states = [state_of(seconds=760.0)]
-    news = News(lambda: states[-1])
-    assert age_after(news, clock, 0) == 0
-    assert age_after(news, clock, 2) == 2
-    states.append(dataclasses.replace(states[0]))  # made anew, but nothing came
-    assert age_after(news, clock, 2) == 4
-    states.append(state_of(seconds=761.0))
-    assert age_after(news, clock, 1) == 0
-
-
-@pytest.mark.parametrize("state", [NOTHING_YET, state_of(phase="lost")])
-def test_waiting_and_a_lost_source_say_so_themselves(clock, state):
-    news = News(lambda: state)
-    assert age_after(news, clock, 0) == 0
-    assert age_after(news, clock, 60) == 0
-
-
-def test_fragments_are_made_once_per_state(monkeypatch):
-    made = []
-    monkeypatch.setattr(
-        "artifactlens.live.server.live_fragments", lambda state: made.append(state) or {}
-    )
-    states = [state_of(), state_of(seconds=761.0)]
-    news = News(lambda: states[0])
-    news.json()
-    news.json()
-    states.pop(0)
-    news.json()
-    assert len(made) == 2
+@pytest.mark.parametrize("phase", ["watching", "lost", "stopped"])
+def test_only_a_stream_that_goes_on_says_who_is_marked(phase):
+    told = words(live_fragments(state_of(phase=phase))["parts"]["marked"])
+    assert ("no site" in told) == (phase == "watching")
 
 
 # The server itself
@@ -677,4 +655,11 @@ def test_a_real_browser_says_when_what_it_shows_is_old(dom_of):
     dom = dom_of(dying, 6000)
     assert "cannot be made" in inner(dom, "sentence")
     assert "What stands below is old." in inner(dom, "more")
+    assert re.search(r'<body[^>]* class="old"', dom)
+
+
+def test_a_real_browser_says_for_how_long_a_stream_is_silent(dom_of):
+    dom = dom_of(lambda: dataclasses.replace(with_entries(P3), silent=14.0))
+    assert inner(dom, "sentence") == "Nothing new from the stream for 10 s."
+    assert "What stands below is old" in inner(dom, "more")
     assert re.search(r'<body[^>]* class="old"', dom)

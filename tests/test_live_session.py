@@ -508,6 +508,19 @@ def test_memory_does_not_grow_with_the_stream(eeg):
 # --------------------------------------------------------------------------- the setup
 
 
+@pytest.mark.parametrize(("minutes", "whole"), [(10.0, 130.0), (0.5, 30.0)])
+def test_how_long_the_setup_is_still_looked_at_is_counted_down(eeg, minutes, whole):
+    session = session_of(FEW, 100.0, minutes=minutes)
+    assert session.setup_left == whole
+    uv = np.random.default_rng(8).normal(0, 10, (len(FEW), 3200)).astype(np.float32)
+    for second in range(32):
+        session.add(Stretch(0, 100 * second, 9.0 + second, uv[:, 100 * second :][:, :100]))
+        if session.seconds:
+            session.result()
+        left = whole - second - 1
+        assert session.setup_left == (pytest.approx(left) if left > 0 else None)
+
+
 def test_the_setup_is_settled_after_two_minutes(eeg):
     uv = few(eeg(150, 100.0))
     for moment in np.arange(131.3, 150, 3.7):

@@ -270,8 +270,10 @@ def test_what_comes_twice_or_too_late_is_discarded_and_nothing_is_reordered(chun
 )
 def test_two_seconds_are_filled_and_more_is_a_break(missing, n_segments):
     both = np.r_[np.arange(50), np.arange(50) + 50 + int(missing)]
-    grids = laid_out(Assembler(100.0, 2), [piece(both, 100.0)])
+    assembler = Assembler(100.0, 2)
+    grids = laid_out(assembler, [piece(both, 100.0)])
     assert len(grids) == n_segments
+    assert assembler.breaks == n_segments - 1
     assert sum(grid.shape[1] for grid in grids) == 100 + (missing if n_segments == 1 else 0)
     np.testing.assert_array_equal(grids[-1][0, -50:], both[50:])
 
@@ -283,7 +285,7 @@ def test_a_clock_that_steps_far_back_begins_a_segment():
         [piece(np.arange(50), 100.0), piece(np.arange(50, 90), 100.0, at=20.0)],
     )
     assert [grid.shape[1] for grid in grids] == [50, 40]
-    assert assembler.discarded == 0
+    assert (assembler.discarded, assembler.breaks) == (0, 1)
 
 
 def test_a_clock_is_seen_to_step_back_behind_a_repeat_in_the_same_piece():
@@ -524,8 +526,8 @@ def test_a_replay_keeps_its_pace(lsl):
 def test_a_replay_tells_nothing_of_the_patient_or_the_file(lsl):
     stop = threading.Event()
     ids = []
-    for name in ("Doe Jane 1970", "Doe Jane 1970", "other"):
-        recording = from_array(np.zeros((1, 100)), 100, ["Cz"], name=name)
+    for name, seconds in (("Doe Jane 1970", 1), ("other", 1), ("Doe Jane 1970", 2)):
+        recording = from_array(np.zeros((1, 100 * seconds)), 100, ["Cz"], name=name)
         stop.clear()
         with in_background(replay, recording, name="private", loop=True, stop=stop):
             try:

@@ -21,7 +21,11 @@ from artifactlens.page.sheet import (
     IN_FULL,
     LETTERS_OF_LINE,
     LINES_OF_LIST,
+    ROOMY,
+    ROOMY_LETTERS,
+    ROOMY_LINES,
     impedance_words,
+    judged_words,
     setup_words,
     sheet_html,
     what_to_do,
@@ -94,7 +98,7 @@ def test_the_sheet_says_first_what_to_do():
             "Electrode sheet: invented-01",
             "2 min, 19 sites, referential",
             "3 sites to re-prep, ground and T5 and T6 to check first, patient to ask.",
-            "1 fault was cured during the recording. 1 site cannot be judged.",
+            "1 earlier fault is gone. 1 site cannot be judged.",
             "First 2 min: 17 of 19 sites fit to start.",
             "Shapes",
             "What was done",
@@ -174,6 +178,42 @@ def test_the_setup_says_who_is_not_fit_and_why():
     assert "fit to start" not in sheet_html(dataclasses.replace(ADVISED, setup=None))
 
 
+def test_ground_and_reference_are_not_counted_among_the_sites():
+    unfit = (("ground", "mains"), ("reference", "pops"), ("P3", "pops"))
+    assert setup_words(Setup(120.0, ("Fz", "Cz"), unfit, ())) == (
+        "First 2 min: 2 of 3 sites fit to start. "
+        "Not yet: ground (mains), reference (pops), P3 (pops)."
+    )
+
+
+def test_answers_to_the_calibration_are_told_without_their_measures():
+    said = ("0:01:41 jaw: as expected, F7 +27 dB, T3 +23 dB above 20 Hz.",)
+    setup = dataclasses.replace(ADVISED.setup, responses=said)
+    page = sheet_html(dataclasses.replace(ADVISED, setup=setup))
+    assert "0:01:41 jaw: as expected.</p>" in page
+    assert "27 dB" not in page
+
+
+@pytest.mark.parametrize(
+    ("seconds", "notes", "words"),
+    [
+        (120.0, (), ""),
+        (108.0, (), ""),
+        (60.0, ("One gap.", "Judged: the last 1 min."), "judged: the last 1 min"),
+        (60.0, ("One gap.",), "60 s of it judged"),
+    ],
+)
+def test_the_head_says_how_much_was_judged(seconds, notes, words):
+    result = dataclasses.replace(
+        ADVISED,
+        recording=dataclasses.replace(ADVISED.recording, notes=notes),
+        sites=tuple(dataclasses.replace(s, seconds_judged=seconds) for s in ADVISED.sites),
+    )
+    assert judged_words(result) == words
+    facts = "2 min, 19 sites, referential" + (f"; {words}" if words else " 3 sites")
+    assert facts in Reader(sheet_html(result)).text
+
+
 def test_impedances_are_judged_by_the_usual_bounds():
     """100 ohm to 5 k good, 5-10 k acceptable if even: common practice."""
     words = impedance_words(ADVISED.sites)
@@ -194,14 +234,15 @@ def test_line_power_is_never_taken_for_impedance():
 
 def test_impedances_stand_beside_their_sites():
     told = {
-        t.text: [s.text for s in t.findall("tspan") if s.get("class") == "ohms"]
+        t.text: [(s.text, s.get("font-weight")) for s in t.findall("tspan")]
         for t in head(ADVISED).iter("text")
         if "name" in t.get("class")
     }
-    assert told["P3"] == [" 14.5"]
-    assert told["Cz"] == [" 2"]
+    assert told["P3"] == [(" 14.5", "700")]
+    assert told["Cz"] == [(" 2", None)]
     assert told["ground"] == []
     assert "re-prep (high) 2, 2 kΩ" in Reader(sheet_html(ADVISED)).text
+    assert '<span class="ohms"><b>14.5</b>&nbsp;kΩ</span>' in sheet_html(ADVISED)
 
 
 def test_the_checks_stand_in_the_order_of_the_trade():
@@ -214,13 +255,29 @@ def test_the_checks_stand_in_the_order_of_the_trade():
 @pytest.mark.parametrize(
     ("stretches", "state", "words"),
     [
-        (((200.0, 300.0),), "cured", ("0:03:20–0:05:00", "cured")),
-        (((200.0, 300.0), (400.0, 500.0)), "past", ("0:03:20–0:05:00", "and 1 more, past")),
-        (((0.0, 1800.0),), "present", ("throughout", "")),
-        ((), "present", ("", "present")),
+        (((200.0, 300.0),), "cured", ("0:03:20–0:05:00", "", "gone after handling")),
+        (
+            ((10.0, 20.0), (200.0, 300.0), (400.0, 450.0)),
+            "past",
+            ("0:03:20–0:05:00", "and 2 more", "earlier, gone"),
+        ),
+        (
+            ((0.0, 600.0), (900.0, 1800.0)),
+            "present",
+            ("0:15:00 to the end", "and 1 before", "now"),
+        ),
+        (((200.0, 1700.0),), "present", ("0:03:20–0:28:20", "", "now")),
+        (((0.0, 900.0), (1080.0, 1800.0)), "present", ("throughout", "", "")),
+        (
+            ((0.0, 900.0), (1081.0, 1800.0)),
+            "present",
+            ("0:18:01 to the end", "and 1 before", "now"),
+        ),
+        (((0.0, 1750.0),), "past", ("0:00:00–0:29:10", "", "earlier, gone")),
+        ((), "present", ("", "", "now")),
     ],
 )
-def test_times_are_told_from_when_to_when(stretches, state, words):
+def test_the_stretch_that_matters_is_told(stretches, state, words):
     entry = dataclasses.replace(ADVISED.advice[0], stretches=stretches, state=state)
     assert when(entry, 1800.0) == words
 
@@ -238,6 +295,22 @@ def test_every_verdict_has_a_shape_of_its_own_and_a_word():
     text = Reader(sheet_html(ADVISED)).text
     for word, (shape, meaning) in (SHAPES | LINES).items():
         assert f"{word} ({shape}): {meaning}" in text
+
+
+@pytest.mark.parametrize(
+    ("result", "words"),
+    [
+        (make_result(0), ["leave"]),
+        (with_entries({"verdict": "watch", "sites": ("P3",)}),
+         ["re-prep", "watch", "cannot tell", "leave"]),
+        (with_entries({"sign": "bridged", "sites": ("F4", "C4"), "verdict": "re-prep"}),
+         ["re-prep", "watch", "cannot tell", "leave", "bridged"]),
+    ],
+)  # fmt: skip
+def test_only_shapes_and_lines_that_occur_are_explained(result, words):
+    page = sheet_html(result)
+    legend = page[page.index('class="legend"') : page.index("</ul>")]
+    assert re.findall(r"<b>([^<]+)</b>", legend) == words
 
 
 def test_shapes_need_neither_colour_nor_the_background_that_browsers_do_not_print():
@@ -314,6 +387,18 @@ def test_there_is_always_a_ground(result):
     assert "ground" in labels(result)
 
 
+def test_a_ground_of_which_nothing_is_said_is_no_site_to_leave_alone():
+    titles = [t.text for t in head(make_result(0)).iter("title")]
+    assert "ground: not judged" in titles
+    (mark,) = [
+        g
+        for g in head(make_result(0)).iter("g")
+        if (g.findtext("title") or "")[:6] == "ground"
+    ]
+    assert [part.get("class") for part in mark.findall("*")[1:]] == ["earth"]
+    assert mark.get("data-verdict") is None
+
+
 def test_a_ground_with_a_place_of_its_own_is_not_drawn_twice():
     ground = dataclasses.replace(ADVISED.sites[4], site="AFz", role="ground")
     result = dataclasses.replace(ADVISED, sites=(*ADVISED.sites, ground))
@@ -378,13 +463,42 @@ def test_the_first_page_fits_both_papers():
 
 
 @pytest.mark.parametrize("n_entries", range(1, IN_FULL + 1))
-def test_long_texts_are_cut_to_the_lines_that_the_page_has(n_entries):
-    page = sheet_html(many(n_entries, reason="x" * 900, checks=("y" * 900, "z" * 900)))
-    longest = {letter: max(map(len, re.findall(f"{letter}+…?", page))) for letter in "xy"}
-    lines = sum(math.ceil(n / LETTERS_OF_LINE) for n in longest.values())
-    assert lines >= 3
-    assert n_entries * lines <= LINES_OF_LIST
+def test_reasons_are_cut_to_the_lines_that_the_page_has(n_entries):
+    first = "y" * 40
+    page = sheet_html(many(n_entries, reason="x" * 900, checks=(first, "z" * 900)))
+    letters, lines = (
+        (ROOMY_LETTERS, ROOMY_LINES)
+        if n_entries <= ROOMY
+        else (LETTERS_OF_LINE, LINES_OF_LIST)
+    )
+    longest = max(map(len, re.findall("x+…", page)))
+    assert longest >= letters - 1
+    used = math.ceil(longest / letters) + math.ceil(1.1 * len(first) / letters)
+    assert n_entries * used <= lines
     assert "zz" not in page
+
+
+@pytest.mark.parametrize("n_entries", [1, IN_FULL, IN_FULL + 3])
+def test_what_to_do_now_is_never_cut_and_reasons_only_between_words(n_entries):
+    first = "check the lead, " * 30 + "then stop"
+    reason = " ".join(["swings"] * 90)
+    page = sheet_html(many(n_entries, reason=reason, checks=(first, "re-prep " * 90)))
+    assert page.count(f"<b>{first}</b>") == n_entries
+    told = re.findall(r"(?:<p>|<td>)([^<]*)…", page)
+    assert len(told) == n_entries
+    assert all(re.fullmatch("(swings )*swings", text) for text in told)
+    assert "then re-prep" not in page
+
+
+def test_what_is_watched_asks_first_for_a_look_or_for_nothing():
+    page = sheet_html(
+        with_entries(
+            {"verdict": "watch", "state": "present", "checks": ("check the lead",)},
+            {"verdict": "watch", "state": "past", "checks": ("check the lead",)},
+        )
+    )
+    assert "<b>look again; if it goes on: check the lead</b>" in page
+    assert "<b>nothing to do now; if it comes back: check the lead</b>" in page
 
 
 def test_up_to_twelve_entries_stand_on_the_first_page():
@@ -409,10 +523,20 @@ def test_every_entry_has_empty_ruled_boxes():
     assert [*re.findall(r'class="box[^"]*">([^<]+)<', head_row)] == [
         "What was done",
         "Initials",
-        "Time",
+        "Clock time",
     ]
-    assert page.count('<td class="box"></td>') == 3 * (len(ADVISED.advice) + 2)
-    assert sheet_html(make_result(0)).count('<tr class="blank">') == 4
+    n_rows = len(ADVISED.advice) + 1  # and a free one
+    assert page.count('<td class="box"></td>') == 2 * n_rows
+    ticks = ["lead", "re-prep", "replaced", "moved"]
+    assert re.findall(r'<span class="tick">([^<]+)<', page) == ticks * n_rows
+    assert page.count('<span class="after">kΩ after</span>') == n_rows
+
+
+def test_a_sheet_without_entries_has_free_rows_on_paper_and_on_screen():
+    page = sheet_html(make_result(0))
+    assert "No site asks for care." in page
+    assert page.count('<tr class="blank">') == 4
+    assert not re.search(r"\.blank[^{]*\{[^}]*display: none", part("sheet.css"))
 
 
 def test_the_list_goes_by_number():

@@ -24,6 +24,8 @@ from artifactlens.sitecare.humming import hums, own_hum
 from artifactlens.sitecare.losses import losses
 from artifactlens.sitecare.patients import patients
 from artifactlens.sitecare.popping import STEP_OVER_FAST, popping
+from artifactlens.sitecare.reference_noise import noisy_references
+from artifactlens.sitecare.short_chains import short_chains
 
 FRAME, CHAINS = frame_of(), frame_of(BANANA)
 ONE_CHAIN = np.zeros(20, dtype=np.intp)
@@ -257,7 +259,7 @@ def test_muscle_is_no_poor_contact_but_poor_contact_may_look_like_muscle():
 
 def test_noise_in_the_reference_is_one_finding_and_none_of_the_sites():
     made = evidence(covariance=with_noise(FRAME, reference=60.0))
-    found = one(contacts(made))
+    found = one(noisy_references(made))
     assert named([found], made) == [("reference", "apart", ("reference",))]
     assert "in every channel alike" in found.reason
 
@@ -298,13 +300,13 @@ def test_sites_that_wander_together_are_the_skin_and_no_electrode():
 
 def test_a_chain_of_three_names_the_noisiest_and_says_that_it_cannot_be_sure():
     made = evidence(CHAINS, covariance=with_noise(CHAINS, Cz=90.0))
-    found = one(contacts(made))
+    found = one(short_chains(made))
     assert named([found], made) == [("site", "apart", ("Cz",))]
     assert "in the chain Fz, Cz, Pz" in found.reason
     assert "cannot tell for sure" in found.reason
     calm = evidence(CHAINS, covariance=with_noise(CHAINS, Cz=90.0),
                     probability={"muscle": marks(CHAINS, 60, ["Cz"])})  # fmt: skip
-    assert contacts(calm) == []
+    assert short_chains(calm) == []
 
 
 # Mains ---------------------------------------------------------------------------------
@@ -569,7 +571,9 @@ def test_muscle_is_told_by_its_place(sites, words):
     muscle = marks(FRAME, 60, sites, when=slice(0, 30))
     found = one(patients(evidence(probability={"muscle": muscle})))
     assert (found.cause, found.sign) == ("patient", "muscle")
-    assert found.reason.startswith(f"muscle {words} in 50 of 100 seconds; consistent with")
+    assert found.reason.startswith(
+        f"marked as muscle {words} in 50 of 100 seconds, consistent"
+    )
     assert {FRAME.sites[k] for k in found.rows} == set(sites)
     assert found.held.tolist() == [True] * 3 + [False] * 3
 
@@ -643,3 +647,41 @@ def test_which_sites_stand_apart_does_not_depend_on_the_gain():
         assert {sites for _, _, sites in named(contacts(made), made)} == {("P3",), ("O2",)}
         pair = evidence(covariance=gain**2 * bridged(FRAME, "C3", "P3", noise_uv=0.2))
         assert len(bridges(pair)) == 1
+
+
+def quiet_channel(site, part, seconds=60):
+    """Covariance of a head in which one channel shows only a part of what is there."""
+    channels = field(FRAME)[:19, :19].copy()
+    channels[row(site)] *= part
+    channels[:, row(site)] *= part
+    solve = FRAME.matrix().astype(float)
+    return (solve @ channels @ solve.T).astype(np.float32)
+
+
+def test_a_channel_without_eeg_is_told_though_it_is_not_flat():
+    """A tenth of the amplitude is a hundredth of the power; a third of it is a quiet site."""
+    made = evidence(covariance=quiet_channel("C3", 0.1))
+    found = one(losses(made))
+    assert named([found], made) == [("site", "flat", ("C3",))]
+    assert found.reason.startswith("carries no EEG")
+    assert losses(evidence(covariance=quiet_channel("C3", 0.35))) == []
+
+
+def test_slow_swings_of_both_frontal_poles_are_no_two_electrodes():
+    found = one(contacts(swaying("Fp1", "Fp2")))
+    assert (found.cause, found.sign) == ("patient", "drift")
+    assert "near the eyes" in found.reason
+    alone = one(contacts(swaying("Fp1")))
+    assert (alone.cause, alone.sign) == ("site", "drift")
+
+
+def test_a_step_of_the_reference_on_the_border_of_two_seconds_counts_once():
+    place = FRAME.sites.index("reference")
+    step = np.full((60, 20), 5.0)
+    step[[10, 11, 30, 31, 50, 51], place] = 200.0
+    made = evidence(
+        step=step, step_alone=np.full((60, 20), 20.0), step_crest=np.full((60, 20), 20.0),
+        step_stays=0.9,
+    )  # fmt: skip
+    found = one(popping(made))
+    assert found.reason.startswith("3 pops")

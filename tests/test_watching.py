@@ -7,6 +7,7 @@ import sys
 import threading
 import time
 from contextlib import contextmanager
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -121,7 +122,10 @@ def test_the_phases_and_times_of_a_stream_are_told(scripted, eeg):
         assert (watch.state().phase, watch.state().stream) == ("gathering", "amp")
         states = take(watch, inlet, pieces_of(eeg(8), 0))
         watch.step()  # nothing came
-        assert watch.state() == states[-1]
+        after = watch.state()
+        assert replace(after, silent=0.0) == replace(states[-1], silent=0.0)
+        assert 0 <= states[-1].silent < after.silent
+        assert after.setup_left == pytest.approx(122.0)
     assert not inlet.entered
     assert [state.phase for state in states] == ["gathering"] * 4 + ["watching"] * 4
     assert [state.seconds for state in states] == pytest.approx(np.arange(1.0, 9.0))
@@ -184,6 +188,50 @@ def test_a_loss_is_told_and_the_source_taken_back_with_new_impedances(
         assert watch.state().result.recording.duration == 46.0
 
 
+def test_a_source_that_pauses_is_told_as_silent_even_while_the_watch_is_stuck(
+    scripted, eeg, monkeypatch
+):
+    now = [50.0]
+    monkeypatch.setattr(watching.time, "monotonic", lambda: now[0])
+    inlet, watch = scripted()
+    with watch:
+        assert watch.state().silent == 0.0
+        now[0] = 54.0
+        assert watch.state().silent == 4.0  # nothing came yet
+        pieces = pieces_of(eeg(6), 0)
+        take(watch, inlet, pieces)
+        assert watch.state().silent == 0.0
+        now[0] = 66.5
+        take(watch, inlet, pieces[-1:])  # sent twice: nothing new
+        assert watch.state().silent == 12.5
+        take(watch, inlet, [Gone(1.0)])
+        assert watch.state().silent == 0.0  # and said in its own words
+
+
+def test_a_break_too_long_to_fill_is_counted_unless_it_is_an_outage(scripted, eeg):
+    inlet, watch = scripted()
+    with watch:
+        take(watch, inlet, pieces_of(eeg(6), 0))
+        (state, *_) = take(watch, inlet, pieces_of(eeg(2), 0, at=1010.0))
+        assert (state.breaks, state.outages, state.filled) == (1, 0, 0)
+        back = [Gone(1.0), Changed(facts_of()), *pieces_of(eeg(2), 0, at=1050.0)]
+        state = take(watch, inlet, back)[-1]
+        assert (state.breaks, state.outages) == (1, 1)
+        state = take(watch, inlet, pieces_of(eeg(1), 0, at=1080.0))[-1]
+        assert (state.breaks, state.outages) == (2, 1)
+
+
+@pytest.mark.parametrize(
+    ("given", "told"),
+    [({"P3": 4.0, "E9": 1.0}, False), ({"E9": 1.0}, True), ({}, False)],
+)
+def test_impedances_of_no_site_of_the_stream_are_told(scripted, given, told):
+    _, watch = scripted(impedances=given)
+    with watch:
+        notes = watch.state().notes
+    assert ["None of the impedances given (E9)" in note for note in notes] == [True] * told
+
+
 @pytest.mark.parametrize(
     ("facts", "words"),
     [
@@ -222,7 +270,8 @@ def test_a_layout_that_cannot_be_watched_is_told_and_the_next_one_waited_for(scr
         one = facts_of(("Cz",))
         take(watch, inlet, [Gone(1.0), Changed(one), *pieces_of(eeg(8)[:1], 0, at=9.0)])
         state = watch.state()
-        assert (state.phase, state.result, state.marked_now) == ("gathering", None, {})
+        assert (state.phase, state.result, state.marked_now) == ("refused", None, {})
+        assert (state.silent, state.setup_left) == (0.0, None)
         assert "came back with 1 channels, it had 19: At least 2 EEG" in state.notes[-1]
         take(watch, inlet, [Gone(2.0), Changed(facts_of()), *pieces_of(eeg(8), 0, at=50.0)])
         state = watch.state()
@@ -264,6 +313,8 @@ def test_a_watch_that_fails_again_and_again_stops_and_says_so(scripted, eeg, mon
         with pytest.raises(ZeroDivisionError):
             watch.run(threading.Event())
     assert isinstance(watch.failure, ZeroDivisionError)
+    assert (watch.state().phase, watch.state().silent) == ("stopped", 0.0)
+    assert watch.state().marked_now == {}
     assert sum("judging failed" in note for note in watch.state().notes) == 2
     assert watch.state().notes[-1] == (
         "The watch has stopped at 0:00:05 by a failure of its own (ZeroDivisionError); "

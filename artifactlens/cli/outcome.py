@@ -34,12 +34,16 @@ def attempt(
     except ArtifactlensError as error:
         return failure(path, error.problem, error.remedy)
     except Exception as error:
-        problem = f"An error that artifactlens does not know: {type(error).__name__}."
         remedy = (
             "Please report it with the format and size of the recording; run Python's "
             f"{call} to see where it happened."
         )
-        return failure(path, problem, remedy)
+        return failure(path, unknown(error), remedy)
+
+
+def unknown(error: Exception) -> str:
+    """What is said of an error that nobody thought of: its words may hold names."""
+    return f"An error that artifactlens does not know: {type(error).__name__}."
 
 
 def failure(path: Path, problem: str, remedy: str) -> Report:

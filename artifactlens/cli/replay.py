@@ -10,7 +10,7 @@ from pathlib import Path
 
 import click
 
-from artifactlens.cli.outcome import failure, print_failure
+from artifactlens.cli.outcome import failure, print_failure, unknown
 from artifactlens.cli.printing import echo, shown
 
 
@@ -78,6 +78,10 @@ def replay_command(
         echo(f"Ended by you at {span(sent)}.")
     except ArtifactlensError as error:
         print_failure(failure(path, error.problem, error.remedy))
+        raise SystemExit(1) from None
+    except Exception as error:
+        remedy = "Please report it with the format and size of the recording."
+        print_failure(failure(path, unknown(error), remedy))
         raise SystemExit(1) from None
     else:
         echo(f"Played {span(sent)}.")

@@ -118,13 +118,14 @@ def _success(path: Path, folder: Path, result: Result) -> Report:
 def print_advice(result: Result, report: Report) -> None:
     """The list in order of work, what to leave alone, the setup, and where the sheet lies."""
     from artifactlens.edf_records import listing
-    from artifactlens.page.sheet import setup_words, what_to_do, when
+    from artifactlens.page.sheet import high_impedances, setup_words, what_to_do, when
 
     print_head(result, report["recording"])
     for entry in result.advice:
-        stretch, state = when(entry, result.recording.duration)
-        over = "" if entry.state == "present" else f" ({stretch}, {state})"
-        doubt = " (low confidence)" if entry.confidence == "low" else ""
+        *times, state = when(entry, result.recording.duration)
+        told = ": ".join(filter(None, (state, " ".join(filter(None, times)))))
+        over = "" if entry.state == "present" else f" ({told})"
+        doubt = " (unsure)" if entry.confidence == "low" else ""
         echo(f"{entry.number}. {entry.line}{over}{doubt}", hang=3)
     if not result.advice:
         sentence, _ = what_to_do(result)
@@ -133,6 +134,9 @@ def print_advice(result: Result, report: Report) -> None:
         names = [row.site for row in result.sites if row.verdict == verdict]
         if names:
             detail(verdict, listing(names, NAMES_IN_LINE))
+    high = high_impedances(result.sites)
+    if high:
+        detail("impedance", f"above 10 kohm: {listing(high)}")
     if result.setup is not None:
         detail("setup", setup_words(result.setup))
         for response in result.setup.responses:

@@ -7,12 +7,12 @@ import threading
 from collections.abc import Callable, Iterable, Iterator
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, NoReturn, TextIO
+from typing import TYPE_CHECKING, NoReturn
 
 import click
 
 from artifactlens.cli.options import LINE_FREQUENCY
-from artifactlens.cli.outcome import print_failure
+from artifactlens.cli.outcome import print_failure, unknown
 from artifactlens.cli.printing import HANG, detail, echo, place, shown
 
 if TYPE_CHECKING:
@@ -63,7 +63,7 @@ SECONDS_TO_END = 5.0
 @LINE_FREQUENCY
 @click.option(
     "--impedances",
-    type=click.File("r", encoding="utf-8-sig"),
+    type=click.Path(path_type=Path),
     metavar="TABLE",
     help="Two columns, site and kilo-ohm; without it, those that the stream offers.",
 )
@@ -80,7 +80,7 @@ def watch_command(
     minutes: float,
     calibration: bool,
     line_frequency: float | None,
-    impedances: TextIO | None,
+    impedances: Path | None,
     port: int | None,
     no_page: bool,
 ) -> None:
@@ -101,6 +101,7 @@ def watch_command(
         return state
 
     try:
+        from artifactlens.impedances import read_table
         from artifactlens.live.watching import Watch
 
         watch = Watch(
@@ -109,7 +110,7 @@ def watch_command(
             minutes=minutes,
             calibration=calibration,
             line_frequency=line_frequency,
-            impedances=None if impedances is None else _values(impedances),
+            impedances=None if impedances is None else read_table(impedances),
         )
         with ExitStack() as stack:
             if not no_page:
@@ -126,8 +127,8 @@ def watch_command(
     except ArtifactlensError as error:
         _fail(stream, last, error.problem, error.remedy)
     except Exception as error:
-        problem = f"An error that artifactlens does not know: {type(error).__name__}."
-        _fail(stream, last, problem, "Start it again, and please report what was going on.")
+        remedy = "Start it again, and please report what was going on."
+        _fail(stream, last, unknown(error), remedy)
     print_last(last)
 
 
@@ -136,19 +137,6 @@ def _fail(stream: str | None, last: LiveState, problem: str, remedy: str) -> NoR
     name = "the stream" if stream is None else f"stream {stream}"
     print_failure({"recording": name, "problem": problem, "remedy": remedy})
     raise SystemExit(1)
-
-
-def _values(table: TextIO) -> dict[str, float]:
-    from artifactlens.errors import ImpedanceError
-    from artifactlens.impedances import parse_impedances
-
-    name = Path(table.name).name
-    try:
-        return parse_impedances(table.read(), name)
-    except UnicodeDecodeError:
-        raise ImpedanceError(
-            f"{name} is not text in UTF-8.", "Save it as plain text in UTF-8."
-        ) from None
 
 
 def follow(
@@ -224,9 +212,10 @@ def picture(state: LiveState) -> RenderableType:
         ]
     parts += [Text(shown(sentence), style="bold"), Text(shown(more))]
     numbered = [tuple(line.split(" ", 1)) for line in advice_lines(state)]
+    now = state.phase == "watching" and not state.old
     marked = "; ".join(f"{k} {names(s, 8)}" for k, s in state.marked_now.items() if s)
     details = [
-        ("marked now", marked or "no site"),
+        ("marked now", (marked or "no site") if now else ""),
         ("setup", setup_line(state)),
         ("stream", stream_words(state)),
         *(("note", note) for note in state.notes),
@@ -267,12 +256,13 @@ def _told(entry: Advice) -> str:
 class Log:
     """One line for each change, with the time of the stream, for a file or a pipe.
 
-    Reasons hold counts that go on rising; only a new entry, one that changes its state or
-    leaves the list, a request to the patient, a note and the phase are changes.
+    Reasons hold counts that go on rising, and whom muscle marks changes all the time; only
+    a new entry, one that changes its verdict or state or leaves the list, a request to the
+    patient, a note, the phase and silence are changes.
     """
 
     def __init__(self) -> None:
-        self._entries: dict[tuple[str, str, str], str] = {}
+        self._entries: dict[tuple[str, str], Advice] = {}
         self._told: tuple[str, ...] = ()
         self._phase = ""
         self._request = ""
@@ -284,38 +274,42 @@ class Log:
         from artifactlens.page.words import clock
 
         lines = [note for note in state.notes if note not in self._told]
-        if state.phase != self._phase:
-            if state.phase != "watching":
+        phase = "silent" if state.old else state.phase
+        if phase != self._phase:
+            if phase != "watching":
                 lines.append(what_to_do_now(state)[0])
-            elif self._phase == "lost":
-                lines.append("The source is back.")
+            elif self._phase in ("lost", "silent"):
+                back = "The source is back." if self._phase == "lost" else "It goes on."
+                lines.append(back)
         request = state.prompt.words if state.prompt else ""
         if request and request != self._request:
             lines.append(f"Say to the patient: {request}.")
         lines += self._changes(state)
-        self._told, self._phase, self._request = state.notes, state.phase, request
+        self._told, self._phase, self._request = state.notes, phase, request
         for line in lines:
             echo(f"{clock(state.seconds)} {line}", wrap=False)
 
     def _changes(self, state: LiveState) -> list[str]:
-        from artifactlens.page.live import what_to_do_now
+        from artifactlens.page.live import entry_keys, what_to_do_now
 
         if state.result is None:
             return []
-        entries = {(e.verdict, e.subject, e.sign): e for e in state.result.advice}
+        advice, before = state.result.advice, self._entries
+        keys = zip(entry_keys(advice), advice, strict=True)
+        entries = {(key, entry.verdict): entry for key, entry in keys}
         lines = [
             _told(entry)
             for key, entry in entries.items()
-            if self._entries.get(key) != entry.state
+            if key not in before or before[key].state != entry.state
         ]
         lines += [
-            f"{subject} {verdict}: no longer on the list"
-            for verdict, subject, sign in self._entries
-            if (verdict, subject, sign) not in entries
+            shown(f"{entry.subject} {entry.verdict}: no longer on the list")
+            for key, entry in before.items()
+            if key not in entries
         ]
         if not entries and (self._entries or not self._judged):
             lines.append(what_to_do_now(state)[0])
-        self._entries = {key: entry.state for key, entry in entries.items()}
+        self._entries = entries
         self._judged = True
         return lines
 

@@ -172,9 +172,12 @@ def _header(client: Client, recording: Recording, name: str) -> Info:
 def _source_id(recording: Recording) -> str:
     """The same for each replay of a recording, so that receivers find it again.
 
-    A digest, since the name of a file may be that of a person.
+    Made of what the stream tells anyway: the name of a file may be that of a person, whom
+    even a digest of it would give away to whoever tries names.
     """
-    digest = hashlib.sha256(recording.name.encode("utf-8", "surrogatepass")).hexdigest()
+    segments = [(s.start, s.n_samples, s.onset) for s in recording.segments]
+    layout = repr((recording.labels, recording.sampling_rate, segments))
+    digest = hashlib.sha256(layout.encode("utf-8", "surrogatepass")).hexdigest()
     return f"artifactlens-replay-{digest[:16]}"
 
 

@@ -8,7 +8,6 @@ import os
 import secrets
 import socket
 import threading
-import time
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Any, Self
 
@@ -74,36 +73,6 @@ def _same(given: str, wanted: str) -> bool:
     return secrets.compare_digest(given.encode(), wanted.encode())
 
 
-class News:
-    """What the page shows, made once per state, and how long nothing new has come.
-
-    While a stream is there its time goes on; where it stands still, what is shown is old,
-    though every answer is fresh.
-    """
-
-    def __init__(self, get_state: Callable[[], LiveState]) -> None:
-        self._get_state = get_state
-        self._lock = threading.Lock()
-        self._state: LiveState | None = None
-        self._fragments: dict[str, Any] = {}
-        self._moment: tuple[str, float] | None = None
-        self._came = 0.0
-
-    def json(self) -> str:
-        """The fragments of the state as of now, with ``age`` in seconds."""
-        state = self._get_state()
-        with self._lock:
-            if state is not self._state:
-                self._fragments = live_fragments(state)
-                self._state = state
-            if (state.phase, state.seconds) != self._moment:
-                self._moment = state.phase, state.seconds
-                self._came = time.monotonic()
-            flowing = state.phase in ("gathering", "watching")
-            age = time.monotonic() - self._came if flowing else 0.0
-            return json.dumps({**self._fragments, "age": round(age, 1)})
-
-
 def live_app(get_state: Callable[[], LiveState], door: Door) -> Flask:
     """The pages, behind the door: ``/``, its style and script, and ``/now``.
 
@@ -113,7 +82,6 @@ def live_app(get_state: Callable[[], LiveState], door: Door) -> Flask:
     from werkzeug.exceptions import HTTPException
 
     app = Flask("artifactlens.live", static_folder=None, template_folder=None)
-    news = News(get_state)
     page, style, script = live_page(), live_style(), live_script()
 
     def plain(words: str, status: int) -> Reply:
@@ -160,7 +128,8 @@ def live_app(get_state: Callable[[], LiveState], door: Door) -> Flask:
 
     @app.get("/now")
     def now() -> Reply:
-        return Response(news.json(), content_type="application/json")
+        state = live_fragments(get_state())
+        return Response(json.dumps(state), content_type="application/json")
 
     @app.errorhandler(Exception)
     def fail(error: Exception) -> Reply:

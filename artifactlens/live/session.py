@@ -148,6 +148,17 @@ class Session:
         """Time of the next sample, seconds from the first one of the stream."""
         return self._seconds.now
 
+    @property
+    def setup_left(self) -> float | None:
+        """Seconds until the setup check is closed; None once it is."""
+        return None if self._setup_done else max(self._until_settled(self.now), 0.0)
+
+    def _until_settled(self, moment: float) -> float:
+        """Seconds from then until the start is known for good, or about to be forgotten."""
+        enough = min(SETUP_SECONDS + STRETCH_SECONDS, self._look_back)
+        begun = float(self._rows.column("onset")[0]) if len(self._rows) else 0.0
+        return enough - (moment - begun)
+
     def tell_impedances(self, kohm: dict[str, float]) -> None:
         """Impedances, kilo-ohm by site or channel label, in place of those so far."""
         self._ohms = kohm
@@ -401,16 +412,16 @@ class Session:
         advice = advise(evidence, extra)
         if not self._setup_done:
             self._setup = setup_check(evidence)
-            # What the start was like is known for good, or is about to be forgotten.
-            span = self.seconds - float(evidence.log.onset[0])
-            enough = min(SETUP_SECONDS + STRETCH_SECONDS, self._look_back)
-            self._setup_done = span >= enough - 0.5
+            self._setup_done = self._until_settled(self.seconds) <= 0.5
         setup, assessable = self._setup, self._assessable(conditions)
         return Result(
             tool_version=__version__,
             model_name=self.model.name,
             model_sha256=self.model.sha256,
-            parameters={"mark": "sure", "line_frequency": f"{self._line or 'auto'}"},
+            parameters={
+                "mark": "sure",
+                "line_frequency": f"{self._line:g}" if self._line else "auto",
+            },
             recording=stream_facts(self.layout, self.frame, conditions, self.seconds),
             assessable=assessable,
             touched={},

@@ -78,6 +78,8 @@ class Assembler:
     ----------
     filled, discarded : int
         Samples so far.
+    breaks : int
+        Drop-outs too long to fill, and steps of the clock, so far.
     """
 
     def __init__(self, sampling_rate: float, n_channels: int) -> None:
@@ -89,6 +91,7 @@ class Assembler:
             )
         self.filled = 0
         self.discarded = 0
+        self.breaks = 0
         self._rate = sampling_rate
         self._n_channels = n_channels
         self._longest = LONGEST_FILL_SECONDS * sampling_rate
@@ -145,6 +148,7 @@ class Assembler:
             off = float(deviation[0])
             if not abs(off) <= self._longest:
                 self._finish(stretches, uv, parts)
+                self.breaks += self._count > 0
                 self._segment += 1
                 self._count = 0
                 self._next = float(times[done])

@@ -13,9 +13,10 @@ import numpy as np
 
 from artifactlens.curves import load_model
 from artifactlens.errors import ArtifactlensError
+from artifactlens.impedances import impedances_of
 from artifactlens.live.inlet import Assembler, Changed, Gone, Inlet, Samples
 from artifactlens.live.session import Session
-from artifactlens.live.state import NOTHING_YET, LiveState, Prompt
+from artifactlens.live.state import FLOWING, NOTHING_YET, LiveState, Prompt
 from artifactlens.page.words import clock
 from artifactlens.sitecare.biocal import respond, steps
 from artifactlens.sitecare.biocal_words import protocol_tasks
@@ -67,7 +68,7 @@ class Watch:
     ----------
     failure : Exception or None
         What :meth:`run` ended with, for whoever had it run in a thread. The state stands
-        still then, with a note.
+        still then, in the phase "stopped" and with a note.
     """
 
     _facts: StreamFacts
@@ -96,8 +97,9 @@ class Watch:
         self._failures: deque[float] = deque(maxlen=MOST_FAILURES)
         self._judged_seconds = 0.0  # of all sessions
         self._outages = 0
-        self._lost = False
-        self._heard = 0.0  # when samples came last, by time.monotonic
+        self._breaks = 0
+        self._lost = self._returned = False
+        self._heard = 0.0  # when the stream last went on, by time.monotonic
         self._wanted = calibration
         self._filled_before = 0
         self._now = 0.0
@@ -122,6 +124,7 @@ class Watch:
             self._inlet.__exit__(None, None, None)
             raise
         self._heard = time.monotonic()
+        self._check_impedances()
         self._show()
         return self
 
@@ -130,9 +133,15 @@ class Watch:
         self._inlet.__exit__(None, None, None)
 
     def state(self) -> LiveState:
-        """The state as of now; may be asked for from any thread."""
+        """The state as of now; may be asked for from any thread.
+
+        How long the stream is silent is told even while this watch is busy, or stuck.
+        """
         with self._lock:
-            return self._state
+            state = self._state
+        if state.phase not in FLOWING:
+            return state
+        return replace(state, silent=max(time.monotonic() - self._heard, 0.0))
 
     def run(self, stop: threading.Event) -> None:
         """Take in what comes until ``stop`` is set.
@@ -152,7 +161,16 @@ class Watch:
                 f"The watch has stopped at {clock(self._now)} by a failure of its own "
                 f"({type(error).__name__}); start it again."
             )
-            self._publish(replace(self.state(), prompt=None, notes=tuple(self._notes)))
+            self._publish(
+                replace(
+                    self.state(),
+                    phase="stopped",
+                    silent=0.0,
+                    marked_now={},
+                    prompt=None,
+                    notes=tuple(self._notes),
+                )
+            )
             raise
 
     def step(self) -> None:
@@ -186,11 +204,18 @@ class Watch:
 
     def _take_samples(self, samples: Samples) -> int:
         self._lost = False
-        self._heard = time.monotonic()
-        session = self._session
+        session, breaks = self._session, self._grid.breaks
         if session is None:
+            self._heard = time.monotonic()
             return 0
-        done = sum(session.add(stretch) for stretch in self._grid.add(samples))
+        stretches = self._grid.add(samples)
+        if stretches:  # what came twice, or without a time, is nothing new
+            self._heard = time.monotonic()
+            found = self._grid.breaks - breaks
+            if self._returned:  # the break that an outage leaves is told as the outage
+                found = max(found - 1, 0)
+            self._breaks, self._returned = self._breaks + found, False
+        done = sum(session.add(stretch) for stretch in stretches)
         self._now = session.now
         return done
 
@@ -217,9 +242,22 @@ class Watch:
         known = {label: float(kohm) for label, kohm in offered if np.isfinite(kohm)}
         return {**known, **self._impedances}
 
+    def _check_impedances(self) -> None:
+        """Say so if those given are all of another head box."""
+        session, given = self._session, self._impedances
+        if session is None or not given:
+            return
+        if not np.isfinite(impedances_of(session.frame, given)).any():
+            names = ", ".join(list(given)[:3]) + (", ..." if len(given) > 3 else "")
+            self._note(
+                f"None of the impedances given ({names}) is of a site of the stream: "
+                "name the sites as the stream does."
+            )
+
     def _come_back(self, facts: StreamFacts) -> None:
         self._lost = False
         session = self._session
+        self._returned = True
         if session is not None and facts.same_layout(self._facts):
             session.tell_impedances(self._known_impedances(facts))
             session.come_back(time.monotonic() - self._heard)
@@ -239,6 +277,7 @@ class Watch:
             self._note(f"The source came back {what}: {error.problem} {error.remedy}")
             return
         self._note(f"The source came back at {at} {what}; the watch began anew.")
+        self._check_impedances()
 
     def _forget(self, facts: StreamFacts) -> None:
         """What was known of the layout before says nothing of this one."""
@@ -279,7 +318,12 @@ class Watch:
             elif session.seconds:
                 result = before.result
             marked = {} if self._lost else session.marked_now()
-        phase = "lost" if self._lost else "watching" if result else "gathering"
+        if self._lost:
+            phase = "lost"
+        elif session is None:
+            phase = "refused"
+        else:
+            phase = "watching" if result else "gathering"
         filled = 0 if session is None else self._grid.filled
         self._publish(
             LiveState(
@@ -294,6 +338,8 @@ class Watch:
                 slowest=before.slowest,
                 prompt=prompt,
                 notes=tuple(self._notes),
+                breaks=self._breaks,
+                setup_left=None if session is None else session.setup_left,
             )
         )
 

@@ -30,6 +30,9 @@ HEAD_FROM, HEAD_TO = CENTRE[0] - RADIUS - 15, CENTRE[0] + RADIUS + 15
 """From ear to ear."""
 
 BELOW, MOST_BELOW = 303.0, 6
+ACCEPTABLE_KOHM = 10.0
+"""Impedance up to which a site is acceptable if all are even (common practice)."""
+
 NAMED, MEASURED = 17.0, 28.0
 """Room between sites from which untroubled ones keep their name, and all their impedance."""
 
@@ -50,6 +53,11 @@ class Mark:
     def verdict(self) -> str:
         """What the gravest of its entries asks for, else what is said of the site."""
         return self.entries[0].verdict if self.entries else self.site.verdict
+
+    @property
+    def judged(self) -> bool:
+        """Whether anything is known: a ground has no signal, only the others tell of it."""
+        return self.site.role != "ground" or bool(self.entries)
 
 
 def marks(result: Result) -> list[Mark]:
@@ -135,7 +143,7 @@ def care_svg(shown: Sequence[Mark], advice: Sequence[Advice]) -> Markup:
     size, _ = sizes(wide)
     left = min([HEAD_FROM, *(x - 1.5 * size for x, _ in at.values())])
     right = max([HEAD_TO, *(x + 1.5 * size for x, _ in at.values())])
-    lines = _lines(shown, at, advice)
+    lines = joins(shown, at, advice)
     # The quiet ones lie beneath, the first to be worked on lie on top.
     order = sorted(at, key=lambda index: -_urgency(shown[index]))
     # Among many sites the quiet ones shrink further, so that the others stand out.
@@ -173,6 +181,9 @@ def _urgency(mark: Mark) -> float:
 
 def _mark(mark: Mark, spot: Spot, size: float) -> Markup:
     (x, y), site = spot, mark.site
+    if not mark.judged:
+        told = f"{cut(site.site)}: not judged"
+        return tag("g", joined([tag("title", told), _earth(x, y - 4, 1.6)]))
     told = f"{cut(site.site)}: {mark.verdict}"
     if mark.entries:
         told += f", number {', '.join(str(entry.number) for entry in mark.entries)}"
@@ -181,15 +192,22 @@ def _mark(mark: Mark, spot: Spot, size: float) -> Markup:
     words = str(mark.entries[0].number) if mark.entries else ""
     parts = [tag("title", told), symbol(mark.verdict, x, y, size, words)]
     if site.role == "ground":
-        # The sign for earth on every plug and box: three bars that grow shorter.
-        at = f"{x + 1.5 * size:.2f} {y:.2f}"
-        d = f"M{at}h9m-2 2.6h-5m1.7 2.6h1.6M{x + 1.5 * size + 4.5:.2f} {y:.2f}v-7"
-        parts.append(tag("path", d=d, class_="earth"))
+        parts.append(_earth(x + 1.5 * size + 4.5, y, 1.0))
     numbers = " ".join(str(entry.number) for entry in mark.entries)
     return tag("g", joined(parts), data_verdict=mark.verdict, data_number=numbers or None)
 
 
-def _lines(
+def _earth(x: float, y: float, scale: float) -> Markup:
+    """The sign for earth on every plug and box: three bars that grow shorter."""
+    up, *bars = (scale * length for length in (7.0, 4.5, 2.5, 0.8))
+    d = f"M{x:.2f} {y:.2f}v{-up:.2f}" + "".join(
+        f"M{x - half:.2f} {y + 2.6 * scale * row:.2f}h{2 * half:.2f}"
+        for row, half in enumerate(bars)
+    )
+    return tag("path", d=d, class_="earth")
+
+
+def joins(
     shown: Sequence[Mark], at: dict[int, Spot], advice: Sequence[Advice]
 ) -> list[tuple[str, tuple[Spot, Spot]]]:
     """Which sites are joined: the sign, and both ends."""
@@ -241,9 +259,13 @@ def _names(
         if box is None:
             box = _free(places, taken) or min(places, key=lambda one: _shared(one, taken))
         taken.append(box)
+        high = ohms is not None and ohms > ACCEPTABLE_KOHM
         small = [
-            tag("tspan", words, class_=look, font_size=0.85 * letters)
-            for words, look in ((also, "also"), (told, "ohms"))
+            tag("tspan", words, class_=look, font_size=0.85 * letters, font_weight=weight)
+            for words, look, weight in (
+                (also, "also", None),
+                (told, *(("high", 700) if high else ("ohms", None))),
+            )
             if words
         ]
         names.append(

@@ -65,13 +65,12 @@ const show = (state) => {
 
 const judge = () => {
   const silent = performance.now() - heard > OLD;
-  const old = silent || Boolean(refused) || (now !== null && now.age > OLD / 1000);
-  document.body.classList.toggle("old", old);
-  if (!old && !now) return;
+  const cut = silent || Boolean(refused); // whatever the stream does, nothing is known of it
+  document.body.classList.toggle("old", cut || Boolean(now?.old));
+  if (!cut && !now) return;
   const last = now ? ` The last that was seen is of ${now.time}.` : "";
-  const words = refused || (silent ? "artifactlens does not answer." : "Nothing new from the stream.");
-  say("sentence", old ? words : now.sentence);
-  say("more", old ? `What stands below is old.${last}` : now.more);
+  say("sentence", cut ? refused || "artifactlens does not answer." : now.sentence);
+  say("more", cut ? `What stands below is old.${last}` : now.more);
   document.title = `${at("sentence").textContent} - artifactlens watch`;
 };
 

@@ -17,7 +17,7 @@ from artifactlens.page.ribbon import swatch, textures
 from artifactlens.page.sheet import setup_words, what_to_do
 from artifactlens.page.svg import joined, tag
 from artifactlens.page.template import part, template
-from artifactlens.page.words import clean, clock, cut, names, number
+from artifactlens.page.words import clean, clock, cut, names, number, span
 from artifactlens.result import CAUTION, Result
 
 if TYPE_CHECKING:
@@ -27,9 +27,6 @@ if TYPE_CHECKING:
 
 ROWS = 6
 """Entries told in full; each has a row of its own, so that nothing jumps."""
-
-SETUP_SECONDS = 120.0
-"""So long the setup check takes; meanwhile the page counts down."""
 
 MOST_NOTES = 2
 
@@ -56,22 +53,24 @@ def live_fragments(state: LiveState) -> dict[str, Any]:
     -------
     dict
         Ready for JSON. ``phase``, ``sentence``, ``more``, ``time`` and ``further`` are plain
-        text; ``prompt`` is None or holds ``words``, ``left`` and ``step`` as plain text;
-        ``parts`` holds markup by the name of its place on the page; ``rows`` the first
-        ``ROWS`` entries in order of number, each with ``key`` (the same as long as it is
-        about the same electrodes), ``name`` as plain text and ``html``.
+        text; ``old`` tells whether all below them is; ``prompt`` is None or holds ``words``,
+        ``left`` and ``step`` as plain text; ``parts`` holds markup by the name of its
+        place on the page; ``rows`` the first ``ROWS`` entries in order of number, each with
+        ``key`` (the same as long as it is about the same electrodes), ``name`` as plain
+        text and ``html``.
     """
     sentence, more = what_to_do_now(state)
     advice = sorted(state.result.advice if state.result else (), key=lambda e: e.number)
     return {
         "phase": state.phase,
+        "old": state.old,
         "time": clock(state.seconds),
         "sentence": clean(sentence),
         "more": clean(more),
         "prompt": _prompt(state),
         "rows": [
             {"key": key, "name": clean(entry.subject), "html": _row(entry, state.result)}
-            for key, entry in list(zip(_keys(advice), advice, strict=True))[:ROWS]
+            for key, entry in list(zip(entry_keys(advice), advice, strict=True))[:ROWS]
             if state.result
         ],
         "further": _further(advice[ROWS:]),
@@ -104,6 +103,23 @@ def what_to_do_now(state: LiveState) -> tuple[str, str]:
             "See to the amplifier, its LSL outlet and the network. "
             "The watch goes on by itself when the source is back.",
         )
+    if state.phase == "refused":
+        return (
+            "This stream cannot be watched.",
+            "A note tells why. The watch goes on by itself when the source is back with "
+            "channels that it can watch.",
+        )
+    if state.phase == "stopped":
+        return (
+            "The watch has stopped by a failure of its own.",
+            "What stands below is old. Start artifactlens watch again.",
+        )
+    if state.old:
+        return (
+            f"Nothing new from the stream for {_so_long(state.silent)}.",
+            "See to the amplifier and its LSL outlet. What stands below is old: the last "
+            f"that was seen is of {clock(state.seconds)}.",
+        )
     result = state.result
     if state.phase == "gathering" or result is None:
         return (
@@ -117,6 +133,12 @@ def what_to_do_now(state: LiveState) -> tuple[str, str]:
     if len(present) > 1 and any(entry.verdict != "ask" for entry in present):
         more = f"In all: {total} {more}"
     return _asked_for(min(present, key=lambda entry: entry.number)), more.strip()
+
+
+def _so_long(seconds: float) -> str:
+    """In steps, so that what is read aloud is not read every second."""
+    step = 1 if seconds < 10 else 10 if seconds < 120 else 60
+    return span(seconds // step * step)
 
 
 def _asked_for(entry: Advice) -> str:
@@ -155,27 +177,29 @@ def stream_words(state: LiveState) -> str:
         return "No stream yet."
     words = [f"Stream {cut(state.stream, 40)}" if state.stream else "Stream without a name"]
     words.append(f"{clock(state.seconds)} seen")
-    words.append(
-        f"{state.filled} samples of each channel missing"
-        if state.filled
-        else "none missing"
-    )
-    words.append(
-        f"source gone {state.outages} time{'' if state.outages == 1 else 's'}"
-        if state.outages
-        else "no outage"
-    )
+    losses = []
+    if state.filled:
+        losses.append(f"{state.filled} samples of each channel missing")
+    if state.breaks:
+        losses.append(f"{_count(state.breaks, 'break')} of more than 2 s")
+    if state.outages:
+        losses.append(f"source gone {_count(state.outages, 'time')}")
+    words += losses or ["none missing", "no outage"]
     if state.delay is not None:
         slowest = f", slowest {state.slowest:.2f} s" if state.slowest is not None else ""
-        words.append(f"judged {state.delay:.2f} s after each second{slowest}")
+        words.append(f"judged {state.delay:.2f} s after its samples came{slowest}")
     return ", ".join(words) + "."
+
+
+def _count(number: int, word: str) -> str:
+    return f"{number} {word}" + ("" if number == 1 else "s")
 
 
 def setup_line(state: LiveState) -> str:
     """How the sites began, and how long that is still being looked at."""
     words = []
-    if state.phase in ("gathering", "watching") and state.seconds < SETUP_SECONDS:
-        left = math.ceil(SETUP_SECONDS - state.seconds)
+    if state.phase in ("gathering", "watching") and state.setup_left is not None:
+        left = math.ceil(state.setup_left)
         words.append(f"Setup check: {left // 60}:{left % 60:02d} left.")
     setup = state.result.setup if state.result else None
     if setup is not None:
@@ -183,7 +207,7 @@ def setup_line(state: LiveState) -> str:
     return " ".join(words)
 
 
-def _keys(advice: Sequence[Advice]) -> list[str]:
+def entry_keys(advice: Sequence[Advice]) -> list[str]:
     """What an entry is about, while its reason and number go on changing.
 
     Whom muscle marks changes from second to second, hence not by site.
@@ -254,7 +278,7 @@ def _marked(state: LiveState) -> Markup:
         elif sites := state.marked_now.get(kind, ()):
             words, look = names(sites, 4), "some"
         else:
-            words, look = "no site" if state.result else "", "none"
+            words, look = "no site" if state.phase == "watching" else "", "none"
         lines.append(
             tag(
                 "li",

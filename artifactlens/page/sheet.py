@@ -9,12 +9,20 @@ from typing import TYPE_CHECKING, Any
 
 from markupsafe import Markup
 
-from artifactlens.advice import Advice
-from artifactlens.page.caremap import Mark, care_svg, concerned, marks, spots
+from artifactlens.advice import CAUSE_WORDS, Advice
+from artifactlens.page.caremap import (
+    ACCEPTABLE_KOHM,
+    Mark,
+    care_svg,
+    concerned,
+    joins,
+    marks,
+    spots,
+)
 from artifactlens.page.careshapes import LINES, SHAPES, line, symbol
 from artifactlens.page.svg import tag
 from artifactlens.page.template import part, template
-from artifactlens.page.words import clock, cut, names, number, span
+from artifactlens.page.words import clean, clock, cut, names, number, span
 from artifactlens.result import CAUTION, Result, Setup, SiteEvidence
 
 if TYPE_CHECKING:
@@ -26,12 +34,23 @@ IN_FULL = 12
 ROOMY = 6
 """Up to so many entries are set in larger letters."""
 
-LINES_OF_LIST, LETTERS_OF_LINE = 36, 42
-"""Lines of print that the list may fill, and characters that fit on one of them even in a
-wide typeface."""
+LINES_OF_LIST, LETTERS_OF_LINE, MOST_LINES = 36, 42, 5
+"""Lines of print that the list may fill, characters that fit on one of them even in a wide
+typeface, and the most lines of an entry."""
 
-GOOD_KOHM, ACCEPTABLE_KOHM = 5.0, 10.0
-"""Impedance that is good, and that is acceptable if even over the sites (common practice)."""
+ROOMY_LINES, ROOMY_LETTERS, ROOMY_MOST = 27, 33, 6
+"""The same in larger letters."""
+
+GOOD_KOHM = 5.0
+"""Impedance that is good (common practice)."""
+
+MOST_OF_IT = 0.9
+"""Part of the time from which it counts as all of it."""
+
+STATE_WORDS = {"present": "now", "past": "earlier, gone", "cured": "gone after handling"}
+
+NO_SITES = ("ground", "reference", CAUSE_WORDS["reference"])
+"""Names under which a setup may speak of what is no site."""
 
 ORDER_OF_CHECKS = (
     "cables",
@@ -67,19 +86,27 @@ def sheet_html(result: Result) -> str:
         n_sites=sum(s.role not in ("reference", "ground") for s in result.sites),
         sentence=sentence,
         more=more,
+        judged=judged_words(result),
         setup=None if result.setup is None else setup_words(result.setup),
-        responses=() if result.setup is None else result.setup.responses,
+        responses=[
+            # What was measured stands in the other files.
+            f"{cut(response.split(',')[0], 90).removesuffix('.')}."
+            for response in (result.setup.responses if result.setup else ())
+        ],
         care=care_svg(shown, advice),
-        legend=_legend(),
+        legend=_legend(shown, advice),
         doubled=next((m.entries[1].number for m in shown if len(m.entries) > 1), 0),
         elsewhere=_elsewhere(shown),
         untold=_grouped(shown, "cannot tell"),
         watched=_grouped(shown, "watch"),
         impedance=impedance_words(result.sites),
         order=", ".join(ORDER_OF_CHECKS),
-        entries=[_row(e, result, *_limits(e.reason, len(full))) for e in full],
-        rest=[_row(entry, result, 40, 24) for entry in rest],
-        blank=range(4 if not full else 2 if len(full) <= ROOMY else 0),
+        entries=[_row(entry, result, _fitted(entry, len(full))) for entry in full],
+        rest=[
+            _row(entry, result, (_whole_words(entry.reason, 40), entry.to_do[0], ""))
+            for entry in rest
+        ],
+        blank=range(_free_rows(len(full))),
         roomy=len(full) <= ROOMY,
         caution=CAUTION,
         style=Markup(part("sheet.css")),
@@ -89,19 +116,19 @@ def sheet_html(result: Result) -> str:
 def what_to_do(result: Result) -> tuple[str, str]:
     """The sheet in one plain sentence, and what has to be known beside it.
 
-    ``'3 sites to re-prep, ground to check first.'`` What was cured asks for nothing more;
+    ``'3 sites to re-prep, ground to check first.'`` What is over asks for nothing more;
     what cannot be judged is said, so that silence is not read as good news.
     """
     sites = [site for site in result.sites if site.role not in ("reference", "ground")]
     n_untold = sum(site.verdict == "cannot tell" for site in sites)
-    present = [entry for entry in result.advice if entry.state != "cured"]
-    n_cured = len(result.advice) - len(present)
+    present = [entry for entry in result.advice if entry.state == "present"]
+    n_over = len(result.advice) - len(present)
     if not present and sites and n_untold == len(sites):
         return "This recording cannot tell whether a site asks for care.", ""
     more = []
-    if n_cured:
-        verb = "fault was" if n_cured == 1 else "faults were"
-        more.append(f"{n_cured} {verb} cured during the recording.")
+    if n_over:
+        verb = "earlier fault is" if n_over == 1 else "earlier faults are"
+        more.append(f"{n_over} {verb} gone.")
     if n_untold:
         more.append(f"{n_untold} site{'' if n_untold == 1 else 's'} cannot be judged.")
     return _asked(present), " ".join(more)
@@ -138,7 +165,8 @@ def _counted(entries: Sequence[Advice]) -> str:
 
 def setup_words(setup: Setup) -> str:
     """How it began, as ``'First 2 min: 17 of 19 sites fit to start.'``."""
-    n_sites = len(setup.fit) + len(setup.unfit) + len(setup.cannot_tell)
+    told_of = (*setup.fit, *(site for site, _ in setup.unfit), *setup.cannot_tell)
+    n_sites = sum(site not in NO_SITES for site in told_of)
     words = (
         f"First {span(setup.seconds)}: {len(setup.fit)} of {n_sites} sites fit to start."
     )
@@ -160,11 +188,7 @@ def impedance_words(sites: Sequence[SiteEvidence]) -> str:
     reach = low if low == high else f"{low} to {high}"
     words = f"Small numbers, {reach} kΩ at {len(known)} electrode"
     words += "s" if len(known) > 1 else ""
-    above = [
-        f"{cut(site, 12)} {number(value)}"
-        for value, site in sorted(known, key=lambda pair: -pair[0])
-        if value > ACCEPTABLE_KOHM
-    ]
+    above = high_impedances(sites)
     words += f"; above {ACCEPTABLE_KOHM:g}: {_at_most(above, 3, ', ')}." if above else "."
     return (
         f"{words} 100 Ω to {GOOD_KOHM:g} kΩ is good, {GOOD_KOHM:g} to {ACCEPTABLE_KOHM:g} "
@@ -173,57 +197,125 @@ def impedance_words(sites: Sequence[SiteEvidence]) -> str:
     )
 
 
-def when(entry: Advice, duration: float) -> tuple[str, str]:
-    """From when to when, and how it stands at the end; a long list is shortened."""
+def high_impedances(sites: Sequence[SiteEvidence]) -> list[str]:
+    """Sites with more than is acceptable and their kilo-ohm, the highest first."""
+    known = [(s.impedance_kohm, s.site) for s in sites if s.impedance_kohm is not None]
+    return [
+        f"{cut(site, 12)} {number(value)}"
+        for value, site in sorted(known, key=lambda pair: -pair[0])
+        if value > ACCEPTABLE_KOHM
+    ]
+
+
+def judged_words(result: Result) -> str:
+    """How much was judged, empty if it was nearly all."""
+    seconds = max((site.seconds_judged for site in result.sites), default=0.0)
+    if seconds >= MOST_OF_IT * result.recording.duration:
+        return ""
+    for note in result.recording.notes:
+        if note.startswith("Judged: "):  # what artifactlens.last_minutes notes
+            return f"j{note[1:].removesuffix('.')}"
+    return f"{span(seconds)} of it judged"
+
+
+def when(entry: Advice, duration: float) -> tuple[str, str, str]:
+    """The stretch that matters, how many others there were, and how it stands at the end.
+
+    Of what goes on the last stretch is told, of what is over the longest.
+    """
+    state, going_on = STATE_WORDS[entry.state], entry.state == "present"
     if not entry.stretches:
-        return "", entry.state
-    start, end = entry.stretches[0]
-    more = len(entry.stretches) - 1
-    if not more and start < 1 and end > duration - 1:
-        return "throughout", ""
-    first = f"{clock(start)}–{clock(end)}"
-    return first, f"and {more} more, {entry.state}" if more else entry.state
+        return "", "", state
+    total = sum(end - start for start, end in entry.stretches)
+    if going_on and total >= MOST_OF_IT * duration:
+        return "throughout", "", ""
+    start, end = (
+        entry.stretches[-1]
+        if going_on
+        else max(entry.stretches, key=lambda stretch: stretch[1] - stretch[0])
+    )
+    others = len(entry.stretches) - 1
+    more = f"and {others} {'before' if going_on else 'more'}" if others else ""
+    if going_on and end > duration - 1:
+        return f"{clock(start)} to the end", more, state
+    return f"{clock(start)}–{clock(end)}", more, state
 
 
-def _row(entry: Advice, result: Result, why: int, check: int) -> dict[str, Any]:
+def _row(entry: Advice, result: Result, texts: tuple[str, str, str]) -> dict[str, Any]:
     rows = concerned(entry, result.sites)
-    known = [number(r.impedance_kohm) for r in rows if r.impedance_kohm is not None]
-    first, then = (*entry.checks[:1], "")[0], ", then ".join(entry.checks[1:])
-    left = check - len(first) - 6
+    known = [row.impedance_kohm for row in rows if row.impedance_kohm is not None]
+    ohms = [
+        tag("b", number(value)) if value > ACCEPTABLE_KOHM else Markup(number(value))
+        for value in known
+    ]
+    reason, first, then = texts
     return {
         "number": entry.number,
         "symbol": _picture(symbol(entry.verdict, 0, 0, 10, str(entry.number))),
         "subject": cut(entry.subject, 40),
         "verdict": entry.verdict,
         "confidence": entry.confidence,
-        "impedance": f"{', '.join(known)}\u00a0kΩ" if 0 < len(known) < 3 else "",
-        "reason": cut(entry.reason, why),
-        "check": cut(first, check),
-        "then": cut(then, left) if left >= min(len(then), 16) else "",
+        "impedance": Markup(", ").join(ohms) if len(ohms) < 3 else "",
+        "reason": reason,
+        "check": clean(first),
+        "then": clean(then),
         "when": when(entry, result.recording.duration),
-        "state": entry.state,
+        "state": STATE_WORDS[entry.state],
     }
 
 
-def _limits(reason: str, n_entries: int) -> tuple[int, int]:
-    """Characters for the reason and for the checks, so that the list keeps to its page."""
-    lines = min(5, LINES_OF_LIST // n_entries)
-    why = lines - lines // 2
-    used = min(why, math.ceil(len(reason) / LETTERS_OF_LINE))
+def _fitted(entry: Advice, n_entries: int) -> tuple[str, str, str]:
+    """The reason, what to do now and then what, so that the list keeps to its page.
+
+    What to do now is never cut, what comes then is left out rather than cut.
+    """
+    if n_entries <= ROOMY:
+        lines, letters = min(ROOMY_MOST, ROOMY_LINES // n_entries), ROOMY_LETTERS
+    else:
+        lines, letters = min(MOST_LINES, LINES_OF_LIST // n_entries), LETTERS_OF_LINE
+    first, then = entry.to_do
     # What to do is set in bold letters, which are wider.
-    return LETTERS_OF_LINE * why, LETTERS_OF_LINE * (lines - used) - 6
+    doing = math.ceil(1.1 * len(first) / letters)
+    reason = _whole_words(entry.reason, letters * max(1, lines - doing))
+    left = lines - math.ceil(len(reason) / letters)
+    fits = 1.1 * len(first) + len(f" then {then}") <= letters * left
+    return reason, first, then if fits else ""
 
 
-def _legend() -> list[tuple[Markup, str, str, str]]:
+def _whole_words(text: str, longest: int) -> str:
+    """The text, or so many of its first words, and an ellipsis."""
+    text = clean(text)
+    if len(text) <= longest:
+        return text
+    kept = text[:longest].rpartition(" ")[0] or text[: longest - 1]
+    return f"{kept.rstrip(' ,;:')}…"
+
+
+def _free_rows(n_entries: int) -> int:
+    """Ruled rows for what a person finds, as many as the page has room for."""
+    if n_entries > ROOMY:
+        return 0
+    return 4 if n_entries == 0 else 2 if n_entries < 5 else 1
+
+
+def _legend(
+    shown: Sequence[Mark], advice: Sequence[Advice]
+) -> list[tuple[Markup, str, str, str]]:
+    """The shapes and lines that occur here, and the one of nothing to do."""
+    verdicts = {"leave", *(entry.verdict for entry in advice)}
+    verdicts |= {mark.verdict for mark in shown if mark.judged}
+    signs = {sign for sign, _ in joins(shown, spots(shown), advice)}
     shapes = [
         (_picture(symbol(verdict, 0, 0, 10)), verdict, shape, meaning)
         for verdict, (shape, meaning) in SHAPES.items()
+        if verdict in verdicts
     ]
-    joins = [
+    lines = [
         (_picture(line(sign, (-20, 0), (20, 0), 8)), sign, shape, meaning)
         for sign, (shape, meaning) in LINES.items()
+        if sign in signs
     ]
-    return shapes + joins
+    return shapes + lines
 
 
 def _picture(inner: Markup) -> Markup:
@@ -233,7 +325,7 @@ def _picture(inner: Markup) -> Markup:
 def _elsewhere(shown: Sequence[Mark]) -> str:
     """Sites without a known place, those with a verdict first."""
     there = spots(shown)
-    absent = [mark for index, mark in enumerate(shown) if index not in there]
+    absent = [mark for i, mark in enumerate(shown) if i not in there and mark.judged]
     told = [
         f"{cut(mark.site.site, 12)} {mark.verdict}"
         for mark in sorted(absent, key=lambda mark: mark.verdict == "leave")

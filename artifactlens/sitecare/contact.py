@@ -1,4 +1,4 @@
-"""Poor contact: what a site shows that no other site does, slow drift, and loose leads."""
+"""Poor contact: what a site shows that no other site does, and slow drift."""
 
 from __future__ import annotations
 
@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from artifactlens.epochs import median_of_known
-from artifactlens.sitecare.evidence import FEWEST_ELSEWHERE, SMALL_CHAIN, Evidence, Finding
+from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -21,23 +21,16 @@ APART_SHARE = 0.6
 
 APART_WITH_EYES = 0.85
 EYE_SHARE = 0.2
-"""The same where eye movements are marked at the site in this part of the stretch: they reach
-the two frontal poles unequally, and the weights may come from times without them."""
+"""The same near the eyes where eye movements are marked at the site in this part of the
+stretch: they reach the two frontal poles unequally, and the weights may come from times
+without them."""
 
 APART_DB, PLAIN_DB = 9.0, 12.5
 """How far the unpredicted amplitude exceeds the median of all sites': to be named, to be
 acted upon. Single stretches of undisturbed recordings at hand reach 12 dB with such a share."""
 
 APART_UV, PLAIN_UV = 7.0, 12.0
-REFERENCE_DB, REFERENCE_PLAIN_DB = 8.0, 9.0
-"""How far the reference's row exceeds the median site."""
-
-REFERENCE_PLAIN_SITES = 8
-"""Fewer sites may all lie in one region, so that what they share comes from the head."""
-
-REFERENCE_BETA_DB, REFERENCE_BETA_PLAIN_DB = 4.5, 6.0
-"""The same of its power at 18-30 Hz, where the mean of all channels is quiet: at most 3 dB in
-the recordings at hand."""
+"""The same in microvolt rms."""
 
 PLAIN_SLOW_DB, BROAD_DB = 16.0, 3.0
 """Near the eyes, what does not reach into beta by so much must exceed the others by this."""
@@ -46,6 +39,7 @@ STEADY_STRETCHES = 3
 """Nobody is sent to the patient for what a site does for less."""
 
 DRIFT_ANYHOW_UV = 100.0
+"""A site that wanders by so much on its own is acted upon whatever the others do."""
 
 MUSCLE_SHARE = 0.4
 """A stretch with muscle at the site in this part of it does not count against the contact."""
@@ -58,14 +52,11 @@ DRIFT_UV = 25.0
 DRIFT_PLAIN_DB, DRIFT_PLAIN_UV = 18.0, 35.0
 """How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
 
-BARRED_SHARE = 0.2
+BARRED_SHARE = 0.1
 """A site that is strange in this part of the time must not predict others."""
 
 MANY_DRIFT = 4
 """So many sites that wander in one stretch have something in common."""
-
-SMALL_CHAIN_SHARE = 0.58
-"""Share of a short chain's power at one of its sites: two thirds if it alone is noisy."""
 
 
 def prediction_errors(
@@ -102,12 +93,17 @@ def prediction_errors(
     if most < 1:
         return np.full((n, n), np.nan)
     variance = np.einsum("bss->bs", matrix)
-    alive = np.where(variance > 0, variance, np.nan)
-    scaled = matrix / median_of_known(alive.T).astype(np.float64)[:, None, None]
-    known = np.isfinite(scaled)
-    typical = np.where(known, scaled, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1)
-    spread = np.sqrt(np.maximum(np.diag(typical), 1e-30))
-    alike = np.abs(typical / np.outer(spread, spread))
+    alive = np.sqrt(np.where(variance > 0, variance, np.nan))
+    # Correlations of each stretch, and the usual amplitude of each site: a fault of some
+    # stretches does not set the weights.
+    with np.errstate(divide="ignore", invalid="ignore"):
+        correlation = matrix / (alive[:, :, None] * alive[:, None])
+        relative = alive / median_of_known(alive.T).astype(np.float64)[:, None]
+    known = np.isfinite(correlation)
+    shared = np.where(known, correlation, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1)
+    spread = np.maximum(np.nan_to_num(median_of_known(relative).astype(np.float64)), 1e-15)
+    typical = shared * np.outer(spread, spread)
+    alike = np.abs(shared)
     may = together if barred is None else together & ~barred
     alike[~may] = -1.0
     np.fill_diagonal(alike, -2.0)
@@ -164,17 +160,12 @@ def unpredicted(covariance: NDArray[np.floating], weights: Array) -> tuple[Array
 
 
 def contacts(evidence: Evidence) -> list[Finding]:
-    """Sites whose trace no other site shares, slow drift told from noise; the reference."""
-    log = evidence.log
-    sites = np.flatnonzero(~evidence.references())
-    large = np.bincount(evidence.frame.chain)[evidence.frame.chain[sites]] >= SMALL_CHAIN
-    covariance = log.covariance[:, sites[:, None], sites]
-    found = _small_chains(evidence, sites[~large], sites[large])
-    if large.sum() >= 3:
-        chosen = sites[large]
-        block = covariance[:, large][:, :, large]
-        found += _apart(evidence, chosen, block)
-    return [*found, *_noisy_reference(evidence, sites)]
+    """Sites whose trace no other site of their chain shares, slow drift told from noise."""
+    scalp = np.flatnonzero(~evidence.references())
+    sites = scalp[evidence.company()[scalp] >= SMALL_CHAIN]
+    if len(sites) < 3:
+        return []
+    return _apart(evidence, sites, evidence.log.covariance[:, sites[:, None], sites])
 
 
 class _Look(NamedTuple):
@@ -231,9 +222,13 @@ def _apart(
     many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
     found = _sweat(sites, drifting, many, look.level)
     held &= ~(many & drifting)
+    swings = drifting & held & evidence.front()[sites]
+    if (swings.sum(axis=0) >= 2).sum() > 1:
+        found += _eyes_or_forehead(evidence, sites, swings, look.level)
+        held &= ~swings
     for index in np.flatnonzero(held.any(axis=0)):
         when = held[:, index]
-        drifts = bool(drifting[:, index].sum() > 0.5 * when.sum())
+        drifts = bool(drifting[when, index].sum() > 0.5 * when.sum())
         ratio, amplitude = (look.wander, look.level) if drifts else (look.above, look.size)
         decibel = float(np.median(ratio[when, index]))
         uv = float(np.median(amplitude[when, index]))
@@ -310,66 +305,35 @@ def _sweat(
     ]
 
 
+def _eyes_or_forehead(
+    evidence: Evidence, sites: NDArray[np.intp], swings: Bools, level: Array
+) -> list[Finding]:
+    """Slow swings at several sites near the eyes, though at different times."""
+    rows = np.argsort(-swings.sum(axis=0), kind="stable")
+    rows = rows[swings[:, rows].any(axis=0)]
+    when = np.asarray(swings.any(axis=1))
+    return [
+        Finding(
+            cause="patient",
+            sign="drift",
+            rows=tuple(int(sites[row]) for row in rows),
+            held=when,
+            known=np.ones(len(when), dtype=bool),
+            plain=True,
+            weight=float(when.mean()),
+            reason=(
+                f"slow swings of {np.median(level[swings]):.0f} uV near the eyes, consistent "
+                "with eye movements or a damp forehead"
+            ),
+        )
+    ]
+
+
 def _above_usual(size: Array) -> Array:
     """Amplitudes over the median site's of the stretch, decibel."""
     usual = median_of_known(size.T).astype(np.float64)[:, None]
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.asarray(20 * np.log10(size / usual))
-
-
-def _small_chains(
-    evidence: Evidence, sites: NDArray[np.intp], others: NDArray[np.intp]
-) -> list[Finding]:
-    """Noise in chains of three or four, such as Fz-Cz-Pz of a double banana.
-
-    In a frame of mean zero, noise of one electrode of three is there with two thirds, and
-    with one third at each of the other two: four fifths, nearly, of the power is its own.
-    Which of them it is stays a suspicion.
-    """
-    log, frame = evidence.log, evidence.frame
-    variance = np.einsum("bss->bs", log.covariance.astype(np.float64))
-    if len(others) < FEWEST_ELSEWHERE:
-        return []
-    usual = median_of_known(variance[:, others].T).astype(np.float64)
-    eyes = log.mean(evidence.marked("eye"))
-    muscle = log.mean(evidence.marked("muscle"))
-    found = []
-    for number in np.unique(frame.chain[sites]):
-        rows = sites[frame.chain[sites] == number]
-        if len(rows) < 3:
-            continue
-        part = variance[:, rows]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            share = part / part.sum(axis=1, keepdims=True)
-            above = 10 * np.log10(part / usual[:, None])
-        calm = (eyes[:, rows].max(axis=1) < EYE_SHARE) & (
-            muscle[:, rows].max(axis=1) < MUSCLE_SHARE
-        )
-        known = np.isfinite(share) & np.isfinite(above) & calm[:, None]
-        with np.errstate(invalid="ignore"):
-            held = known & (share >= SMALL_CHAIN_SHARE) & (above >= APART_DB)
-            held &= part >= PLAIN_UV**2
-        for index in np.flatnonzero(held.any(axis=0)):
-            when = held[:, index]
-            uv = float(np.median(np.sqrt(part[when, index])))
-            decibel = float(np.median(above[when, index]))
-            names = ", ".join(frame.sites[row] for row in rows)
-            found.append(
-                Finding(
-                    cause="site",
-                    sign="apart",
-                    rows=(int(rows[index]),),
-                    held=when,
-                    known=known[:, index],
-                    plain=decibel >= PLAIN_DB,
-                    weight=decibel * float(when.mean()),
-                    reason=(
-                        f"{uv:.0f} uV more than elsewhere in the chain {names}, most of it "
-                        "here; so short a chain cannot tell for sure which site it is"
-                    ),
-                )
-            )
-    return found
 
 
 def _level_size(evidence: Evidence, sites: NDArray[np.intp], weights: Array) -> Array:
@@ -382,49 +346,3 @@ def _level_size(evidence: Evidence, sites: NDArray[np.intp], weights: Array) -> 
     mean = log.mean(own.mean(axis=1))
     square = log.mean((own**2).mean(axis=1))
     return np.sqrt(np.maximum(square - mean**2, 0))
-
-
-def _noisy_reference(evidence: Evidence, sites: NDArray[np.intp]) -> list[Finding]:
-    """A reference whose own disturbance fills every channel alike."""
-    log, frame = evidence.log, evidence.frame
-    rows = np.flatnonzero(evidence.references())
-    variance = np.einsum("bss->bs", log.covariance.astype(np.float64))
-    beta, fast = log.mean(evidence.beta_power), log.mean(evidence.fast_uv())
-    muscle = log.mean(evidence.marked("muscle"))
-    found = []
-    for row in rows:
-        mates = sites[frame.chain[sites] == frame.chain[row]]
-        if len(mates) < 4:
-            continue
-        usual = median_of_known(variance[:, mates].T).astype(np.float64)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            above = 10 * np.log10(variance[:, row] / usual)
-        known = np.isfinite(above)
-        over = beta[:, row] - median_of_known(beta[:, mates].T).astype(np.float64)
-        loud = (muscle[:, row] < MUSCLE_SHARE) | (
-            variance[:, row] > (NOISE_OVER_FAST * fast[:, row]) ** 2
-        )
-        with np.errstate(invalid="ignore"):
-            held = known & ((above >= REFERENCE_DB) | (loud & (over >= REFERENCE_BETA_DB)))
-        if not held.any():
-            continue
-        beyond = float(median_of_known(over[held]))
-        decibel = float(np.median(above[held]))
-        uv = float(np.median(np.sqrt(variance[held, row])))
-        found.append(
-            Finding(
-                cause="reference",
-                sign="apart",
-                rows=(int(row),),
-                held=held,
-                known=known,
-                plain=(decibel >= REFERENCE_PLAIN_DB or beyond >= REFERENCE_BETA_PLAIN_DB)
-                and len(mates) >= REFERENCE_PLAIN_SITES,
-                weight=decibel * float(held.mean()),
-                reason=(
-                    f"{uv:.0f} uV in every channel alike, {10 ** (decibel / 20):.1f} times "
-                    "what the sites differ by"
-                ),
-            )
-        )
-    return found

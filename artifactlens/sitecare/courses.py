@@ -11,8 +11,10 @@ from artifactlens.sitecare.evidence import Evidence, Finding
 SETTLED_SECONDS = 20.0
 """What has been away for so long, to the end, is over."""
 
-COMES_BACK_SECONDS = 120.0
-"""What comes and goes is over only after this, or after four of its usual pauses."""
+COMES_BACK_SECONDS = 60.0
+LONGEST_WAIT_SECONDS = 600.0
+"""What comes and goes is over only after this, or after four of its usual pauses if they are
+longer, and at the latest after ten minutes."""
 
 HANDLED_SECONDS = 15.0
 """A fault that stops within this time of somebody's touch was put right by it."""
@@ -49,7 +51,7 @@ def state(evidence: Evidence, finding: Finding) -> str:
     if finding.lasting:
         over = away >= SETTLED_SECONDS
     else:
-        over = away >= max(SETTLED_SECONDS, min(_pause(finding, begin, end), 600.0))
+        over = away >= min(_pause(finding, begin, end), LONGEST_WAIT_SECONDS)
     if not over:
         return "present"
     return "cured" if _handled(evidence, finding, float(end[-1])) else "past"
@@ -91,6 +93,7 @@ def _handled(evidence: Evidence, finding: Finding, stopped: float) -> bool:
     usual = median_of_known(evidence.swing[:, rows])
     with np.errstate(invalid="ignore"):
         touched = (swing[:, rows] > HANDLED_UV) & (swing[:, rows] > HANDLED_RATIO * usual)
-    # A lead that was flat comes back by a hand as well.
-    lost = ~log.signs.ok[near][:, rows]
+    # A lead that was flat comes back by a hand as well; a hole in the stream is no hand.
+    elsewhere = log.signs.ok[near].any(axis=1, keepdims=True)
+    lost = ~log.signs.ok[near][:, rows] & elsewhere
     return bool(touched.any() or lost.any())

@@ -5,11 +5,17 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from artifactlens.epochs import median_of_known
+from artifactlens.sitecare.bridging import electrical_distance
 from artifactlens.sitecare.evidence import SMALL_CHAIN, Evidence, Finding
 
 LOST_SHARE = 0.3
 CLIPPED_SHARE = 0.1
 """Part of a stretch from which it counts."""
+
+EMPTY_SHARE = 0.04
+"""A channel with less than this share of the usual power is no recording of a head; sound ones
+had 0.1 or more in the recordings at hand."""
 
 ALL_AT_ONCE = 0.5
 """Where this share of the sites is lost together, it is not the sites."""
@@ -62,10 +68,48 @@ def losses(evidence: Evidence) -> list[Finding]:
                     rows=rows,
                     held=np.asarray(held[:, lost].any(axis=1)),
                     known=~together,
-                    plain=True,
+                    plain=bool(held[:, lost].any(axis=1).sum() >= min(2, len(log))),
                     weight=30.0 * part,
                     reason=reason,
                     one_of=one_of,
+                )
+            )
+    return [*found, *_without_eeg(evidence)]
+
+
+def _without_eeg(evidence: Evidence) -> list[Finding]:
+    """Sites whose channel holds next to nothing beside the others.
+
+    A dead input, or a lead that lies at the reference; told against a common reference only.
+    """
+    log, frame = evidence.log, evidence.frame
+    distance = electrical_distance(log.covariance)
+    found = []
+    for reference in np.flatnonzero(evidence.references()):
+        mates = np.flatnonzero(frame.chain == frame.chain[reference])
+        mates = mates[mates != reference]
+        if len(mates) < SMALL_CHAIN:
+            continue
+        own = distance[:, mates, reference]
+        usual = median_of_known(own.T).astype(np.float64)[:, None]
+        with np.errstate(invalid="ignore"):
+            held = own < EMPTY_SHARE * usual
+        for index in np.flatnonzero(held.sum(axis=0) >= min(2, len(log))):
+            when = held[:, index]
+            uv, other = (
+                np.sqrt(np.median(own[when, index])),
+                np.sqrt(np.median(usual[when])),
+            )
+            found.append(
+                Finding(
+                    cause="site",
+                    sign="flat",
+                    rows=(int(mates[index]),),
+                    held=when,
+                    known=np.isfinite(own[:, index]),
+                    plain=True,
+                    weight=30.0 * float(when.mean()),
+                    reason=f"carries no EEG: {uv:.1f} uV where the usual site has {other:.0f} uV",
                 )
             )
     return found

@@ -36,7 +36,7 @@ def patients(evidence: Evidence) -> list[Finding]:
                     known=np.ones(len(log), dtype=bool),
                     plain=True,
                     weight=share,
-                    reason=f"muscle {where} in {100 * share:.0f} of 100 seconds; {word}",
+                    reason=f"marked as muscle {where} in {100 * share:.0f} of 100 seconds, {word}",
                 )
             )
     eye = evidence.marked("eye", doubtful=False)
@@ -56,7 +56,7 @@ def patients(evidence: Evidence) -> list[Finding]:
                     known=np.ones(len(log), dtype=bool),
                     plain=True,
                     weight=share,
-                    reason=f"eye movements in {100 * share:.0f} of 100 seconds",
+                    reason=f"marked as eye movement in {100 * share:.0f} of 100 seconds",
                 )
             )
     return found

@@ -31,6 +31,7 @@ LEAST_STAYS = 0.3
 LOOSE_SECONDS = 3
 """Wild seconds from which a popping site is called a loose lead."""
 
+BORDER_SHARE = 0.25
 MUSCLE_NEAR_SECONDS = 1
 
 REFERENCE_STEP_UV, REFERENCE_STAYS = 30.0, 0.5
@@ -51,7 +52,13 @@ def popping(evidence: Evidence) -> list[Finding]:
     epochs, rows = _pop_cells(evidence)
     pops = np.zeros((len(log.onset), n))
     np.add.at(pops, (epochs, rows), 1)
-    pops[(pops == 0) & (_small_chain_pops(evidence) | _reference_pops(evidence))] = 1
+    steps = _small_chain_pops(evidence) | _reference_pops(evidence)
+    # A step on the border of two seconds is seen in both, in the same size.
+    size = np.nan_to_num(evidence.step.astype(np.float64))
+    alike = np.abs(np.diff(size, axis=0)) <= BORDER_SHARE * np.maximum(size[1:], size[:-1])
+    steps[1:] &= ~(alike & (steps[:-1] | (pops[:-1] > 0)))
+    steps[:-1] &= ~(alike & (pops[1:] > 0))
+    pops[(pops == 0) & steps] = 1
     wild = _wild(evidence)
     per_stretch = log.total(pops)
     wild_stretch = log.total(wild)

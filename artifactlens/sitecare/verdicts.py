@@ -23,6 +23,8 @@ from artifactlens.sitecare.losses import losses
 from artifactlens.sitecare.patients import patients
 from artifactlens.sitecare.placement import doubtful_places
 from artifactlens.sitecare.popping import popping
+from artifactlens.sitecare.reference_noise import noisy_references
+from artifactlens.sitecare.short_chains import short_chains
 
 LEAST_SHARE = 0.03
 """What held for less of the time, and is over, is not worth a line."""
@@ -36,7 +38,8 @@ SHORT_LOG = 4
 CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ("ground", "mains"): (
         "check the ground electrode and the cables",
-        "move or unplug devices and power cords near the patient",
+        "lead cables and power cords away from the patient and the leads",
+        "ask who is in charge before a device is moved or unplugged",
         "touch no other electrode before that",
     ),
     ("ground", "any"): (
@@ -46,7 +49,7 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ("reference", "any"): (
         "check the reference lead and its plug",
         "re-prep it, not the sites",
-        "then the ground",
+        "check the ground",
     ),
     ("bridge", "any"): (
         "clean between the sites and dry the skin",
@@ -56,25 +59,29 @@ CHECKS: dict[tuple[str, str], tuple[str, ...]] = {
     ("placement", "any"): (
         "check placement against the head",
         "check the labels at the head box",
-        "then the montage",
+        "check the montage",
     ),
     ("patient", "muscle"): (
-        "ask to let the jaw hang, relax the brow, rest the head",
-        "support neck and head",
+        "look at the patient; ask for a loose jaw, smooth brow, head at rest",
+        "a pillow under the neck",
+        "not while asleep or overbreathing",
     ),
     ("patient", "eye"): (
-        "ask to rest the eyes, closed if the protocol allows",
+        "look at the patient; ask to rest the eyes, closed if the protocol allows",
         "a folded cloth on the lids if local procedure has it",
     ),
-    ("patient", "drift"): ("cool the room, dry the skin", "ask to rest the head"),
+    ("patient", "drift"): (
+        "look at the eye leads and feel the forehead",
+        "cool the room, dry the skin",
+    ),
     ("site", "pops"): ("check the lead", "re-prep", "replace the electrode if it goes on"),
     ("site", "loose lead"): ("check lead and plug", "fix the electrode again, re-prep"),
     ("site", "apart"): ("check the lead", "re-prep", "measure the impedance"),
     ("site", "drift"): ("check for sweat and drying paste", "re-prep", "cool the room"),
     ("site", "mains"): (
         "check the lead and where it runs",
-        "re-prep",
-        "measure the impedance",
+        "measure the impedance, re-prep if high",
+        "lead it away from power cables",
     ),
     ("site", "flat"): ("check that the lead is plugged in", "replace the electrode"),
     ("site", "lost"): ("check the lead and the head box input", "replace the electrode"),
@@ -108,6 +115,8 @@ def findings_of(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> list[Fin
         *bridges(evidence),
         *popping(evidence),
         *contacts(evidence),
+        *short_chains(evidence),
+        *noisy_references(evidence),
         *patients(evidence),
     ]
     return _without_echoes(evidence, [*found, *_misplaced(evidence, found), *extra])
@@ -190,12 +199,19 @@ def _without_echoes(evidence: Evidence, found: list[Finding]) -> list[Finding]:
                 held=main.held | other.held,
                 known=main.known | other.known,
                 weight=main.weight + 0.5 * other.weight,
-                reason=f"{main.reason}; {other.reason}",
+                reason=_both_reasons(main, other),
                 lasting=main.lasting and other.lasting,
                 standing=main.standing or other.standing,
             )
         kept.append(main)
     return kept + rest
+
+
+def _both_reasons(main: Finding, other: Finding) -> str:
+    """The reasons of two findings of a site; what pops also wanders and stands apart."""
+    if main.sign in ("pops", "loose lead") and other.sign in ("apart", "drift"):
+        return main.reason
+    return f"{main.reason}; {other.reason}"
 
 
 def advise(evidence: Evidence, extra: tuple[Finding, ...] = ()) -> tuple[Advice, ...]:
