@@ -104,7 +104,7 @@ def test_the_sentence_is_about_the_first_entry_that_still_holds():
     sentence, more = what_to_do_now(state)
     assert sentence == "Re-prep P3. First check the lead."
     assert more.startswith("In all: P3 to re-prep, patient to ask.")
-    assert "1 fault was cured" in more
+    assert "1 earlier fault is gone" in more
 
 
 @pytest.mark.parametrize(

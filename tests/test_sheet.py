@@ -146,7 +146,7 @@ def test_the_sentence(changes, sentence):
 def test_what_was_cured_is_told_but_not_asked_for():
     result = with_entries({"verdict": "re-prep", "sites": ("P3",), "state": "cured"})
     assert what_to_do(result)[0] == "No site asks for care."
-    assert "1 fault was cured" in what_to_do(result)[1]
+    assert "1 earlier fault is gone" in what_to_do(result)[1]
 
 
 def test_a_recording_that_cannot_tell_is_no_good_news():

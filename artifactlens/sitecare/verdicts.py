@@ -26,8 +26,9 @@ from artifactlens.sitecare.popping import popping
 from artifactlens.sitecare.reference_noise import noisy_references
 from artifactlens.sitecare.short_chains import short_chains
 
-LEAST_SHARE = 0.03
-"""What held for less of the time, and is over, is not worth a line."""
+LEAST_SHARE, LEAST_DOUBTFUL_SHARE = 0.03, 0.15
+"""What held for less of the time, and is over, is not worth a line; the second if it was not
+plain."""
 
 LEAST_STRETCHES = 2
 """What lasts must hold for so many stretches before anybody is sent to the patient."""
@@ -239,7 +240,8 @@ def _entry(evidence: Evidence, finding: Finding) -> Advice | None:
     count = int(finding.held.sum())
     share = count / known
     state = courses.state(evidence, finding)
-    if share < LEAST_SHARE and state != "present":
+    worth = LEAST_SHARE if finding.plain else LEAST_DOUBTFUL_SHARE
+    if share < worth and state != "present":
         return None
     brief = finding.lasting and not finding.standing and count < min(LEAST_STRETCHES, known)
     if brief and known >= SHORT_LOG:
