@@ -17,6 +17,9 @@ EMPTY_SHARE = 0.04
 """A channel with less than this share of the usual power is no recording of a head; sound ones
 had 0.1 or more in the recordings at hand."""
 
+DENSE_NET_M = 0.022
+"""In a net as dense as this a site may lie beside the reference and have no potential."""
+
 ALL_AT_ONCE = 0.5
 """Where this share of the sites is lost together, it is not the sites."""
 
@@ -88,7 +91,7 @@ def _without_eeg(evidence: Evidence) -> list[Finding]:
     for reference in np.flatnonzero(evidence.references()):
         mates = np.flatnonzero(frame.chain == frame.chain[reference])
         mates = mates[mates != reference]
-        if len(mates) < SMALL_CHAIN:
+        if len(mates) < SMALL_CHAIN or _spacing(frame.positions[mates]) < DENSE_NET_M:
             continue
         own = distance[:, mates, reference]
         usual = median_of_known(own.T).astype(np.float64)[:, None]
@@ -113,6 +116,16 @@ def _without_eeg(evidence: Evidence) -> list[Finding]:
                 )
             )
     return found
+
+
+def _spacing(places: NDArray[np.float64]) -> float:
+    """Usual distance to the next site, metre; infinite where places are unknown."""
+    placed = places[np.isfinite(places).all(axis=1)]
+    if len(placed) < SMALL_CHAIN:
+        return float("inf")
+    apart = np.linalg.norm(placed[:, None] - placed[None], axis=2)
+    np.fill_diagonal(apart, np.inf)
+    return float(np.median(apart.min(axis=1)))
 
 
 def _suspects(
