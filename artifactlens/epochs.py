@@ -17,7 +17,7 @@ Bools = NDArray[np.bool_]
 
 BATCH_EPOCHS = 32
 
-SLOWEST_HZ = 25.0
+SLOWEST_HZ = 10.0
 """With fewer samples a second no kind and no electrode can be judged."""
 
 FLAT_UV = 0.2

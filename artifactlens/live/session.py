@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from artifactlens import __version__
 from artifactlens.assessable import assess
-from artifactlens.epochs import SLOWEST_HZ, EpochGrid, batches
+from artifactlens.epochs import EpochGrid, batches
 from artifactlens.errors import OptionError, SamplingRateError, StreamError
 from artifactlens.features import (
     FeatureTable,
@@ -64,6 +64,9 @@ STEADY_EPOCHS = 2
 
 CONTEXT_EPOCHS = 2
 
+SLOWEST_STREAM_HZ = 25.0
+"""Of fewer samples a second some features have nothing left to be measured on."""
+
 LEAST_MINUTES, MOST_MINUTES = 0.5, 24 * 60
 
 
@@ -107,9 +110,9 @@ class Session:
         line_frequency: float | None = None,
         impedances_kohm: dict[str, float] | None = None,
     ) -> None:
-        if not layout.sampling_rate >= SLOWEST_HZ:
+        if not layout.sampling_rate >= SLOWEST_STREAM_HZ:
             raise SamplingRateError(
-                f"A watch needs at least {SLOWEST_HZ:g} samples a second; the stream "
+                f"A watch needs at least {SLOWEST_STREAM_HZ:g} samples a second; the stream "
                 f"{layout.name!r} has {layout.sampling_rate:g}.",
                 "Name the stream of the scalp EEG itself.",
             )
