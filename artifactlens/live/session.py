@@ -65,8 +65,6 @@ STEADY_EPOCHS = 2
 CONTEXT_EPOCHS = 2
 
 SLOWEST_STREAM_HZ = 25.0
-"""Of fewer samples a second some features have nothing left to be measured on."""
-
 LEAST_MINUTES, MOST_MINUTES = 0.5, 24 * 60
 
 
