@@ -59,10 +59,9 @@ SHORTEST_PAUSE, LONGEST_PAUSE = 10, 20
 LINE_CERTAIN_DB = 6.0
 """Mains that stands out so far shows the frequency of the place, which does not change."""
 
-STEADY_EPOCHS = 2
-"""Epochs behind one that its median over five seconds looks at: so many are scored again."""
-
-CONTEXT_EPOCHS = 2
+STEADY_EPOCHS = CONTEXT_EPOCHS = 2
+"""Epochs that are scored again, for what follows counts in medians over five seconds; epochs
+that are measured along with a new one."""
 
 SLOWEST_STREAM_HZ = 25.0
 LEAST_MINUTES, MOST_MINUTES = 0.5, 24 * 60
