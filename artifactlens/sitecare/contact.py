@@ -35,6 +35,9 @@ APART_UV, PLAIN_UV = 7.0, 12.0
 PLAIN_SLOW_DB, BROAD_DB = 16.0, 3.0
 """Near the eyes, what does not reach into beta by so much must exceed the others by this."""
 
+PLAIN_FRONT_UV = 25.0
+"""... and must have this size: undisturbed frontal poles reach 22 uV in the recordings at hand."""
+
 STEADY_STRETCHES = 3
 """Nobody is sent to the patient for what a site does for less."""
 
@@ -49,8 +52,9 @@ NOISE_OVER_FAST = 2.2
 
 DRIFT_DB, DRIFT_WITH_EYES_DB = 14.0, 20.0
 DRIFT_UV = 25.0
-DRIFT_PLAIN_DB, DRIFT_PLAIN_UV = 18.0, 35.0
-"""How far a site's own half-second levels exceed the median site's; to be named, acted upon."""
+DRIFT_PLAIN_DB, DRIFT_PLAIN_UV = 20.0, 35.0
+"""How far a site's own half-second levels exceed the median site's; to be named, acted upon.
+Undisturbed sites of the recordings at hand reach 17.6 dB for half a minute."""
 
 BARRED_SHARE = 0.1
 """A site that is strange in this part of the time must not predict others."""
@@ -217,12 +221,13 @@ def _apart(
         # A faulty site lends its fault to those that it predicts: once more without it.
         look = _look(evidence, sites, covariance, barred)
     known, drifting = look.known, look.drifting
-    broad = ~evidence.front()[sites] | _is_broad(evidence, sites, look.noisy)
+    front = evidence.front()[sites]
+    broad = ~front | _is_broad(evidence, sites, look.noisy)
     held = look.noisy | drifting
     many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
     found = _sweat(sites, drifting, many, look.level)
     held &= ~(many & drifting)
-    swings = drifting & held & evidence.front()[sites]
+    swings = drifting & held & front
     if (swings.sum(axis=0) >= 2).sum() > 1:
         found += _eyes_or_forehead(evidence, sites, swings, look.level)
         held &= ~swings
@@ -235,7 +240,8 @@ def _apart(
         plain = _is_steady(when) and (
             (decibel >= DRIFT_PLAIN_DB and uv >= DRIFT_PLAIN_UV) or uv >= DRIFT_ANYHOW_UV
             if drifts
-            else decibel >= (PLAIN_DB if broad[index] else PLAIN_SLOW_DB) and uv >= PLAIN_UV
+            else decibel >= (PLAIN_DB if broad[index] else PLAIN_SLOW_DB)
+            and uv >= (PLAIN_FRONT_UV if front[index] else PLAIN_UV)
         )
         found.append(
             Finding(
