@@ -26,6 +26,7 @@ from artifactlens.flagging import (
     touched_seconds,
 )
 from artifactlens.frames import Frame, build_frame
+from artifactlens.impedances import impedances_of, read_impedances
 from artifactlens.kinds import KIND_NAMES
 from artifactlens.recording import Recording, from_raw, open_recording
 from artifactlens.result import RecordingFacts, Result, Scores, finite_or_none
@@ -320,7 +321,19 @@ def triage(
     measured = measure_recording(
         _as_recording(source), line_frequency=line_frequency, progress=progress
     )
-    return conclude(measured, model, mark=mark, line_frequency=line_frequency)
+    return conclude(
+        measured,
+        model,
+        mark=mark,
+        line_frequency=line_frequency,
+        impedances_kohm=_known_impedances(measured),
+    )
+
+
+def _known_impedances(measured: Measured) -> NDArray[np.float64] | None:
+    """Kilo-ohm of every site, by what the file or its BIDS folder states; None if nothing."""
+    values = read_impedances(measured.recording, None)
+    return impedances_of(measured.frame, values) if values else None
 
 
 def check_options(mark: str, line_frequency: float | None) -> None:
@@ -395,7 +408,13 @@ def triage_to_folder(
         measured = measure_recording(
             recording, line_frequency=line_frequency, progress=progress
         )
-        result = conclude(measured, model, mark=mark, line_frequency=line_frequency)
+        result = conclude(
+            measured,
+            model,
+            mark=mark,
+            line_frequency=line_frequency,
+            impedances_kohm=_known_impedances(measured),
+        )
         chosen = by_need(result.flags, result.recording.duration)[:CLOSEUPS]
         traces = closeups(recording, measured.frame, [flag for flag, _ in chosen])
         page = report_html(result, traces)

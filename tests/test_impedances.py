@@ -318,3 +318,21 @@ def test_every_site_gets_the_value_of_its_own_row(table):
     for site in DEMO_SITES:
         np.testing.assert_equal(found[site], table.get(site, np.nan))
     np.testing.assert_equal(found["reference"], table.get("Ref", np.nan))
+
+
+def test_triage_shows_what_lies_beside_a_recording_as_sites_does(tmp_path):
+    """A BIDS electrodes.tsv: 23 kilo-ohm at P3."""
+    import shutil
+
+    from artifactlens.demo import write_demo
+    from artifactlens.pipeline import triage
+
+    folder = tmp_path / "sub-01" / "eeg"
+    folder.mkdir(parents=True)
+    recording = folder / "sub-01_task-rest_eeg.edf"
+    shutil.copy(write_demo(tmp_path), recording)
+    table = "name\tx\ty\tz\timpedance\nP3\tn/a\tn/a\tn/a\t23\n"
+    (folder / "sub-01_electrodes.tsv").write_text(table, encoding="utf-8")
+    known = {row.site: row.impedance_kohm for row in triage(recording).sites}
+    assert known["P3"] == 23
+    assert known["P4"] is None
