@@ -225,11 +225,23 @@ def _apart(
     broad = ~front | _is_broad(evidence, sites, look.noisy)
     held = look.noisy | drifting
     many = held & (drifting.sum(axis=1, keepdims=True) >= MANY_DRIFT)
-    found = _sweat(sites, drifting, many, look.level)
-    held &= ~(many & drifting)
+    wet = many & drifting
+    found = []
+    if wet.any():
+        words = (
+            f"{wet.any(axis=0).sum()} sites wander at the same time, by "
+            f"{np.median(look.level[wet]):.0f} uV, consistent with sweat or movement"
+        )
+        found.append(_of_the_patient(sites, wet, words))
+    held &= ~wet
     swings = drifting & held & front
     if (swings.sum(axis=0) >= 2).sum() > 1:
-        found += _eyes_or_forehead(evidence, sites, swings, look.level)
+        # At different times, but near the eyes: a pair of electrodes is the less likely cause.
+        words = (
+            f"slow swings of {np.median(look.level[swings]):.0f} uV near the eyes, consistent "
+            "with eye movements or a damp forehead"
+        )
+        found.append(_of_the_patient(sites, swings, words))
         held &= ~swings
     for index in np.flatnonzero(held.any(axis=0)):
         when = held[:, index]
@@ -281,58 +293,21 @@ def _is_broad(evidence: Evidence, sites: NDArray[np.intp], noisy: Bools) -> Bool
     return np.nan_to_num(median_of_known(when), nan=-99.0) >= BROAD_DB
 
 
-def _sweat(
-    sites: NDArray[np.intp],
-    drifting: NDArray[np.bool_],
-    many: NDArray[np.bool_],
-    level: Array,
-) -> list[Finding]:
-    """Sites that wander at the same time: the skin or the patient, no electrode."""
-    wet = many & drifting
-    when = np.asarray(wet.any(axis=1))
-    if not when.any():
-        return []
-    rows = np.argsort(-wet.sum(axis=0), kind="stable")
-    rows = rows[wet[:, rows].any(axis=0)]
-    return [
-        Finding(
-            cause="patient",
-            sign="drift",
-            rows=tuple(int(sites[row]) for row in rows),
-            held=when,
-            known=np.ones(len(when), dtype=bool),
-            plain=True,
-            weight=float(when.mean()),
-            reason=(
-                f"{len(rows)} sites wander at the same time, by {np.median(level[wet]):.0f} uV, "
-                "consistent with sweat or movement"
-            ),
-        )
-    ]
-
-
-def _eyes_or_forehead(
-    evidence: Evidence, sites: NDArray[np.intp], swings: Bools, level: Array
-) -> list[Finding]:
-    """Slow swings at several sites near the eyes, though at different times."""
+def _of_the_patient(sites: NDArray[np.intp], swings: Bools, reason: str) -> Finding:
+    """Wandering (n_stretches, n_sites) that is laid to the skin or the eyes, no electrode."""
     rows = np.argsort(-swings.sum(axis=0), kind="stable")
     rows = rows[swings[:, rows].any(axis=0)]
     when = np.asarray(swings.any(axis=1))
-    return [
-        Finding(
-            cause="patient",
-            sign="drift",
-            rows=tuple(int(sites[row]) for row in rows),
-            held=when,
-            known=np.ones(len(when), dtype=bool),
-            plain=True,
-            weight=float(when.mean()),
-            reason=(
-                f"slow swings of {np.median(level[swings]):.0f} uV near the eyes, consistent "
-                "with eye movements or a damp forehead"
-            ),
-        )
-    ]
+    return Finding(
+        cause="patient",
+        sign="drift",
+        rows=tuple(int(sites[row]) for row in rows),
+        held=when,
+        known=np.ones(len(when), dtype=bool),
+        plain=True,
+        weight=float(when.mean()),
+        reason=reason,
+    )
 
 
 def _above_usual(size: Array) -> Array:

@@ -83,7 +83,10 @@ def signs_of(
     n, starts = batch.n_samples, batch.starts[1:-1]
     epochs = batch.windows(starts, n)
     half = n // LEVELS_PER_SECOND
-    halves = [epochs[:, :, k * half : (k + 1) * half].mean(axis=2) for k in range(2)]
+    halves = [
+        epochs[:, :, k * half : (k + 1) * half].mean(axis=2)
+        for k in range(LEVELS_PER_SECOND)
+    ]
     hum = np.zeros(ok.shape, dtype=np.complex64)
     if mains_is_carried(conditions):
         # Of the Hann window the line keeps half its height, hence 2 / (n / 2).

@@ -169,7 +169,6 @@ def _without_echoes(evidence: Evidence, found: list[Finding]) -> list[Finding]:
         "flat",
         "clipped",
         "loose lead",
-        "bridged",
         "pops",
         "drift",
         "apart",
